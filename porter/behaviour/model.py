@@ -1,0 +1,115 @@
+"""What a circuit really does: the rows of `derive`, as values."""
+
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+from typing import Literal
+
+from porter.findings import Finding
+
+Level = Literal["low", "high"]
+Settled = Literal["low", "high", "oscillates"]
+WindowKind = Literal["shortest-press", "re-arm-after-tap", "re-arm-after-hold", "stray-gap"]
+Verdict = Literal["sound", "typical-only", "faulty"]
+
+
+@dataclass(frozen=True, slots=True)
+class Band:
+    """A derived quantity over the corners; None = never (an infinite window)."""
+
+    nominal: float | None
+    least: float | None
+    most: float | None
+
+
+@dataclass(frozen=True, slots=True)
+class HeldRow:
+    """From a settled output, with `held` pressed together: the output once settled."""
+
+    held: tuple[str, ...]
+    start: Level
+    output: Settled
+    period_s: float | None
+
+
+@dataclass(frozen=True, slots=True)
+class PriorityRow:
+    """Two or more buttons held: the output and the button whose command wins (None: neither alone)."""
+
+    held: tuple[str, ...]
+    output: Settled
+    winner: str | None
+
+
+@dataclass(frozen=True, slots=True)
+class ReleaseRow:
+    """All of `held` pressed together, then released in `order`: the final output."""
+
+    held: tuple[str, ...]
+    order: tuple[str, ...]
+    output: Settled
+
+
+@dataclass(frozen=True, slots=True)
+class PowerOn:
+    """The output after the supply steps up; `output` is ``undetermined`` where nothing forces it."""
+
+    output: Literal["low", "high", "undetermined"]
+    why: str
+
+
+@dataclass(frozen=True, slots=True)
+class Window:
+    """A time window of a button; `start` is the output that the press in question would change.
+
+    `seconds`: over the part tolerances with typical timer figures.
+    `guaranteed`: the same with the family's published least and most figures as well.
+    `why`: formula and the parts it came from.
+    """
+
+    button: str
+    start: Level
+    window: WindowKind
+    seconds: Band
+    guaranteed: Band
+    why: str = ""
+
+
+@dataclass(frozen=True, slots=True)
+class Margin:
+    """How far a deciding voltage is from its threshold in a settled situation; negative = wrong side.
+
+    `volts` over the part tolerances, `guaranteed` with the family's published spread as well.
+    """
+
+    where: str
+    volts: Band
+    guaranteed: Band
+    why: str = ""
+
+
+@dataclass(frozen=True, slots=True)
+class NamedLevel:
+    """A voltage that a reader wants to see: idle level, thresholds, output levels."""
+
+    name: str
+    volts: Band
+
+
+@dataclass(frozen=True, slots=True)
+class Behaviour:
+    """Everything that `derive` found."""
+
+    circuit: str
+    buttons: tuple[str, ...]
+    verdict: Verdict
+    held: tuple[HeldRow, ...]
+    priority: tuple[PriorityRow, ...]
+    dominance: str  # "reset-dominant", "set-dominant" or "" where neither applies
+    releases: tuple[ReleaseRow, ...]
+    power_on: PowerOn
+    windows: tuple[Window, ...]
+    margins: tuple[Margin, ...]
+    levels: tuple[NamedLevel, ...]
+    findings: tuple[Finding, ...]
+    notes: tuple[str, ...] = ()  # e.g. how the corners were chosen
+    extra: Mapping[str, object] = field(default_factory=dict)
