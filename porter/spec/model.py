@@ -8,7 +8,7 @@ from collections.abc import Mapping
 from dataclasses import dataclass, field
 from typing import Literal
 
-from porter.findings import Position
+from porter.findings import Finding, Position
 
 PartKind = Literal["resistor", "capacitor", "led", "diode", "load"]
 Family = str
@@ -16,6 +16,23 @@ Hazard = Literal["stop", "interlock", "heater", "motion"]
 RAILS = ("vcc", "gnd")
 #: Order of the timer's pins wherever they are listed.
 PINS = ("trigger", "threshold", "reset", "output", "control", "discharge")
+
+#: The rows of the parity ledger, which ``accept`` may name.
+LEDGER_ROWS = (
+    "held-table",
+    "priority",
+    "release-order",
+    "power-on",
+    "shortest-press",
+    "re-arm-after-tap",
+    "re-arm-after-hold",
+    "stray-gap",
+    "output-chatter",
+    "supply-extremes",
+    "supply-loss",
+    "output-level",
+    "start-up-time",
+)
 
 
 @dataclass(frozen=True, slots=True)
@@ -172,6 +189,7 @@ class Circuit:
         source: the spec's text, for rendering findings and hashing.
         nodes: all node names but the rails, in order of first mention.
         positions: dotted path of a spec item (``parts.R1``, ``port.tick``) to its place.
+        warnings: what the reader found odd but usable, by position.
     """
 
     name: str
@@ -189,3 +207,4 @@ class Circuit:
     accept: tuple[Acceptance, ...]
     nodes: tuple[str, ...]
     positions: Mapping[str, Position] = field(default_factory=dict)
+    warnings: tuple[Finding, ...] = ()

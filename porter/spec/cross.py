@@ -1,0 +1,184 @@
+"""Checks between the sections of a spec: names that must exist, meet once, or agree."""
+
+from collections.abc import Callable, Iterator, Sequence
+from dataclasses import replace
+
+from porter.findings import Finding, Position
+from porter.spec.desk import Desk, did_you_mean
+from porter.spec.model import RAILS, Circuit, Intent
+
+#: Names that would collide with a column of the vectors' CSV.
+RESERVED = ("case", "tick", "purpose")
+
+
+def cross_check(
+    desk: Desk, draft: Circuit, in_order: Callable[[Sequence[Finding]], tuple[Finding, ...]]
+) -> Circuit:
+    """Return *draft* with its nodes, positions and warnings; what doesn't agree is noted at the desk."""
+    touches = list(_touches(desk, draft))
+    nodes = tuple(dict.fromkeys(name for name, _ in touches if name not in RAILS))
+    _names(desk, draft)
+    _targets(desk, draft, nodes)
+    _intents(desk, draft)
+    _ratios(desk, draft)
+    _lonely(desk, touches)
+    _alike(desk, touches)
+    warnings = in_order([f for f in desk.findings if f.severity == "warning"])
+    return replace(draft, nodes=nodes, positions=dict(desk.positions), warnings=warnings)
+
+
+def _touches(desk: Desk, draft: Circuit) -> Iterator[tuple[str, Position]]:
+    """Yield every mention of a node by a pin, part or button, with its place."""
+    for pin, node in draft.timer.pins.items():
+        yield node, draft.timer.pin_positions[pin]
+    sections = [("parts", p.name, p.nodes) for p in draft.parts]
+    sections += [("buttons", b.name, b.nodes) for b in draft.buttons]
+    for section, name, nodes in sections:
+        place = desk.positions.get(f"{section}.{name}.between", Position(desk.file, 1, 1))
+        for node in nodes:
+            if node:
+                yield node, place
+
+
+def _names(desk: Desk, draft: Circuit) -> None:
+    """Names of buttons, parts and outputs: each means one thing."""
+    parts = {p.name for p in draft.parts}
+    buttons = {b.name for b in draft.buttons}
+    for name in buttons & parts:
+        desk.error(
+            "name-repeated",
+            desk.positions[f"buttons.{name}"],
+            f"`{name}` is a part and a button",
+            "rename one of them",
+        )
+    for output in draft.outputs:
+        if output.name in buttons:
+            place = desk.positions.get(f"outputs.{output.name}", output.position)
+            desk.error(
+                "name-repeated", place, f"`{output.name}` is a button and an output", "rename one of them"
+            )
+    for section, names in (
+        ("buttons", [b.name for b in draft.buttons]),
+        ("outputs", [o.name for o in draft.outputs]),
+    ):
+        _column_names(desk, section, names)
+
+
+def _column_names(desk: Desk, section: str, names: Sequence[str]) -> None:
+    for n, name in enumerate(names):
+        place = desk.positions.get(f"{section}.{name}", Position(desk.file, 1, 1))
+        if name in RESERVED:
+            desk.error(
+                "name-unusable", place, f"`{name}` is a column of every vector file", "choose another name"
+            )
+        if name.lower() in [other.lower() for other in names[:n]]:
+            desk.error(
+                "name-repeated",
+                place,
+                f"`{name}` differs from another name by case only",
+                "generated code can't tell them apart: rename one",
+            )
+
+
+def _targets(desk: Desk, draft: Circuit, nodes: Sequence[str]) -> None:
+    """Outputs name an LED, or a node that something touches."""
+    lamps = [p.name for p in draft.parts if p.kind == "led"]
+    kinds = {p.name: p.kind for p in draft.parts}
+    for output in draft.outputs:
+        if output.target in ("", *nodes) and output.kind != "lit":
+            continue
+        if output.kind == "lit" and output.target not in ("", *lamps):
+            known = kinds.get(output.target)
+            message = (
+                f"`{output.target}` is a {known}, not an LED"
+                if known
+                else f"there is no LED `{output.target}`"
+            )
+            desk.error("name-unknown", output.position, message, did_you_mean(output.target, lamps))
+        elif output.kind != "lit":
+            message = (
+                f"`{output.target}` never changes"
+                if output.target in RAILS
+                else f"nothing is on a node `{output.target}`"
+            )
+            desk.error("name-unknown", output.position, message, did_you_mean(output.target, nodes))
+
+
+def _intents(desk: Desk, draft: Circuit) -> None:
+    """Intents name buttons, and no two contradict each other."""
+    known = [b.name for b in draft.buttons]
+    seen: dict[tuple[str, object], Intent] = {}
+    for line in draft.intent:
+        for name in line.buttons:
+            if name and name not in known:
+                desk.error(
+                    "name-unknown", line.position, f"there is no button `{name}`", did_you_mean(name, known)
+                )
+        key = (line.kind, frozenset(line.buttons) if line.kind == "held" else line.buttons)
+        first = seen.setdefault(key, line)
+        if first.output != line.output:
+            desk.error(
+                "intent-contradicts",
+                line.position,
+                f"line {first.position.line} wants the output {first.output} here",
+                "keep the one that is meant",
+            )
+        elif first is not line:
+            desk.warn(
+                "intent-repeated", line.position, f"the same as line {first.position.line}", "leave one out"
+            )
+    _power_on(desk, draft)
+
+
+def _power_on(desk: Desk, draft: Circuit) -> None:
+    wish = draft.port.power_on
+    for line in draft.intent:
+        if line.kind == "power_on" and wish not in (None, line.output):
+            desk.error(
+                "intent-contradicts",
+                line.position,
+                f"`port.power_on` wants the output {wish}",
+                "make the two agree",
+            )
+
+
+def _ratios(desk: Desk, draft: Circuit) -> None:
+    values = draft.timer.values
+    if "trigger_ratio" in values and "threshold_ratio" in values:
+        low, high = values["trigger_ratio"], values["threshold_ratio"]
+        if low.nominal >= high.nominal:
+            desk.error(
+                "ratios-crossed",
+                draft.timer.value_positions["trigger_ratio"],
+                f"the trigger ratio {low.nominal:.4g} isn't below the threshold ratio {high.nominal:.4g}",
+                "swap them, or check the data sheet",
+            )
+
+
+def _lonely(desk: Desk, touches: Sequence[tuple[str, Position]]) -> None:
+    names = [name for name, _ in touches]
+    for name, place in touches:
+        if name and name not in RAILS and names.count(name) == 1:
+            others = [n for n in dict.fromkeys(names) if n != name]
+            desk.warn(
+                "node-touched-once", place, f"only one thing is on node `{name}`", _lonely_mend(name, others)
+            )
+
+
+def _lonely_mend(name: str, others: Sequence[str]) -> str:
+    close = did_you_mean(name, others)
+    return close if close.startswith("did") else "wire something else to it, or leave it out"
+
+
+def _alike(desk: Desk, touches: Sequence[tuple[str, Position]]) -> None:
+    first: dict[str, str] = {}
+    for name, place in touches:
+        known = first.setdefault(name.lower(), name)
+        if known != name and known.lower() not in RAILS:
+            desk.warn(
+                "nodes-alike",
+                place,
+                f"nodes `{known}` and `{name}` differ by case only",
+                "use one spelling if one node is meant",
+            )
+            first[name.lower()] = name
