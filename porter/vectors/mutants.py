@@ -1,0 +1,206 @@
+"""Wrong ports on purpose, and whether a suite tells them from the right one."""
+
+from collections.abc import Iterator
+from dataclasses import dataclass, replace
+from typing import TypeVar
+
+import numpy as np
+
+from porter.port.model import U16, Charge, ChargeMode, Count, Move, Port, Test
+from porter.port.step import start
+from porter.vectors.drive import drive
+from porter.vectors.mealy import Ints, rows, successors
+from porter.vectors.model import Case, Suite
+
+T = TypeVar("T")
+
+#: Pairs of states that are looked at before equivalence is left undecided.
+MOST_PAIRS = 1 << 17
+
+#: Cases of fewer ticks are tried before the others.
+SHORT = 1 << 15
+
+
+@dataclass(frozen=True, slots=True)
+class Mutant:
+    """A wrong port and what is wrong with it."""
+
+    what: str
+    port: Port
+
+
+@dataclass(frozen=True, slots=True)
+class Score:
+    """What a suite did to the mutants; each entry says what was wrong with the mutant.
+
+    Args:
+        killed: a case fails.
+        survivors: no case fails, though some input sequence would tell.
+        equivalent: no input sequence tells: not a fault at all.
+        undecided: no case fails, and more state pairs than `MOST_PAIRS` left it open whether any would.
+    """
+
+    killed: tuple[str, ...]
+    survivors: tuple[str, ...]
+    equivalent: tuple[str, ...]
+    undecided: tuple[str, ...] = ()
+
+
+def score(port: Port, suite: Suite) -> Score:
+    """Run *suite* against every mutant of *port*; those that pass are compared with it state by state."""
+    sorted_: dict[str, list[str]] = {"killed": [], "survivors": [], "equivalent": [], "undecided": []}
+    for mutant in mutants(port):
+        sorted_["killed" if fails(mutant.port, suite) else _why_passed(port, mutant.port)].append(mutant.what)
+    return Score(**{key: tuple(value) for key, value in sorted_.items()})
+
+
+def fails(port: Port, suite: Suite) -> bool:
+    """True where *port* gives a wrong answer to some case of *suite*."""
+    # the short ones first: most wrong ports fail there, and one that oscillates makes long ones slow
+    short = [case for case in suite.cases if case.ticks < SHORT]
+    long = [case for case in suite.cases if case.ticks >= SHORT]
+    return any(_wrong(port, cases) for cases in (short, long) if cases)
+
+
+def _wrong(port: Port, cases: list[Case]) -> bool:
+    said, _ = drive(port, [case.held for case in cases])
+    return any(answer != case.expected for answer, case in zip(said, cases, strict=True))
+
+
+def _why_passed(right: Port, wrong: Port) -> str:
+    same = equivalent(right, wrong)
+    return "undecided" if same is None else "equivalent" if same else "survivors"
+
+
+def equivalent(a: Port, b: Port, most: int = MOST_PAIRS) -> bool | None:
+    """Tell whether two ports answer every input sequence alike, by walking the pairs of their states.
+
+    Returns:
+        None where *most* pairs were seen without an answer.
+    """
+    pairs = np.column_stack([rows(start(a)), rows(start(b))])
+    wide = rows(start(a)).shape[1]
+    seen = {pairs[0].tobytes()}
+    while len(pairs):
+        after_a, out_a = successors(a, pairs[:, :wide])
+        after_b, out_b = successors(b, pairs[:, wide:])
+        if (out_a != out_b).any():
+            return False
+        pairs = _fresh(np.concatenate([after_a, after_b], axis=2).reshape(-1, pairs.shape[1]), seen)
+        if len(seen) > most:
+            return None
+    return True
+
+
+def _fresh(pairs: Ints, seen: set[bytes]) -> Ints:
+    kept = []
+    for i, pair in enumerate(pairs):
+        key = pair.tobytes()
+        if key not in seen:
+            seen.add(key)
+            kept.append(i)
+    return pairs[kept]
+
+
+# --- the wrong ports ---
+
+
+def mutants(port: Port) -> Iterator[Mutant]:
+    """Yield wrong ports: each number one up and one down, each table entry and choice the other way.
+
+    Numbers stay in the range that the port's model allows; a change that leaves no valid port is not made.
+    """
+    yield Mutant("start_q flipped", replace(port, start_q=1 - port.start_q))
+    for q, held, bit in np.ndindex(2, port.held_count, len(port.outputs)):
+        answer = _put2(port.answer, q, _put(port.answer[q], held, port.answer[q][held] ^ 1 << bit))
+        yield Mutant(f"answer[{q}][{held}] bit {bit} flipped", replace(port, answer=answer))
+    parts = _of_charge(port.machine) if isinstance(port.machine, Charge) else _of_count(port.machine)
+    for what, machine in parts:
+        yield Mutant(what, replace(port, machine=machine))
+
+
+def _put2(values: tuple[T, T], place: int, value: T) -> tuple[T, T]:
+    return (values[0], value) if place else (value, values[1])
+
+
+def _put(values: tuple[T, ...], place: int, value: T) -> tuple[T, ...]:
+    return (*values[:place], value, *values[place + 1 :])
+
+
+def _nudged(values: tuple[int, ...], least: int, most: int) -> Iterator[tuple[str, tuple[int, ...]]]:
+    """Yield *values* with one of them one up or one down, staying within *least* to *most*."""
+    for i, value in enumerate(values):
+        for by in (-1, 1):
+            if least <= value + by <= most:
+                yield f"[{i}] {value}{by:+}", _put(values, i, value + by)
+
+
+def _of_count(machine: Count) -> Iterator[tuple[str, Count]]:
+    for q, down in np.ndindex(2, len(machine.live)):
+        table = _put2(machine.table, q, _put(machine.table[q], down, 1 - machine.table[q][down]))
+        yield f"table[{q}][{down}] flipped", replace(machine, table=table)
+    for what, press in _nudged(machine.press, 1, U16):
+        yield f"press{what}", replace(machine, press=press)
+    for what, release in _nudged(machine.release, 1, U16):
+        yield f"release{what}", replace(machine, release=release)
+    yield from _of_toggle(machine)
+
+
+def _of_toggle(machine: Count) -> Iterator[tuple[str, Count]]:
+    toggle = machine.toggle
+    if toggle is None:
+        return
+    for down, live in enumerate(machine.live):
+        yield f"live[{down}] flipped", replace(machine, live=_put(machine.live, down, not live))
+    for what, pair in _nudged(toggle.tap, 0, U16):
+        yield f"tap{what}", replace(machine, toggle=replace(toggle, tap=(pair[0], pair[1])))
+    for what, pair in _nudged(toggle.hold, 0, U16):
+        yield f"hold{what}", replace(machine, toggle=replace(toggle, hold=(pair[0], pair[1])))
+    for what, pair in _nudged(toggle.pace, 0, U16):
+        yield f"pace{what}", replace(machine, toggle=replace(toggle, pace=(pair[0], pair[1])))
+
+
+def _of_charge(machine: Charge) -> Iterator[tuple[str, Charge]]:
+    for what, first in _nudged(machine.start, 0, U16):
+        yield f"start{what}", replace(machine, start=first)
+    for q in range(2):
+        for held, mode in enumerate(machine.modes[q]):
+            for what, wrong in _of_mode(mode):
+                modes = _put2(machine.modes, q, _put(machine.modes[q], held, wrong))
+                yield f"modes[{q}][{held}].{what}", replace(machine, modes=modes)
+
+
+def _of_mode(mode: ChargeMode) -> Iterator[tuple[str, ChargeMode]]:
+    for i, test in enumerate(mode.flips):
+        yield f"flips[{i}] left out", replace(mode, flips=mode.flips[:i] + mode.flips[i + 1 :])
+        for what, wrong in _of_test(test):
+            yield f"flips[{i}].{what}", replace(mode, flips=_put(mode.flips, i, wrong))
+    for i, move in enumerate(mode.moves):
+        for what, moved in _of_move(move):
+            yield f"moves[{i}].{what}", replace(mode, moves=_put(mode.moves, i, moved))
+
+
+def _of_test(test: Test) -> Iterator[tuple[str, Test]]:
+    yield "ge flipped", replace(test, ge=not test.ge)
+    single = len(test.coeff) == 1
+    for what, limit in _nudged((test.limit,), 0 if single else -(1 << 31), U16 if single else (1 << 31) - 1):
+        yield f"limit{what}", replace(test, limit=limit[0])
+    for what, coeff in () if single else _nudged(test.coeff, -32767, 32767):
+        yield f"coeff{what}", replace(test, coeff=coeff)
+
+
+def _of_move(move: Move) -> Iterator[tuple[str, Move]]:
+    """Yield wrong moves: the numbers that the move's kind looks at, and standing still or jumping."""
+    if move.kind != "hold":
+        yield "stands still", Move("hold", move.end)
+        for what, end in _nudged((move.end,), 0, U16):
+            yield f"end{what}", replace(move, end=end[0])
+    if move.kind in ("shift", "multiply", "mix"):
+        yield "jumps", Move("jump", move.end)
+    if move.kind == "shift":
+        yield from ((f"shift{what}", replace(move, shift=n[0])) for what, n in _nudged((move.shift,), 0, 15))
+    if move.kind == "multiply":
+        yield from ((f"rate{what}", replace(move, rate=n[0])) for what, n in _nudged((move.rate,), 1, 65535))
+    if move.kind == "mix":
+        yield from ((f"keep{what}", replace(move, keep=n)) for what, n in _nudged(move.keep, -65536, 65536))
+        yield from ((f"ends{what}", replace(move, ends=n)) for what, n in _nudged(move.ends, 0, U16))
