@@ -34,10 +34,9 @@ def _touches(desk: Desk, draft: Circuit) -> Iterator[tuple[str, Position]]:
     sections = [("parts", p.name, p.nodes) for p in draft.parts]
     sections += [("buttons", b.name, b.nodes) for b in draft.buttons]
     for section, name, nodes in sections:
-        place = desk.positions.get(f"{section}.{name}.between", Position(desk.file, 1, 1))
-        for node in nodes:
+        for n, node in enumerate(nodes):
             if node:
-                yield node, place
+                yield node, desk.positions[f"{section}.{name}.between.{n}"]
 
 
 def _names(desk: Desk, draft: Circuit) -> None:
@@ -108,26 +107,30 @@ def _intents(desk: Desk, draft: Circuit) -> None:
     """Intents name buttons, and no two contradict each other."""
     known = [b.name for b in draft.buttons]
     seen: dict[tuple[str, object], Intent] = {}
-    for line in draft.intent:
-        for name in line.buttons:
-            if name and name not in known:
-                desk.error(
-                    "name-unknown", line.position, f"there is no button `{name}`", did_you_mean(name, known)
-                )
+    for n, line in enumerate(draft.intent):
+        if line.kind != "power_on" and not (line.buttons and all(line.buttons)):
+            continue
+        _known_buttons(desk, line, f"intent.{n}.{line.kind}", known)
         key = (line.kind, frozenset(line.buttons) if line.kind == "held" else line.buttons)
-        first = seen.setdefault(key, line)
-        if first.output != line.output:
-            desk.error(
-                "intent-contradicts",
-                line.position,
-                f"line {first.position.line} wants the output {first.output} here",
-                "keep the one that is meant",
-            )
-        elif first is not line:
-            desk.warn(
-                "intent-repeated", line.position, f"the same as line {first.position.line}", "leave one out"
-            )
+        _agree(desk, line, seen.setdefault(key, line))
     _power_on(desk, draft)
+
+
+def _known_buttons(desk: Desk, line: Intent, path: str, known: Sequence[str]) -> None:
+    for n, name in enumerate(line.buttons):
+        if name not in known:
+            where = desk.positions[f"{path}.{n}"]
+            desk.error("name-unknown", where, f"there is no button `{name}`", did_you_mean(name, known))
+
+
+def _agree(desk: Desk, line: Intent, first: Intent) -> None:
+    """Note a line of intent that says the contrary of, or the same as, the *first* of its kind."""
+    where, there = line.position, first.position.line
+    if first.output != line.output:
+        message = f"line {there} wants the output {first.output} here"
+        desk.error("intent-contradicts", where, message, "keep the one that is meant")
+    elif first is not line:
+        desk.warn("intent-repeated", where, f"the same as line {there}", "leave one out")
 
 
 def _power_on(desk: Desk, draft: Circuit) -> None:

@@ -5,18 +5,20 @@ one run finds everything; a spec with an error is never used further.
 """
 
 import re
-from collections.abc import Callable, Collection, Iterable, Sequence
+from collections.abc import Callable, Collection, Iterable, Mapping, Sequence
 from dataclasses import dataclass, field
 from difflib import get_close_matches
 
 from porter.findings import Finding, Position
 from porter.spec.model import Spread
 from porter.spec.tree import Entry, Node, Refused, Row, Scalar, Table
-from porter.spec.units import Kind, QuantityError, relative, spread, three
+from porter.spec.units import TOLERANCE, Kind, QuantityError, relative, spread, three
 
 NAME = re.compile(r"[A-Za-z_][A-Za-z0-9_]*")
 NODE = re.compile(r"[A-Za-z0-9_][A-Za-z0-9_+\-]*")
 MAX_NAME = 40
+MAX_VALUE = 80
+MAX_TEXT = 500
 
 _WHAT = {Scalar: "a single value", Row: "a list", Table: "a mapping"}
 
@@ -26,6 +28,12 @@ def near(word: str, known: Iterable[str]) -> str:
     by_lower = {k.lower(): k for k in known}
     found = get_close_matches(word.lower(), by_lower, n=1, cutoff=0.6)
     return by_lower[found[0]] if found else ""
+
+
+def short(word: str) -> str:
+    """Return *word* for a message, cut where it is far too long, on one line."""
+    flat = " ".join(word.split())
+    return flat if len(flat) <= MAX_NAME else flat[:MAX_NAME] + "…"
 
 
 def listing(words: Iterable[str]) -> str:
@@ -38,7 +46,7 @@ def did_you_mean(word: str, known: Collection[str]) -> str:
     """Return the mend for an unknown word."""
     if not known:
         return "there is nothing of the kind in this spec"
-    guess = near(word, known)
+    guess = near(word, known) if len(word) <= MAX_NAME else ""
     if guess:
         return f"did you mean `{guess}`?"
     return f"use {listing(known)}" if len(known) <= 12 else "check the spelling"
@@ -91,12 +99,12 @@ class Desk:
         return ()
 
     def fields(
-        self, node: Node, path: str, known: Collection[str], needed: Sequence[str], example: str
+        self, node: Node, path: str | None, known: Collection[str], needed: Sequence[str], example: str
     ) -> dict[str, Node]:
         """Return the values of a mapping with a fixed set of keys.
 
         Args:
-            node: the mapping; path: its dotted path, for `positions`.
+            node: the mapping; path: its dotted path, for `positions`; None = not kept.
             known: keys it may have; needed: keys it must have.
             example: what such a mapping looks like, for hints.
         """
@@ -104,7 +112,8 @@ class Desk:
         for name, entry in entries.items():
             if name not in known:
                 self._unknown_key(entry.key, known)
-            self.remember(f"{path}.{name}" if path else name, entry)
+            if path is not None:
+                self.remember(f"{path}.{name}" if path else name, entry)
         if isinstance(node, Table):
             for name in needed:
                 if name not in entries:
@@ -122,7 +131,10 @@ class Desk:
             )
             return
         self.error(
-            "key-unknown", key.position, f"`{key.text}` isn't a key here", did_you_mean(key.text, known)
+            "key-unknown",
+            key.position,
+            f"`{short(key.text)}` isn't a key here",
+            did_you_mean(key.text, known),
         )
 
     def remember(self, path: str, entry: Entry) -> None:
@@ -134,6 +146,14 @@ class Desk:
 
     def text(self, node: Node, wanted: str, example: str) -> str:
         """Return a text that isn't empty; an empty text where there is none."""
+        if isinstance(node, Scalar) and len(node.text) > MAX_TEXT:
+            self.error(
+                "text-too-long",
+                node.position,
+                f"{wanted} of {len(node.text)} characters",
+                f"shorten it to {MAX_TEXT} at most",
+            )
+            return ""
         if isinstance(node, Scalar) and node.text.strip() and not (node.plain and node.text in ("~", "null")):
             return node.text.strip()
         if isinstance(node, Scalar) and not node.plain:
@@ -153,7 +173,7 @@ class Desk:
         """Note a name that can't be used; True where it can."""
         if pattern.fullmatch(name) and len(name) <= MAX_NAME:
             return True
-        shown = name if len(name) <= MAX_NAME else name[:MAX_NAME] + "…"
+        shown = short(name)
         starts = "a letter or `_`" if pattern is NAME else "a letter or a digit"
         self.error(
             "name-unusable",
@@ -170,7 +190,10 @@ class Desk:
             return found
         if found:
             self.error(
-                "choice-unknown", node.position, f"`{found}` isn't {wanted}", did_you_mean(found, known)
+                "choice-unknown",
+                node.position,
+                f"`{short(found)}` isn't {wanted}",
+                did_you_mean(found, known),
             )
         return default
 
@@ -184,36 +207,43 @@ class Desk:
         """Return a value with its spread; 1 where it can't be read."""
         if isinstance(node, Table):
             return self._three(node, kind)
-        found = self.text(node, kind.noun, f"`{kind.example}`")
-        return self._guard(node.position, lambda: spread(found, kind)) if found else Spread.exact(1.0)
+        found = self.value(node, kind)
+        return self._guard({"": node.position}, lambda: spread(found, kind)) if found else Spread.exact(1.0)
 
     def _three(self, node: Table, kind: Kind) -> Spread:
         keys = ("nominal", "least", "most")
         example = "`{nominal: 3.33 V, least: 2.4 V, most: 4.2 V}`"
-        found = self.fields(node, "", keys, ("nominal",), example)
-        # a value's parts have no path of their own
-        for key in keys:
-            self.positions.pop(key, None)
-        texts = {key: self.text(value, kind.noun, f"`{kind.example}`") for key, value in found.items()}
+        found = self.fields(node, None, keys, ("nominal",), example)
+        texts = {key: self.value(value, kind) for key, value in found.items()}
         if "nominal" not in texts or not all(texts.values()):
             return Spread.exact(1.0)
-        for key, value in found.items():
-            before = len(self.findings)
-            self._guard(value.position, lambda key=key: three({"nominal": texts[key]}, kind))  # type: ignore[misc]
-            if len(self.findings) > before:
-                return Spread.exact(1.0)
-        return self._guard(node.position, lambda: three(texts, kind))
+        places = {"": node.position} | {key: value.position for key, value in found.items()}
+        return self._guard(places, lambda: three(texts, kind))
 
-    def _guard(self, where: Position, read: Callable[[], Spread]) -> Spread:
+    def value(self, node: Node, kind: Kind) -> str:
+        """Return the text of a value; an empty text where there is none, or far too much."""
+        found = self.text(node, kind.noun, f"`{kind.example}`")
+        if len(found) > MAX_VALUE:
+            self.error(
+                "text-too-long",
+                node.position,
+                f"{len(found)} characters can't be {kind.noun}",
+                f"write it like `{kind.example}`",
+            )
+            return ""
+        return found
+
+    def _guard(self, where: Mapping[str, Position], read: Callable[[], Spread]) -> Spread:
+        """Return what *read* returns; its complaint is noted at the part of the value that it is about."""
         try:
             return read()
         except QuantityError as error:
-            self.error(error.rule, where, error.message, error.mend)
+            self.error(error.rule, where[error.part], error.message, error.mend)
             return Spread.exact(1.0)
 
     def tolerance(self, node: Node) -> float:
         """Return a relative tolerance as a fraction."""
-        found = self.text(node, "a tolerance", "`±2%`")
+        found = self.value(node, TOLERANCE)
         if not found:
             return 0.0
-        return self._guard(node.position, lambda: Spread.exact(relative(found))).nominal
+        return self._guard({"": node.position}, lambda: Spread.exact(relative(found))).nominal

@@ -78,7 +78,8 @@ VALUE_KINDS: Final[Mapping[str, units.Kind]] = {
     "shortest_pulse": units.TIME,
 }
 
-#: A closed contact, a diode's slope and a factory RC clock (±10 %): common practice where a spec says nothing.
+#: A closed contact, a diode's slope and a factory RC clock (±10 %): common practice, taken where a
+#: spec says nothing.
 CONTACT: Final = Spread.exact(0.1)
 SLOPE: Final = Spread.exact(10.0)
 CLOCK: Final = 0.10
@@ -89,10 +90,37 @@ PORT_SUPPLY: Final = Spread.exact(5.0)
 
 #: Stems that would hide a header of C or a file of the job.
 _TAKEN_STEMS: Final = frozenset(
-    "assert complex ctype errno fenv float inttypes limits locale math setjmp signal stdarg stdbool stddef stdint "
-    "stdio stdlib string time main board machine utime micropython auto bool break case char const default do double "
-    "else enum extern for goto if inline int long register restrict return short signed sizeof static struct switch "
-    "typedef union unsigned void volatile while".split()
+    [
+        *("assert", "complex", "ctype", "errno", "fenv", "float", "inttypes", "limits", "locale", "math"),
+        *("setjmp", "signal", "stdarg", "stdbool", "stddef", "stdint", "stdio", "stdlib", "string", "time"),
+        *(
+            "auto",
+            "bool",
+            "case",
+            "char",
+            "const",
+            "default",
+            "do",
+            "double",
+            "enum",
+            "extern",
+            "goto",
+            "inline",
+        ),
+        *("int", "long", "register", "restrict", "short", "signed", "sizeof", "static", "struct", "switch"),
+        *(
+            "typedef",
+            "union",
+            "unsigned",
+            "void",
+            "volatile",
+            "board",
+            "main",
+            "machine",
+            "micropython",
+            "utime",
+        ),
+    ]
 )
 
 
@@ -176,15 +204,9 @@ def _spec_error(desk: Desk, text: str) -> SpecError:
 
 
 def _circuit(desk: Desk, root: Node, text: str) -> Circuit:
-    example = "a mapping that begins with `circuit: My latch`"
     if isinstance(root, Table):
         _second_timer(desk, root)
-    found = desk.fields(
-        root, "", TOP_KEYS, ("circuit", "supply", "timer", "parts", "buttons"), "the shipped specs"
-    )
-    if not isinstance(root, Table):
-        desk.findings[-1:] = []
-        desk.error("wrong-kind", root.position, "a spec is a mapping of keys to values", f"write {example}")
+    found = desk.fields(root, "", TOP_KEYS, ("circuit", "supply", "timer", "buttons"), "the shipped specs")
     title = desk.text(found["circuit"], "a title", "`My latch`") if "circuit" in found else ""
     supply = desk.quantity(found["supply"], units.SUPPLY) if "supply" in found else Spread.exact(5.0)
     timer = _timer(desk, found["timer"]) if "timer" in found else _no_timer(desk)
@@ -286,13 +308,14 @@ def _node_name(desk: Desk, node: Node) -> str:
     return name
 
 
-def _between(desk: Desk, found: Mapping[str, Node]) -> tuple[str, str]:
+def _between(desk: Desk, found: Mapping[str, Node], path: str) -> tuple[str, str]:
     """Return the two nodes of a part or button; empty names where they can't be read."""
     if "between" not in found:
         return "", ""
     node = found["between"]
     items = desk.row(node, "a list of two nodes", "`[vcc, out]`")
     names = [_node_name(desk, item) for item in items]
+    desk.positions.update({f"{path}.between.{n}": item.position for n, item in enumerate(items)})
     if isinstance(node, Row) and len(items) != 2:
         desk.error(
             "between-not-two", node.position, f"{len(items)} nodes where two are needed", "write `[vcc, out]`"
@@ -341,7 +364,7 @@ def _part(desk: Desk, name: str, node: Node, where: Position) -> Part:
     found = desk.fields(
         node, f"parts.{name}", (*(kinds or PART_KINDS), "between", *extras), ("between",), example
     )
-    nodes = _between(desk, found)
+    nodes = _between(desk, found, f"parts.{name}")
     if len(kinds) != 1:
         _part_kind(desk, node, kinds, where)
         return Part(name, "resistor", nodes, Spread.exact(1.0), None, None, None, False, "", where)
@@ -435,7 +458,7 @@ def _button(desk: Desk, name: str, node: Node, where: Position) -> Button:
     )
     return Button(
         name=name,
-        nodes=_between(desk, found),
+        nodes=_between(desk, found, f"buttons.{name}"),
         normally=cast(Literal["open", "closed"], normally),
         resistance=desk.quantity(found["resistance"], units.RESISTANCE) if "resistance" in found else CONTACT,
         leak=desk.quantity(found["leak"], units.RESISTANCE) if "leak" in found else None,
@@ -486,7 +509,7 @@ def _output(desk: Desk, name: str, entry: Entry) -> Output:
                 "write `{lit: D1}`, `{high: out}` or `{low: out}`",
             )
         return Output(name, "high", "", hazard, entry.key.position)
-    form = cast(Literal["lit", "high", "low"], forms[0])
+    form = forms[0]
     value = found[form]
     target = desk.name(value, "a part's name") if form == "lit" else _node_name(desk, value)
     return Output(name, form, target, hazard, value.position)
@@ -494,10 +517,8 @@ def _output(desk: Desk, name: str, entry: Entry) -> Output:
 
 def _intents(desk: Desk, node: Node) -> tuple[Intent, ...]:
     items = desk.row(node, "a list", "`- {held: [SET], output: high}`")
-    desk_items = _few(desk, items, "lines of intent")
-    return tuple(
-        i for n, item in enumerate(desk_items) if (i := _intent(desk, item, f"intent.{n}")) is not None
-    )
+    few = _few(desk, items, "lines of intent")
+    return tuple(_intent(desk, item, f"intent.{n}") for n, item in enumerate(few))
 
 
 def _few(desk: Desk, items: Sequence[Node], noun: str) -> Sequence[Node]:
@@ -511,7 +532,7 @@ def _few(desk: Desk, items: Sequence[Node], noun: str) -> Sequence[Node]:
     return items[:MAX_LINES]
 
 
-def _intent(desk: Desk, node: Node, path: str) -> Intent | None:
+def _intent(desk: Desk, node: Node, path: str) -> Intent:
     example = "`{held: [SET], output: high}`"
     found = desk.fields(node, path, INTENT_KEYS, (), example)
     forms = [form for form in ("held", "release", "power_on") if form in found]
@@ -523,19 +544,20 @@ def _intent(desk: Desk, node: Node, path: str) -> Intent | None:
                 "a line of intent says one thing and the output it leads to",
                 f"write {example}, `{{release: [A, B], output: low}}` or `{{power_on: low}}`",
             )
-        return None
-    form = cast(Literal["held", "release", "power_on"], forms[0])
+        return Intent("held", (), "low", node.position)
+    form = forms[0]
     level_node = found["power_on" if form == "power_on" else "output"]
     level = cast(Literal["low", "high"], desk.choice(level_node, "an output level", LEVELS, "low"))
-    names = () if form == "power_on" else _held(desk, found[form])
+    names = () if form == "power_on" else _held(desk, found[form], f"{path}.{form}")
     return Intent(form, names, level, node.position)
 
 
-def _held(desk: Desk, node: Node) -> tuple[str, ...]:
+def _held(desk: Desk, node: Node, path: str) -> tuple[str, ...]:
     items = desk.row(node, "a list of buttons", "`[SET]`")
     if isinstance(node, Row) and not items:
         desk.error("value-missing", node.position, "no button is named", "name one at least: `[SET]`")
     names = [desk.name(item, "a button's name") for item in items]
+    desk.positions.update({f"{path}.{n}": item.position for n, item in enumerate(items)})
     for n, (name, item) in enumerate(zip(names, items, strict=True)):
         if name and name in names[:n]:
             desk.error(

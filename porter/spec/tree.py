@@ -6,8 +6,10 @@ Anchors, aliases and tags are refused: a spec says each thing once, in plain sig
 """
 
 import re
+import unicodedata
 from collections.abc import Iterator, Mapping
 from dataclasses import dataclass
+from typing import Any
 
 import yaml
 
@@ -16,6 +18,8 @@ from porter.findings import Finding, Position, SpecError
 MAX_BYTES = 256 * 1024
 MAX_DEPTH = 12  # the deepest path of a spec is five levels
 
+#: Characters that make a terminal or an editor show a text in another order than it is written.
+_OVERRIDES = "\u202a\u202b\u202c\u202d\u202e\u2066\u2067\u2068\u2069"
 _LINE_BREAK = re.compile("\r\n|[\n\r\x85\u2028\u2029]")
 
 
@@ -75,10 +79,10 @@ class _Loader(yaml.SafeLoader):
         self.depth = 0
         self.refused: list[tuple[str, yaml.Event]] = []
 
-    def compose_node(self, parent: yaml.Node | None, index: object) -> yaml.Node | None:
-        event = self.peek_event()
+    def compose_node(self, parent: yaml.Node | None, index: int) -> yaml.Node | None:
+        event: Any = self.peek_event()  # type: ignore[no-untyped-call]
         if isinstance(event, yaml.AliasEvent):
-            self.get_event()
+            self.get_event()  # type: ignore[no-untyped-call]
             return self._refuse("alias-refused", event)
         if event.anchor is not None:
             self._refuse("alias-refused", event)
@@ -89,13 +93,19 @@ class _Loader(yaml.SafeLoader):
         if self.depth == MAX_DEPTH:
             raise _TooDeep(None, None, "nested too deep", event.start_mark)
         self.depth += 1
-        node: yaml.Node | None = super().compose_node(parent, index)  # type: ignore[no-untyped-call]
+        node: yaml.Node | None = super().compose_node(parent, index)
         self.depth -= 1
         return node
 
     def _refuse(self, rule: str, event: yaml.Event) -> yaml.Node:
         self.refused.append((rule, event))
-        return yaml.ScalarNode("!refused", "", event.start_mark, event.end_mark)
+        return yaml.ScalarNode("!refused", "", _py(event.start_mark), _py(event.end_mark))
+
+
+def _py(mark: object) -> yaml.Mark:
+    """Return a mark of the pure Python loader, the only one used here (for the type checker)."""
+    assert isinstance(mark, yaml.Mark)
+    return mark
 
 
 class _TooDeep(yaml.MarkedYAMLError):
@@ -139,10 +149,21 @@ class Tree:
         if isinstance(raw, yaml.ScalarNode):
             if raw.tag == "!refused":
                 return Refused(place)
+            self._printable(raw.value, place)
             return Scalar(raw.value, raw.style is None, place)
         if isinstance(raw, yaml.SequenceNode):
             return Row(tuple(self.node(item) for item in raw.value), place)
         return self.table(raw, place)
+
+    def _printable(self, text: str, place: Position) -> None:
+        """Note control characters and direction overrides, which quoted escapes can smuggle in.
+
+        They would reach terminals and the comments of generated code.
+        """
+        for character in text:
+            if _hostile(character):
+                self.error("control-character", place, _unprintable(ord(character)), "delete it")
+                return
 
     def table(self, raw: yaml.Node, place: Position) -> Table:
         """Return a mapping node; repeated and unusable keys become findings."""
@@ -174,17 +195,17 @@ class Tree:
         self.error(
             "key-repeated",
             key.position,
-            f"`{key.text}` was given before, on line {where.line}",
+            f"`{key.text[:40]}` was given before, on line {where.line}",
             "keep one of the two",
         )
 
 
 def _compose(loader: _Loader) -> yaml.Node | None:
-    if not loader.check_node():  # type: ignore[no-untyped-call]
+    if not loader.check_node():
         return None
-    root: yaml.Node | None = loader.get_node()  # type: ignore[no-untyped-call]
-    if loader.check_node():  # type: ignore[no-untyped-call]
-        raise _SecondDocument(None, None, "second document", loader.peek_event().start_mark)
+    root: yaml.Node | None = loader.get_node()
+    if loader.check_node():
+        raise _SecondDocument(None, None, "second document", _py(loader.peek_event().start_mark))  # type: ignore[no-untyped-call]
     return root
 
 
@@ -222,6 +243,16 @@ def _mark_position(file: str, mark: yaml.Mark | None) -> Position:
 def _first_unprintable(text: str, index: int, file: str) -> Position:
     before = split_lines(text[:index])
     return Position(file, len(before), len(before[-1]) + 1)
+
+
+def _hostile(character: str) -> bool:
+    if character in "\n\t":
+        return False
+    return character in _OVERRIDES or unicodedata.category(character) in ("Cc", "Cs")
+
+
+def _unprintable(character: int) -> str:
+    return f"character U+{character:04X} can't stand in a spec"
 
 
 def _fail(finding: Finding, source: str, before: list[Finding]) -> SpecError:
@@ -263,8 +294,8 @@ def load(text: str, file: str) -> tuple[Node | None, list[Finding]]:
     except yaml.reader.ReaderError as error:
         place = _first_unprintable(text, error.position, file)
         character = ord(error.character) if isinstance(error.character, str) else error.character
-        message = f"character U+{character:04X} can't stand in a spec"
-        raise _fail(Finding("control-character", "error", place, message, "delete it"), text, []) from None
+        finding = Finding("control-character", "error", place, _unprintable(character), "delete it")
+        raise _fail(finding, text, []) from None
     tree = Tree(file, text)
     try:
         root = _compose(loader)
@@ -274,8 +305,18 @@ def load(text: str, file: str) -> tuple[Node | None, list[Finding]]:
         raise _fail(
             Finding(rule, "error", place, message, mend), text, list(_refusals(loader, tree))
         ) from None
+    except (ValueError, OverflowError):  # an escape such as "\UFFFFFFFF", a version with 5000 digits
+        place = _mark_position(file, _py(loader.get_mark()))
+        finding = Finding(
+            "yaml-syntax",
+            "error",
+            place,
+            "not YAML: a number here is out of range",
+            "check the escapes in quoted texts",
+        )
+        raise _fail(finding, text, list(_refusals(loader, tree))) from None
     finally:
-        loader.dispose()  # type: ignore[no-untyped-call]
+        loader.dispose()
     tree.findings.extend(_refusals(loader, tree))
     return (None if root is None else tree.node(root)), tree.findings
 
@@ -288,6 +329,6 @@ def _refusals(loader: _Loader, tree: Tree) -> Iterator[Finding]:
 
 def _refused_span(tree: Tree, event: yaml.Event) -> Position:
     """Return the place of the anchor, alias or tag itself, not of the value after it."""
-    start = tree.span(event.start_mark, event.end_mark)
+    start = tree.span(_py(event.start_mark), _py(event.end_mark))
     word = tree.lines[start.line - 1][start.column - 1 :].split(maxsplit=1)
     return Position(start.file, start.line, start.column, max(1, len(word[0].rstrip(",]}")) if word else 1))

@@ -1,8 +1,9 @@
 """Values as people write them to `Spread`.
 
-``4k7``, ``0.1 µF``, ``10 kΩ ±5%``, ``100n +80% -20%``, ``3.3 V ±0.2 V``, ``2/3``.  Source of the letter codes:
-IEC 60062 (a letter in place of the point; trailing tolerance letters).  Decimal texts are
-converted with a decimal exponent, so that two ways to write a value give the same float.
+``4k7``, ``0.1 µF``, ``10 kΩ ±5%``, ``100n +80% -20%``, ``3.3 V ±0.2 V``, ``2/3``.
+Source of the letter codes: IEC 60062 (a letter in place of the point; trailing tolerance
+letters).  Decimal texts are converted with a decimal exponent, so that two ways to write a
+value give the same float.
 """
 
 import math
@@ -23,6 +24,7 @@ class QuantityError(ValueError):
     def __init__(self, rule: str, message: str, mend: str) -> None:
         super().__init__(message)
         self.rule, self.message, self.mend = rule, message, mend
+        self.part = ""  # of the three, the one that is meant
 
 
 @dataclass(frozen=True, slots=True)
@@ -108,7 +110,7 @@ _LETTERED: Final = {
 
 def normalise(text: str) -> str:
     """Return *text* with one code point for each sign that has several (micro, ohm, minus, spaces)."""
-    table = {
+    table: dict[str, str | int | None] = {
         "µ": "u",
         "μ": "u",
         "\u2126": "Ω",
@@ -343,15 +345,23 @@ def spread(text: str, kind: Kind) -> Spread:
     return _spread(nominal, minus, plus, text)
 
 
+def _one_of_three(key: str, text: str, kind: Kind) -> float:
+    try:
+        value = number(normalise(text), kind)
+        _check_range(value, text, kind)
+    except QuantityError as error:
+        error.part = key
+        raise
+    return value
+
+
 def three(texts: Mapping[str, str], kind: Kind) -> Spread:
     """Return the value of ``{nominal: …, least: …, most: …}``; a missing end is the nominal.
 
     Raises:
         QuantityError: as `spread`, and ``tolerance-unusable`` where the three aren't in order.
     """
-    values = {key: number(normalise(text), kind) for key, text in texts.items()}
-    for key, text in texts.items():
-        _check_range(values[key], text, kind)
+    values = {key: _one_of_three(key, text, kind) for key, text in texts.items()}
     nominal = values["nominal"]
     least, most = values.get("least", nominal), values.get("most", nominal)
     if not least <= nominal <= most:
