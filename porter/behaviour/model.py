@@ -7,7 +7,8 @@ from typing import Literal
 from porter.findings import Finding
 
 Level = Literal["low", "high"]
-Settled = Literal["low", "high", "oscillates"]
+#: ``keeps``: whichever it was before.
+Settled = Literal["low", "high", "oscillates", "keeps"]
 WindowKind = Literal["shortest-press", "re-arm-after-tap", "re-arm-after-hold", "stray-gap"]
 Verdict = Literal["sound", "typical-only", "faulty"]
 

@@ -205,7 +205,7 @@ class Engine:
             watcher(rows, mode, z0, lanes.clock_s[rows].copy(), t)
         z = z0 + pull * self._span(rate, pull, t)
         lanes.x[rows] = _times(mode.S[unit], z)
-        lanes.clock_s[rows] += t
+        lanes.clock_s[rows] += np.where(np.isfinite(t), t, 0.0)  # "for ever" has no date
         left[rows[hit]] -= when[hit]
         left[rows[~hit]] = 0.0
         lanes.crossed[rows] = np.where(hit, guard, -1)

@@ -1,0 +1,252 @@
+"""From a circuit to what it really does."""
+
+import dataclasses
+from collections.abc import Iterator, Sequence
+from itertools import combinations, permutations
+
+import numpy as np
+
+from porter.behaviour.corner import Population, population
+from porter.behaviour.explain import margin_why, window_why
+from porter.behaviour.measure import OSCILLATES, Measures, measure, works
+from porter.behaviour.model import (
+    Band,
+    Behaviour,
+    HeldRow,
+    Level,
+    Margin,
+    NamedLevel,
+    PowerOn,
+    PriorityRow,
+    ReleaseRow,
+    Settled,
+    Verdict,
+    Window,
+)
+from porter.behaviour.rules import Evidence, find
+from porter.circuit.engine import Engine
+from porter.circuit.values import Floats, columns
+from porter.findings import Finding
+from porter.spec.model import Circuit
+
+_LEVELS: tuple[Level, Level] = ("low", "high")
+_OUTPUTS: tuple[Settled, ...] = ("low", "high", "oscillates")
+#: Beyond this many buttons held together only as many orders as this one has are walked.
+_ALL_ORDERS = 4
+
+
+def derive(circuit: Circuit) -> Behaviour:
+    """Derive everything that the circuit does, over its tolerances.
+
+    Args:
+        circuit: as read.
+
+    Returns:
+        The behaviour, findings included; nothing is raised for a faulty drawing.
+    """
+    cols = columns(circuit)
+    engine = Engine(circuit, None, cols)
+    nominal = measure(engine)
+    keys = tuple(nominal.margins)
+    drawn = population(circuit, cols, False, keys)
+    published = population(circuit, cols, True, keys)
+    base = Behaviour(
+        circuit=circuit.title,
+        buttons=tuple(b.name for b in circuit.buttons),
+        verdict="sound",
+        held=tuple(_held_rows(circuit, nominal)),
+        priority=tuple(_priority_rows(circuit, nominal)),
+        dominance=_dominance(circuit, nominal),
+        releases=tuple(_release_rows(circuit, engine)),
+        power_on=_power_on(circuit, engine),
+        windows=tuple(_windows(circuit, engine, nominal, drawn, published)),
+        margins=tuple(_margins(circuit, engine, nominal, drawn, published)),
+        levels=tuple(_levels(circuit, engine)),
+        findings=(),
+        notes=tuple(_notes(circuit, engine, drawn, published)),
+    )
+    evidence = Evidence(circuit, engine, nominal, drawn, published, base)
+    findings = tuple(sorted(find(evidence), key=lambda f: (f.position, f.rule, f.message)))
+    return dataclasses.replace(base, findings=findings, verdict=_verdict(findings, nominal, drawn, published))
+
+
+def _names(circuit: Circuit, mask: int) -> tuple[str, ...]:
+    return tuple(b.name for i, b in enumerate(circuit.buttons) if mask >> i & 1)
+
+
+def _held_rows(circuit: Circuit, nominal: Measures) -> Iterator[HeldRow]:
+    for (q, mask), output in sorted(nominal.held.items(), key=lambda item: (item[0][1], item[0][0])):
+        if output[0] < 0:
+            continue
+        period = float(nominal.period_s[q, mask][0])
+        oscillates = output[0] == OSCILLATES and period > 0
+        yield HeldRow(_names(circuit, mask), _LEVELS[q], _OUTPUTS[int(output[0])], period if oscillates else None)
+
+
+def held_output(nominal: Measures, mask: int) -> Settled:
+    """Return what a held combination does: one output whatever was before, or ``keeps``."""
+    seen = {int(nominal.held[q, mask][0]) for q in (0, 1)} - {-1}
+    if len(seen) == 1:
+        return _OUTPUTS[seen.pop()]
+    return "keeps" if OSCILLATES not in seen else "oscillates"
+
+
+def _command(nominal: Measures, mask: int) -> tuple[int, ...]:
+    return tuple(int(nominal.held[q, mask][0]) for q in (0, 1))
+
+
+def _priority_rows(circuit: Circuit, nominal: Measures) -> Iterator[PriorityRow]:
+    for mask in range(1 << len(circuit.buttons)):
+        pressed = [i for i in range(len(circuit.buttons)) if mask >> i & 1]
+        if len(pressed) > 1:
+            same = [i for i in pressed if _command(nominal, 1 << i) == _command(nominal, mask)]
+            winner = circuit.buttons[same[0]].name if len(same) == 1 else None
+            yield PriorityRow(_names(circuit, mask), held_output(nominal, mask), winner)
+
+
+def _dominance(circuit: Circuit, nominal: Measures) -> str:
+    """Name the dominance where some button only sets and some button only resets."""
+    count = len(circuit.buttons)
+    sets = [i for i in range(count) if _command(nominal, 1 << i) == (1, 1)]
+    resets = [i for i in range(count) if _command(nominal, 1 << i) == (0, 0)]
+    both = {_command(nominal, 1 << s | 1 << r) for s in sets for r in resets}
+    return {((0, 0),): "reset-dominant", ((1, 1),): "set-dominant"}.get(tuple(both), "")  # type: ignore[call-overload, no-any-return]
+
+
+def _release_rows(circuit: Circuit, engine: Engine) -> Iterator[ReleaseRow]:
+    count = len(circuit.buttons)
+    for size in range(2, count + 1):
+        for group in combinations(range(count), size):
+            for order in _orders(group):
+                output = _after_releases(engine, order)
+                named = tuple(circuit.buttons[i].name for i in order)
+                yield ReleaseRow(_names(circuit, sum(1 << i for i in group)), named, output)
+
+
+def _orders(group: Sequence[int]) -> Iterator[tuple[int, ...]]:
+    if len(group) <= _ALL_ORDERS:
+        yield from permutations(group)
+    else:  # the last one decides, so let each be last once
+        for k in range(len(group)):
+            yield (*group[:k], *group[k + 1 :], group[k])
+
+
+def _after_releases(engine: Engine, order: Sequence[int]) -> Settled:
+    seen = {output for q in (0, 1) if (output := release_in_order(engine, q, order)) is not None}
+    return seen.pop() if len(seen) == 1 else "oscillates" if "oscillates" in seen else "keeps"
+
+
+def release_in_order(engine: Engine, q: int, order: Sequence[int]) -> Settled | None:
+    """Hold all of *order* from rest at *q*, release one by one, each settled; None where q has no rest."""
+    lanes, ok = engine.rest(q)
+    if not ok[0]:
+        return None
+    mask = sum(1 << i for i in order)
+    for gone in (0, *(1 << i for i in order)):
+        mask &= ~gone
+        engine.press(lanes, mask)
+        engine.run(lanes, np.inf)
+    return _OUTPUTS[OSCILLATES if lanes.busy[0] else int(lanes.q[0])]
+
+
+def _power_on(circuit: Circuit, engine: Engine) -> PowerOn:
+    outcomes, at_once = [], []
+    for q in (0, 1):
+        lanes = engine.empty(q)
+        engine.resolve(lanes)
+        at_once.append(int(lanes.q[0]))
+        engine.run(lanes, np.inf)
+        outcomes.append(OSCILLATES if lanes.busy[0] else int(lanes.q[0]))
+    if outcomes[0] != outcomes[1]:
+        why = "no input forces the latch when the supply steps up over empty capacitors: it keeps what it came up with"
+        return PowerOn("undetermined", why)
+    if outcomes[0] == OSCILLATES:
+        return PowerOn("undetermined", "the circuit oscillates with no button held")
+    return PowerOn(_LEVELS[outcomes[0]], _power_why(engine, at_once, outcomes[0]))
+
+
+def _power_why(engine: Engine, at_once: list[int], output: int) -> str:
+    lanes = engine.empty(1 - output)
+    lanes.q[:] = 1 - output
+    f = engine.guards(lanes)[0]
+    pins = [name for name, on in zip(("trigger", "threshold", "reset"), (f[0] < 0, f[1] > 0, f[2] < 0), strict=True) if on]
+    if at_once == [output, output] and pins:
+        return f"the {' and the '.join(pins)} input forces it the instant the supply is there"
+    return "an input forces it while the capacitors charge"
+
+
+def _band(nominal: Floats, values: Floats) -> Band:
+    least, most = float(values.min()), float(values.max())
+    return Band(*(None if np.isinf(v) else v for v in (float(nominal[0]), least, most)))
+
+
+def _windows(
+    circuit: Circuit, engine: Engine, nominal: Measures, drawn: Population, published: Population
+) -> Iterator[Window]:
+    for key, value in nominal.windows.items():
+        button, q, kind = key
+        yield Window(
+            circuit.buttons[button].name,
+            _LEVELS[q],
+            kind,
+            _band(value, drawn.measures.windows[key]),
+            _band(value, published.measures.windows[key]),
+            window_why(engine, nominal, key, drawn),
+        )
+
+
+def _margins(
+    circuit: Circuit, engine: Engine, nominal: Measures, drawn: Population, published: Population
+) -> Iterator[Margin]:
+    for key, value in nominal.margins.items():
+        yield Margin(
+            margin_place(circuit, key),
+            _band(value, drawn.measures.margins[key]),
+            _band(value, published.measures.margins[key]),
+            margin_why(engine, nominal, key, drawn),
+        )
+
+
+def margin_place(circuit: Circuit, key: tuple[int, int, str]) -> str:
+    """Say where a margin is taken, in words."""
+    mask, q, what = key
+    held = " and ".join(_names(circuit, mask))
+    if what == "press":
+        return f"press of {held} with the output {_LEVELS[q]}: past the level that flips it"
+    pin, side = what.split()
+    return f"{held + ' held' if held else 'no button held'}, output {_LEVELS[q]}: {pin} {side[:-1]} its level"
+
+
+def _levels(circuit: Circuit, engine: Engine) -> Iterator[NamedLevel]:
+    """Voltages worth reading: thresholds, and every node at rest in both states (nominal)."""
+
+    def exact(volts: float) -> Band:
+        return Band(volts, volts, volts)
+
+    supply = float(engine.supply[0])
+    cols = engine.columns
+    for pin, key in (("trigger", "trigger_ratio"), ("threshold", "threshold_ratio")):
+        yield NamedLevel(f"{pin} level", exact(supply * float(cols.nominal[cols.index(f"timer.{key}")])))
+    yield NamedLevel("reset level", exact(float(cols.nominal[cols.index("timer.reset_level")])))
+    for q in (0, 1):
+        lanes, ok = engine.rest(q)
+        if ok[0]:
+            for name, volts in zip(engine.topo.nodes, engine.volts(lanes)[0], strict=True):
+                yield NamedLevel(f"{name} at rest, output {_LEVELS[q]}", exact(float(volts)))
+
+
+def _notes(circuit: Circuit, engine: Engine, drawn: Population, published: Population) -> Iterator[str]:
+    for name, group in (("part tolerances", drawn), ("part tolerances and published figures", published)):
+        how = "every corner" if group.exhaustive else "the corners that each result's own slopes point to, and a fixed draw of others"
+        yield f"{name}: {len(group.moving)} values move something; {how}, {len(group.rows)} units"
+    if engine.topo.states > 1:
+        yield "more than one capacitor: the corners are the rule here, not a proof of the extremes"
+
+
+def _verdict(findings: Sequence[Finding], nominal: Measures, drawn: Population, published: Population) -> Verdict:
+    if any(f.severity == "error" for f in findings):
+        return "faulty"
+    for group in (drawn, published):
+        if not works(group.measures, nominal).all() or any(m.min() < 0 for m in group.measures.margins.values()):
+            return "typical-only"
+    return "sound"

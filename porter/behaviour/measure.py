@@ -1,0 +1,347 @@
+"""What is measured on every unit of a batch: held table, windows, margins.
+
+Everything here is batched over the engine's units; `derive` takes the same
+measurements of the nominal unit and of the corners.
+"""
+
+from collections.abc import Iterator, Mapping
+from dataclasses import dataclass, field
+
+import numpy as np
+from numpy.typing import NDArray
+
+from porter.behaviour.model import WindowKind
+from porter.circuit.engine import RESET, THRESHOLD, TRIGGER, Engine, Ints, Lanes, Mask
+from porter.circuit.flow import first_fall
+from porter.circuit.network import Mode
+from porter.circuit.values import Floats
+
+LOW, HIGH, OSCILLATES = 0, 1, 2
+#: (button index, output that the press would change, kind)
+WindowKey = tuple[int, int, WindowKind]
+#: (held mask, settled output, what is compared)
+MarginKey = tuple[int, int, str]
+_PINS = {"trigger": TRIGGER, "threshold": THRESHOLD, "reset": RESET}
+
+
+@dataclass(slots=True)
+class Measures:
+    """Measurements of U units.
+
+    Args:
+        rests: ``rests[q]``: whether the latch stays at q with no button held, shape (U,).
+        held: ``held[q, mask]``: settled output (0, 1, 2 = oscillates), -1 where q has no rest.
+        period_s: the same keys, period of the oscillation.
+        windows: seconds, inf = never, shape (U,).
+        margins: volts, shape (U,).
+    """
+
+    rests: list[Mask]
+    held: dict[tuple[int, int], Ints] = field(default_factory=dict)
+    period_s: dict[tuple[int, int], Floats] = field(default_factory=dict)
+    windows: dict[WindowKey, Floats] = field(default_factory=dict)
+    margins: dict[MarginKey, Floats] = field(default_factory=dict)
+
+
+def measure(engine: Engine, margin_keys: tuple[MarginKey, ...] | None = None) -> Measures:
+    """Measure all units of an engine.
+
+    Args:
+        margin_keys: which margins to take; None: those that the first unit asks for.
+    """
+    rests = [engine.rest(q) for q in (0, 1)]
+    out = Measures([ok for _, ok in rests])
+    settled: dict[tuple[int, int], Lanes] = {}
+    for q, (rest, ok) in enumerate(rests):
+        for mask in range(1 << len(engine.circuit.buttons)):
+            lanes = rest.copy()
+            engine.press(lanes, mask)
+            engine.run(lanes, np.inf)
+            settled[q, mask] = lanes
+            out.held[q, mask] = np.where(ok, np.where(lanes.busy, OSCILLATES, lanes.q), -1)
+            out.period_s[q, mask] = np.where(lanes.busy, lanes.period_s, np.nan)
+    for i in range(len(engine.circuit.buttons)):
+        out.windows.update(_windows(engine, i, [lanes for lanes, _ in rests], out.rests))
+    _margins(engine, [lanes for lanes, _ in rests], settled, out, margin_keys)
+    return out
+
+
+# --- windows ---
+
+
+def first_flip(engine: Engine, lanes: Lanes, duration: Floats | float) -> Floats:
+    """Run lanes and return when each first flips from now on, inf where it doesn't, shape (B,)."""
+    begin = lanes.clock_s.copy()
+    when = np.full(len(lanes), np.inf)
+
+    def listen(rows: Ints, times: Floats, _: Ints) -> None:
+        when[rows] = np.minimum(when[rows], times - begin[rows])
+
+    engine.run(lanes, duration, listener=listen)
+    return when
+
+
+def hold_until_flip(engine: Engine, start: Lanes, mask: int) -> tuple[Lanes, Floats]:
+    """Press and hold until the first flip; returns the lanes right after it and the time it took."""
+    lanes = start.copy()
+    q = lanes.q.copy()
+    engine.press(lanes, mask)
+    at_once = lanes.q != q
+    probe = lanes.copy()
+    when = np.where(at_once, 0.0, first_flip(engine, probe, np.inf))
+    acts = np.isfinite(when)
+    engine.run(lanes, np.where(acts, when, np.inf))
+    return lanes, when
+
+
+def acts_on_release(engine: Engine, start: Lanes, mask: int, press_s: Floats) -> Mask:
+    """Return whether a press of a given length flips the latch at or after the release."""
+    lanes = start.copy()
+    engine.press(lanes, mask)
+    engine.run(lanes, press_s)
+    q = lanes.q.copy()
+    engine.press(lanes, 0)
+    flipped = lanes.q != q
+    return flipped | np.isfinite(first_flip(engine, lanes, np.inf))
+
+
+def _shortest(engine: Engine, start: Lanes, ok: Mask, mask: int) -> Floats:
+    """Least closure that changes the output from rest, shape (U,)."""
+    _, when = hold_until_flip(engine, start, mask)
+    late = acts_on_release(engine, start, mask, np.full(len(start), 1e-9)) & (when > 1e-9)
+    when = np.where(late, 0.0, when)  # any touch does it, by its release
+    never = np.isinf(when)
+    if never.any():
+        slow = _bisect(engine, start, mask, never)
+        when = np.where(never, slow, when)
+    return np.where(ok, when, np.inf)
+
+
+def _bisect(engine: Engine, start: Lanes, mask: int, rows: Mask) -> Floats:
+    """Least press that acts by its release, where holding alone does not act."""
+    out = np.full(len(start), np.inf)
+    lanes = start.take(rows)
+    long = np.full(len(lanes), _settling(engine, lanes))
+    acts = acts_on_release(engine, lanes, mask, long)
+    low, high = np.full(len(lanes), 1e-9), long.copy()
+    for _ in range(60 if acts.any() else 0):
+        mid = np.sqrt(low * high)
+        hit = acts_on_release(engine, lanes, mask, mid)
+        low, high = np.where(hit, low, mid), np.where(hit, mid, high)
+    out[rows] = np.where(acts, high, np.inf)
+    return out
+
+
+def _settling(engine: Engine, lanes: Lanes) -> float:
+    """A time in which everything that can settle has: sixty slowest time constants."""
+    slowest = 1.0
+    for mode in engine.modes:
+        positive = mode.rate[mode.rate > 1e-9]
+        slowest = min(slowest, float(positive.min())) if positive.size else slowest
+    return 60.0 / slowest
+
+
+def _windows(engine: Engine, button: int, rests: list[Lanes], ok: list[Mask]) -> Iterator[tuple[WindowKey, Floats]]:
+    mask = 1 << button
+    for q in (0, 1):
+        yield (button, q, "shortest-press"), _shortest(engine, rests[q], ok[q], mask)
+    for q in (0, 1):
+        tap = _re_arm(engine, rests[1 - q], ok[1 - q], mask, held=False)
+        hold = _re_arm(engine, rests[1 - q], ok[1 - q], mask, held=True)
+        yield (button, q, "re-arm-after-tap"), tap
+        yield (button, q, "re-arm-after-hold"), hold
+        yield (button, q, "stray-gap"), np.minimum(tap, hold)
+
+
+def after_press(engine: Engine, rest: Lanes, mask: int, held: bool) -> Lanes:
+    """Lanes at the instant after a tap (or a settled hold) of a button from rest, contact open."""
+    lanes, _ = hold_until_flip(engine, rest, mask)
+    if held:
+        engine.run(lanes, np.inf)
+    engine.press(lanes, 0)
+    return lanes
+
+
+def _re_arm(engine: Engine, rest: Lanes, ok: Mask, mask: int, held: bool) -> Floats:
+    """Least open time after a press from rest until the next press changes the output back."""
+    lanes = after_press(engine, rest, mask, held)
+    turned = ok & (lanes.q != rest.q) & ~lanes.busy
+    out = np.full(len(rest), np.inf)
+    if not turned.any():
+        return out
+    rows = np.flatnonzero(turned)
+    out[rows] = least_gap(engine, lanes.take(rows), mask)
+    return out
+
+
+def press_acts(engine: Engine, lanes: Lanes, mask: int, gap_s: Floats) -> Mask:
+    """Return whether a press after an opening of *gap_s* changes the output (held until settled)."""
+    part = lanes.copy()
+    engine.run(part, gap_s)
+    same = part.q == lanes.q
+    engine.press(part, mask)
+    flipped = part.q != lanes.q
+    return same & (flipped | np.isfinite(first_flip(engine, part, np.inf)))
+
+
+def least_gap(engine: Engine, lanes: Lanes, mask: int) -> Floats:
+    """Least opening after which a press of *mask* flips the latch, inf where none does, shape (B,).
+
+    Found from the exact flow of the opening where the press acts at its first instant, and
+    checked by running both sides of it; found by halving where it acts otherwise.
+    """
+    settled = lanes.copy()
+    engine.run(settled, np.inf)
+    far = np.full(len(lanes), _settling(engine, lanes))
+    ever = press_acts(engine, lanes, mask, far)
+    gap = np.where(ever, _instant_gap(engine, lanes, settled, mask), np.inf)
+    sure = np.isfinite(gap)
+    sure[sure] = _is_edge(engine, lanes.take(sure), mask, gap[sure])
+    rest = ever & ~sure
+    if rest.any():
+        gap[rest] = _halve_gap(engine, lanes.take(rest), mask, far[rest])
+    return gap
+
+
+def _is_edge(engine: Engine, lanes: Lanes, mask: int, gap: Floats) -> Mask:
+    above = press_acts(engine, lanes, mask, gap * (1 + 1e-9) + 1e-15)
+    below = press_acts(engine, lanes, mask, gap * (1 - 1e-6))
+    return above & (~below | (gap == 0))
+
+
+def _halve_gap(engine: Engine, lanes: Lanes, mask: int, far: Floats) -> Floats:
+    low, high = np.full(len(lanes), 1e-9), far.copy()
+    at_once = press_acts(engine, lanes, mask, low)
+    for _ in range(64):
+        mid = np.sqrt(low * high)
+        hit = press_acts(engine, lanes, mask, mid)
+        low, high = np.where(hit, low, mid), np.where(hit, mid, high)
+    return np.where(at_once, 0.0, high)
+
+
+def _instant_gap(engine: Engine, lanes: Lanes, settled: Lanes, mask: int) -> Floats:
+    """When, along the opening, pressing at that instant would first flip the latch."""
+    pressed = settled.copy()
+    pressed.held[:] = mask
+    engine.resolve(pressed, frozen=True)
+    found = np.full(len(lanes), np.inf)
+
+    def watch(rows: Ints, mode: Mode, z0: Floats, at: Floats, length: Floats) -> None:
+        begin = at - lanes.clock_s[rows]
+        for conducts in np.unique(pressed.conducts[rows]):
+            part = np.flatnonzero((pressed.conducts[rows] == conducts) & np.isinf(found[rows]))
+            if len(part):
+                target = engine.mode(mode.q, mask, conducts)
+                when = _joint_crossing(engine, mode, target, lanes.unit[rows[part]], z0[part], length[part])
+                found[rows[part]] = begin[part] + when
+
+    engine.run(lanes.copy(), np.inf, watcher=watch)
+    return found
+
+
+def _joint_crossing(engine: Engine, open_: Mode, pressed: Mode, unit: Ints, z0: Floats, length: Floats) -> Floats:
+    """When the pressed mode's decision would turn, along the open mode's flow from z0."""
+    rate = open_.rate[unit]
+    pull = open_.drive[unit] - rate * z0
+    into = pressed.Sinv[unit] @ open_.S[unit]
+    best = np.full(len(unit), np.inf)
+    for guard, sign in ((RESET, 1.0), (THRESHOLD, -1.0)) if open_.q else ((TRIGGER, 1.0),):
+        row = (pressed.Gz[unit, guard][:, None, :] @ into)[:, 0]
+        f0 = sign * (pressed.g0[unit, guard] + (row * z0).sum(axis=1))
+        crossing = first_fall(np.maximum(f0, 0.0), sign * row * pull, rate, length)
+        best = np.minimum(best, np.where(f0 < 0, 0.0, crossing))
+    return best
+
+
+# --- margins ---
+
+
+def _margins(
+    engine: Engine,
+    rests: list[Lanes],
+    settled: Mapping[tuple[int, int], Lanes],
+    out: Measures,
+    keys: tuple[MarginKey, ...] | None,
+) -> None:
+    wanted = _wanted(engine, rests, settled, out) if keys is None else keys
+    guards = {key: engine.guards(lanes) for key, lanes in settled.items()}
+    for mask, q, what in wanted:
+        if what.startswith("press"):
+            out.margins[mask, q, what] = _press_margin(engine, rests[q], mask)
+            continue
+        pin, side = what.split()
+        start = int(side[-1])
+        f = guards[start, mask][:, _PINS[pin]]
+        lanes = settled[start, mask]
+        sign = 1.0 if side.startswith("above") else -1.0
+        # A unit whose latch went the other way has lost the margin: tell by how much, on the side it fell.
+        out.margins[mask, q, what] = np.where(lanes.q == q, sign * f, -np.abs(f))
+
+
+def _wanted(
+    engine: Engine, rests: list[Lanes], settled: Mapping[tuple[int, int], Lanes], out: Measures
+) -> tuple[MarginKey, ...]:
+    """The margins that matter, told from the first unit."""
+    keys: dict[MarginKey, None] = {}
+    for (start, mask), lanes in settled.items():
+        if out.held[start, mask][0] in (LOW, HIGH):
+            f = engine.guards(lanes.take(np.array([0])))[0]
+            for pin, side in _holding(int(lanes.q[0]), f):
+                if _connected(engine, pin):
+                    same = any(k[:2] == (mask, int(lanes.q[0])) and k[2].startswith(f"{pin} {side}") for k in keys)
+                    if not same:
+                        keys[mask, int(lanes.q[0]), f"{pin} {side}{start}"] = None
+    for i in range(len(engine.circuit.buttons)):
+        for q in (0, 1):
+            if out.rests[q][0] and np.isfinite(out.windows[i, q, "shortest-press"][0]):
+                keys[1 << i, q, "press"] = None
+    return tuple(keys)
+
+
+def _connected(engine: Engine, pin: str) -> bool:
+    return engine.circuit.timer.pins.get(pin, "gnd") not in ("vcc", "gnd")
+
+
+def _holding(q: int, f: Floats) -> Iterator[tuple[str, str]]:
+    """Which deciding voltages keep the latch where it is, and on which side they must stay."""
+    trigger, threshold, reset = f[TRIGGER] < 0, f[THRESHOLD] > 0, f[RESET] < 0
+    if q:
+        yield "reset", "above"
+        if threshold:
+            yield "trigger", "below"
+        elif not trigger:
+            yield "threshold", "below"
+    elif reset and trigger:
+        yield "reset", "below"
+    else:
+        yield "trigger", "above"
+
+
+def _press_margin(engine: Engine, rest: Lanes, mask: int) -> Floats:
+    """How far the deciding voltage goes past its level when a button is pressed from rest."""
+    lanes = rest.copy()
+    lanes.held[:] = mask
+    engine.resolve(lanes, frozen=True)
+    now = _beyond(engine, lanes)
+    engine.run(lanes, np.inf, frozen=True)
+    return np.maximum(now, _beyond(engine, lanes))
+
+
+def _beyond(engine: Engine, lanes: Lanes) -> Floats:
+    """Volts by which the comparators want to flip each latch (negative: they don't)."""
+    f = engine.guards(lanes)
+    turn_low = np.maximum(np.minimum(f[:, THRESHOLD], f[:, TRIGGER]), -f[:, RESET])
+    turn_high = np.minimum(-f[:, TRIGGER], f[:, RESET])
+    return np.where(lanes.q == 1, turn_low, turn_high)
+
+
+def works(measures: Measures, nominal: Measures) -> NDArray[np.bool_]:
+    """Return which units do what the nominal unit does: same rests and held table, no window gone."""
+    good = np.ones(len(measures.rests[0]), bool)
+    for q in (0, 1):
+        good &= measures.rests[q] == nominal.rests[q][0]
+    for key, output in measures.held.items():
+        good &= output == nominal.held[key][0]
+    for window, seconds in measures.windows.items():
+        good &= np.isfinite(seconds) == np.isfinite(nominal.windows[window][0])
+    return good
