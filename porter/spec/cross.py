@@ -1,6 +1,6 @@
 """Checks between the sections of a spec: names that must exist, meet once, or agree."""
 
-from collections.abc import Callable, Iterator, Sequence
+from collections.abc import Callable, Collection, Iterator, Sequence
 from dataclasses import replace
 
 from porter.findings import Finding, Position
@@ -21,7 +21,7 @@ def cross_check(
     _targets(desk, draft, nodes)
     _intents(desk, draft)
     _ratios(desk, draft)
-    _lonely(desk, touches)
+    _lonely(desk, touches, {o.target for o in draft.outputs if o.kind != "lit"})
     _alike(desk, touches)
     warnings = in_order([f for f in desk.findings if f.severity == "warning"])
     return replace(draft, nodes=nodes, positions=dict(desk.positions), warnings=warnings)
@@ -158,10 +158,11 @@ def _ratios(desk: Desk, draft: Circuit) -> None:
             )
 
 
-def _lonely(desk: Desk, touches: Sequence[tuple[str, Position]]) -> None:
+def _lonely(desk: Desk, touches: Sequence[tuple[str, Position]], targets: Collection[str]) -> None:
+    """Warn of nodes that one thing is on, unless the product takes its output there."""
     names = [name for name, _ in touches]
     for name, place in touches:
-        if name and name not in RAILS and names.count(name) == 1:
+        if name and name not in (*RAILS, *targets) and names.count(name) == 1:
             others = [n for n in dict.fromkeys(names) if n != name]
             desk.warn(
                 "node-touched-once", place, f"only one thing is on node `{name}`", _lonely_mend(name, others)

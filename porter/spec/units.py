@@ -278,7 +278,7 @@ def _check_range(value: float, text: str, kind: Kind) -> None:
         raise QuantityError(
             "value-out-of-range",
             f"`{text}` is negative",
-            f"{kind.noun} is above zero here; swap the nodes if the direction is meant",
+            "leave out the minus; where a direction is meant, swap the two nodes",
         )
     if value == 0 and kind.low > 0:
         raise QuantityError("value-out-of-range", f"`{text}` is zero", _zero_mend(kind))
