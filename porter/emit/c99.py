@@ -1,0 +1,460 @@
+"""Writes a port in C99: fits 8-bit parts, and means the same with an ``int`` of 16 bits as with one of 32."""
+
+from porter.emit import trees
+from porter.emit.language import Job, banner, microseconds, why
+from porter.emit.lower import (
+    All,
+    Alone,
+    Amount,
+    Any,
+    Cell,
+    ChargeParts,
+    Compare,
+    CountParts,
+    End,
+    Field,
+    Filter,
+    Flips,
+    Mix,
+    Parts,
+    ToggleParts,
+    copies,
+    filter_name,
+)
+from porter.emit.names import comment, string, unique
+from porter.emit.numbers import Number, wrap
+from porter.emit.trees import LATCH, Syntax, branch, leaves, render
+from porter.port.model import Port
+from porter.vectors.model import Case, Suite
+
+SYNTAX = Syntax(("if (", ") {"), ("} else if (", ") {"), "} else {", "}", "/* as it is */")
+ROWS_A_LINE = 8
+
+
+class C99:
+    """The C99 core, self-test and pin layer."""
+
+    folder = "firmware/c"
+    files = {
+        "c99/latch.h.j2": "{name}.h",
+        "c99/latch.c.j2": "{name}.c",
+        "c99/selftest.c.j2": "{name}_selftest.c",
+        "c99/board.c.j2": "board.c",
+    }
+
+    def context(self, job: Job) -> dict[str, object]:
+        """Return finished strings for the four templates."""
+        return Core(job).context()
+
+
+class Core:
+    """The writing of one port in C."""
+
+    def __init__(self, job: Job) -> None:
+        self.job, self.parts, self.port = job, job.parts, job.port
+        self.name, self.prefix = job.name, job.name.upper()
+        self.buttons = tuple(f"{self.prefix}_BUTTON_{word}" for word in unique(self.port.buttons))
+        self.outputs = tuple(f"{self.prefix}_OUTPUT_{word}" for word in unique(self.port.outputs))
+
+    def context(self) -> dict[str, object]:
+        """Return the context for every template of the folder."""
+        port, parts = self.port, self.parts
+        return {
+            "name": self.name,
+            "prefix": self.prefix,
+            "banner": lambda what: banner(self.job, what),
+            "why": why(port),
+            "tick_us": microseconds(port),
+            "buttons": _bits(self.buttons, port.buttons),
+            "outputs": _bits(self.outputs, port.outputs),
+            "members": [self._member(cell) for cell in parts.cells],
+            "numbers": [self._define(number) for number in parts.numbers],
+            "helpers": self._helpers(),
+            "init": self._init(),
+            "step": self._step(),
+            "idle": self._idle(),
+            "recovery": recovery(parts),
+            "suite": suite_rows(self.job.suite),
+            "title": string(port.title),
+        }
+
+    # --- names and types ---
+
+    def _ref(self, number: Number) -> str:
+        return f"{self.prefix}_{number.name}"
+
+    def _define(self, number: Number) -> dict[str, object]:
+        value = f"{number.value}u"
+        if number.name.startswith(("SUM_LIMIT", "WEIGHT")):
+            value = f"INT32_C({number.value})" if number.value >= 0 else f"(-INT32_C({-number.value}))"
+        return {"about": number.about, "name": self._ref(number), "value": value}
+
+    def _member(self, cell: Cell) -> dict[str, str]:
+        holds = ", ".join(self._field_note(field, cell) for field in cell.fields)
+        return {"type": f"uint{cell.width}_t", "name": cell.name, "about": comment(holds)}
+
+    def _field_note(self, field: Field, cell: Cell) -> str:
+        at, last = _place(field, cell)
+        bits = "" if len(cell.fields) == 1 else f"bit {at}: " if at == last else f"bits {at} to {last}: "
+        return bits + _meaning(field, self.port)
+
+    def _ask(self, ask: int) -> tuple[str, str]:
+        """Return the conditions on the latch and the buttons as read."""
+        if ask == LATCH:
+            return "q != 0u", "q == 0u"
+        return f"(held & {self.buttons[ask]}) != 0u", f"(held & {self.buttons[ask]}) == 0u"
+
+    def _ask_down(self, ask: int) -> tuple[str, str]:
+        """Return the conditions on the filtered buttons."""
+        machine = self.parts.machine
+        found = [f for f in machine.filters if f.button == ask] if isinstance(machine, CountParts) else []
+        if not found:
+            return self._ask(ask)
+        n, press = filter_name(self.port, ask), self._ref(found[0].press)
+        return f"{n} >= {press}", f"{n} < {press}"
+
+    # --- functions ---
+
+    def _init(self) -> list[str]:
+        values = {"q": f"{self.port.start_q}u"}
+        if isinstance(self.parts.machine, ChargeParts):
+            values |= {
+                x: self._ref(n) for x, n in zip(copies(self.parts.machine), self.parts.machine.starts, strict=True)
+            }
+        return [f"m->{cell.name} = {values.get(cell.fields[0].name, '0u')};" for cell in self.parts.cells]
+
+    def _step(self) -> list[str]:
+        machine = self.parts.machine
+        body = self._charge(machine) if isinstance(machine, ChargeParts) else self._count(machine)
+        opened = [line for cell in self.parts.cells for line in _unpack(cell)]
+        closed = [self._pack(cell) for cell in self.parts.cells]
+        return [*opened, *body, "", *closed, "", *self._answer()]
+
+    def _answer(self) -> list[str]:
+        tree = self.parts.answer
+        if isinstance(tree, trees.Leaf) and tree.value is not None:
+            return [f"return {self._bits(tree.value)};"]
+        lines = render(tree, self._ask, lambda pair: [f"active = {self._bits(pair)};"], SYNTAX)
+        return ["/* Answer for the latch and the buttons as they are. */", "uint8_t active;", *lines, "return active;"]
+
+    def _bits(self, pair: tuple[int, int]) -> str:
+        if pair == (0, 1):
+            return "q"
+        if pair == (1, 0):
+            return "(uint8_t)(q ^ 1u)"
+        if pair[0] == pair[1]:
+            return f"{pair[0]}u"
+        return f"(uint8_t)((q != 0u) ? {pair[1]}u : {pair[0]}u)"
+
+    def _pack(self, cell: Cell) -> str:
+        kind = f"uint{cell.width}_t"
+        terms = []
+        for field in cell.fields:
+            at, last = _place(field, cell)
+            value = field.name
+            if value == "was":
+                full = last == cell.width - 1
+                value = "held" if full else f"(held & {(1 << len(self.port.buttons)) - 1}u)"
+            if at:
+                value = f"({kind})({value} << {at}u)"
+            terms.append(value)
+        if len(terms) == 1:
+            return f"m->{cell.name} = {terms[0]};"
+        return f"m->{cell.name} = ({kind})({' | '.join(terms)});"
+
+    def _idle(self) -> list[str]:
+        parts = self.parts
+        filters = parts.machine.filters if isinstance(parts.machine, CountParts) else ()
+        if parts.always_idle and not filters:
+            return ["(void)m;", "return true;"]
+        opened = [line for cell in parts.cells for line in _unpack(cell, was=True)]
+        if parts.always_idle:
+            opened = [line for line in opened if " n_" in line]
+            tests = [self._settled(f) for f in filters]
+            return [*opened, "", f"return {' && '.join(tests)};"]
+        same = " && ".join(f"(next.{cell.name} == m->{cell.name})" for cell in parts.cells)
+        trial = [f"{self.name}_t next = *m;"]
+        if parts.recorded:
+            opened = [line for line in opened if " was = " in line]
+            return [*trial, *opened, "", f"(void){self.name}_step(&next, was);", f"return {same};"]
+        opened = [line for line in opened if " n_" in line]
+        guess = [line for f in filters for line in
+                 branch(self._ask_down(f.button)[0], [f"was |= {self.buttons[f.button]};"], [], SYNTAX)]
+        return [*trial, *opened, "uint8_t was = 0u;", "", *guess,
+                f"(void){self.name}_step(&next, was);", f"return {same};"]
+
+    def _settled(self, item: Filter) -> str:
+        n = filter_name(self.port, item.button)
+        return f"(({n} == 0u) || ({n} == {self._top(item)}))"
+
+    # --- count ---
+
+    def _count(self, machine: CountParts) -> list[str]:
+        lines: list[str] = []
+        for item in machine.filters:
+            lines += ["", f"/* {comment(self.port.buttons[item.button])}: a change counts once seen long enough. */",
+                      *self._filter(item)]
+        latch = render(machine.latch, self._ask_down, self._set_latch, SYNTAX)
+        lines += ["", "/* The latch by level. */", *latch] if latch else []
+        return lines + (self._toggle(machine.toggle) if machine.toggle else [])
+
+    def _top(self, item: Filter) -> str:
+        if item.release.value == 1:
+            return self._ref(item.press)
+        return f"(({self._ref(item.press)} + {self._ref(item.release)}) - 1u)"
+
+    def _filter(self, item: Filter) -> list[str]:
+        n, press = filter_name(self.port, item.button), self._ref(item.press)
+        up, down, top = [f"{n}++;"], [f"{n}--;"], [f"{n} = {self._top(item)};"]
+        if item.release.value == 1:
+            held = branch(f"{n} < {press}", up, [], SYNTAX)
+        elif item.press.value == 1:
+            held = top
+        else:
+            held = branch(f"{n} < ({press} - 1u)", up, top, SYNTAX)
+        if item.release.value == 1:
+            opened = [f"{n} = 0u;"]
+        elif item.press.value == 1:
+            opened = branch(f"{n} > 0u", down, [], SYNTAX)
+        else:
+            opened = branch(f"{n} > {press}", down, [f"{n} = 0u;"], SYNTAX)
+        return [self._ask(item.button)[0].join(SYNTAX.first), *_indent(held), SYNTAX.otherwise, *_indent(opened), "}"]
+
+    def _set_latch(self, pair: tuple[int, int]) -> list[str]:
+        if pair == (0, 1):
+            return []
+        if pair == (1, 0):
+            return ["q ^= 1u;"]
+        return [f"q = {pair[0]}u;"]
+
+    def _toggle(self, toggle: ToggleParts) -> list[str]:
+        pressed = self._ask_down(toggle.button)[0]
+        acts = ["q ^= 1u;", f"c = {self._either(toggle.tap)};"]
+        live = render(toggle.live, self._ask_down, lambda yes: acts if yes else [], SYNTAX)
+        press = [*branch("c == 0u", live, [], SYNTAX), *self._toward(toggle)]
+        whole = branch(pressed, press, branch("c > 0u", ["c--;"], [], SYNTAX), SYNTAX)
+        note = f"/* {comment(self.port.buttons[toggle.button])} turns the latch once the re-arm counter has run out. */"
+        return ["", note, *whole]
+
+    def _either(self, pair: tuple[Number, Number]) -> str:
+        if pair[0] == pair[1]:
+            return self._ref(pair[0])
+        kind = "uint8_t" if max(pair[0].value, pair[1].value) < 256 else "uint16_t"
+        return f"({kind})((q != 0u) ? {self._ref(pair[1])} : {self._ref(pair[0])})"
+
+    def _toward(self, toggle: ToggleParts) -> list[str]:
+        paces = {number.value for number in toggle.pace}
+        kind = _type(toggle.most)
+        if paces == {0}:
+            return []
+        if min(paces) >= toggle.most:
+            return [f"c = {self._either(toggle.hold)};"]
+        same = toggle.hold[0] == toggle.hold[1]
+        opened = [] if same else [f"{kind} hold = {self._either(toggle.hold)};"]
+        hold = self._ref(toggle.hold[0]) if same else "hold"
+        if paces == {1}:
+            down = branch(f"c > {hold}", ["c--;"], [], SYNTAX) if toggle.above else []
+            return [*opened, *branch(f"c < {hold}", ["c++;"], down, SYNTAX)]
+        pace = self._either(toggle.pace)
+        limit = branch(f"by > {pace}", [f"by = {pace};"], [], SYNTAX)
+        up = [f"{kind} by = ({kind})({hold} - c);", *limit, f"c = ({kind})(c + by);"]
+        down = [f"{kind} by = ({kind})(c - {hold});", *limit, f"c = ({kind})(c - by);"]
+        return [*opened, *branch(f"c < {hold}", up, down if toggle.above else [], SYNTAX)]
+
+    # --- charge ---
+
+    def _charge(self, machine: ChargeParts) -> list[str]:
+        names = copies(machine)
+        decide = render(machine.decide, self._ask, lambda f: self._flip(f, names), SYNTAX)
+        lines = ["", "/* Decide with the charge from before this tick. */", *decide] if decide else []
+        mixed = any(motion.mixed for motion in machine.motions)
+        for k, (x, motion) in enumerate(zip(names, machine.motions, strict=True)):
+            about = comment(self.port.machine.capacitors[k])  # type: ignore[union-attr]
+            y = f"y{k}" if mixed else x
+            if motion.mixed:
+                moved = render(motion.mixed, self._ask, lambda leaf: self._mixed(leaf, x, y, names), SYNTAX)
+                moved = [f"uint16_t {y};", *moved]
+            else:
+                moved = self._move(motion.ends, motion.amounts, x, y)
+            lines += ["", f"/* Move the copy of {about} by one tick. */", *moved] if moved else []
+        if mixed:
+            lines += ["", *(f"{x} = y{k};" for k, x in enumerate(names))]
+        return lines
+
+    def _flip(self, flips: Flips, names: tuple[str, ...]) -> list[str]:
+        low, high = self._any(flips.low, names), self._any(flips.high, names)
+        turn = ["q ^= 1u;"]
+        if low == high:
+            return turn if low == "" else branch(low, turn, [], SYNTAX) if low else []
+        up, down = (self._turned(text, value) for text, value in ((low, 1), (high, 0)))
+        if not up:
+            return branch("q != 0u", down, [], SYNTAX)
+        return branch("q == 0u", up, down, SYNTAX)
+
+    def _turned(self, condition: str | None, value: int) -> list[str]:
+        if condition is None:
+            return []
+        return branch(condition, [f"q = {value}u;"], [], SYNTAX) if condition else [f"q = {value}u;"]
+
+    def _any(self, any_of: Any, names: tuple[str, ...]) -> str | None:
+        """Return the condition as text; empty where it always holds, None where it never does."""
+        if not any_of:
+            return None
+        return " || ".join(self._all(a, names, len(any_of) > 1) for a in any_of)
+
+    def _all(self, all_of: All, names: tuple[str, ...], nested: bool) -> str:
+        texts = [self._compare(test, names) for test in all_of]
+        joined = " && ".join(texts if len(texts) == 1 else [f"({text})" for text in texts])
+        return f"({joined})" if nested else joined
+
+    def _compare(self, test: Compare, names: tuple[str, ...]) -> str:
+        if len(test.coeff) == 1:
+            return f"{names[0]} {test.operator} {self._ref(test.limit)}"
+        terms = [f"({self._ref(w)} * (int32_t){x})" for x, w in zip(names, test.weights, strict=True) if w.value]
+        return f"({' + '.join(terms) or 'INT32_C(0)'}) {test.operator} {self._ref(test.limit)}"
+
+    def _move(self, ends: trees.Tree[End], amounts: trees.Tree[Amount], x: str, y: str) -> list[str]:
+        targets = set(leaves(ends))
+        if targets == {"stay"}:
+            return [] if x == y else [f"uint16_t {y} = {x};"]
+        kinds = {amount.kind for amount in leaves(amounts)}
+        if kinds == {"whole"}:
+            opened = [] if x == y else [f"uint16_t {y} = {x};"]
+            return opened + render(ends, self._ask, lambda e: [] if e == "stay" else [f"{y} = {self._end(e, x)};"], SYNTAX)
+        k = x[1:]
+        end, by = f"end{k}", f"by{k}"
+        target = render(ends, self._ask, lambda e: [f"{end} = {self._end(e, x)};"], SYNTAX)
+        if len(targets) == 1:
+            target = []
+            end = self._end(next(iter(targets)), x)
+        else:
+            target = [f"uint16_t {end};", *target]
+        part = render(amounts, self._ask, lambda a: self._part(a, by), SYNTAX)
+        return [
+            *target,
+            f"uint16_t {by} = ({x} < {end}) ? (uint16_t)({end} - {x}) : (uint16_t)({x} - {end});",
+            *part,
+            f"{'' if x == y else 'uint16_t '}{y} = ({x} < {end}) ? (uint16_t)({x} + {by}) : (uint16_t)({x} - {by});",
+        ]
+
+    def _end(self, end: End, x: str) -> str:
+        return x if isinstance(end, str) else self._ref(end)
+
+    def _part(self, amount: Amount, by: str) -> list[str]:
+        if amount.number is None:
+            return []
+        ref = self._ref(amount.number)
+        if amount.kind == "rate":
+            return [f"{by} = (uint16_t)((((uint32_t){by} * {ref}) + 32768u) >> 16u);"]
+        if amount.wraps:
+            return [f"{by} = (uint16_t)(({by} >> {ref}) + (({by} >> ({ref} - 1u)) & 1u));"]
+        return [f"{by} = (uint16_t)(({by} + (1u << ({ref} - 1u))) >> {ref});"]
+
+    def _mixed(self, leaf: Alone | Mix, x: str, y: str, names: tuple[str, ...]) -> list[str]:
+        if isinstance(leaf, Mix):
+            terms = [self._kept(sign, keep, copy, end) for (sign, keep), copy, end in
+                     zip(leaf.keep, names, leaf.ends, strict=True) if keep.value]
+            total = " ".join([f"(int32_t){self._ref(leaf.end)}", *terms])
+            return [f"{y} = {self.name}_clamp({total});"]
+        if leaf.end == "stay":
+            return [f"{y} = {x};"]
+        end = self._end(leaf.end, x)
+        if leaf.amount.number is None:
+            return [f"{y} = {end};"]
+        return [f"{y} = {self.name}_{leaf.amount.kind}({x}, {end}, {self._ref(leaf.amount.number)});"]
+
+    def _kept(self, sign: int, keep: Number, x: str, end: Number) -> str:
+        mark = "+" if sign > 0 else "-"
+        if keep.value == 65536:
+            return f"{mark} ((int32_t){x} - (int32_t){self._ref(end)})"
+        return f"{mark} {self.name}_kept({x}, {self._ref(end)}, {self._ref(keep)})"
+
+    def _helpers(self) -> list[str]:
+        """Return which static functions of the template the step needs."""
+        text = "\n".join(self._step())
+        return [h for h in ("clamp", "kept", "shift", "rate") if f"{self.name}_{h}(" in text]
+
+
+def _bits(words: tuple[str, ...], names: tuple[str, ...]) -> list[dict[str, str]]:
+    return [{"word": w, "mask": f"0x{1 << i:02X}u", "name": comment(n), "bit": str(i)}
+            for i, (w, n) in enumerate(zip(words, names, strict=True))]
+
+
+def _type(most: int) -> str:
+    return "uint8_t" if most < 256 else "uint16_t"
+
+
+def _meaning(field: Field, port: Port) -> str:
+    if field.name == "q":
+        return "the latch, 1 = output high"
+    if field.name == "was":
+        return "the buttons of the last step"
+    if field.name == "c":
+        return "open ticks until the next press acts"
+    if field.name.startswith("n_"):
+        return f"agreement counter, 0 to {field.most}"
+    charge = port.machine
+    k = int(field.name[1:] or 0)
+    return f"copy of {charge.capacitors[k]}, {charge.low_v[k]:.9g} V + {charge.scale_v[k]:.9g} V each"  # type: ignore[union-attr]
+
+
+def _place(field: Field, cell: Cell) -> tuple[int, int]:
+    """Return a field's first and last bit; the last field reaches to the cell's end."""
+    at = sum(f.bits for f in cell.fields[: cell.fields.index(field)])
+    last = at + field.bits - 1
+    alone = field is cell.fields[-1] and field.name != "q"
+    return at, cell.width - 1 if alone else last
+
+
+def _unpack(cell: Cell, was: bool = False) -> list[str]:
+    """Return the locals of a cell's fields; the last buttons are only read where *was* asks for them."""
+    lines = []
+    for field in cell.fields:
+        if field.name == "was" and not was:
+            continue
+        at, last = _place(field, cell)
+        kind = f"uint{8 if last - at < 8 else 16}_t"
+        value = f"m->{cell.name}"
+        if at:
+            value = f"({value} >> {at}u)"
+        if last != cell.width - 1:
+            value = f"({value} & {(1 << (last - at + 1)) - 1}u)"
+        whole = at == 0 and last == cell.width - 1
+        lines.append(f"{kind} {field.name} = {value if whole else f'({kind}){value}'};")
+    return lines
+
+
+def _indent(lines: list[str]) -> list[str]:
+    return [SYNTAX.indent + line for line in lines]
+
+
+def recovery(parts: Parts) -> list[str]:
+    """Return what the core does from an impossible state, as comment lines."""
+    spare = [(1 << (last - at + 1)) - 1 - f.most for cell in parts.cells for f in cell.fields
+             if not f.name.startswith(("x", "was", "q")) for at, last in [_place(f, cell)]]
+    if isinstance(parts.machine, ChargeParts):
+        return wrap("Every bit pattern of the state is a legal one after one step: a copy that was disturbed is some "
+                    "voltage, and decays with the circuit's own time constant.")
+    ticks = max(spare, default=0) + 1
+    return wrap(f"From any bit pattern of the state the core is back in a legal one after at most {ticks} "
+                f"tick{'s' * (ticks > 1)} with the buttons open.")
+
+
+# --- vectors ---
+
+
+def suite_rows(suite: Suite) -> dict[str, object]:
+    """Return the suite as finished rows: the cases in order, with stimulus and answer as lines of runs."""
+    return {
+        "cases": [{"name": string(case.name), "ticks": case.ticks, "purpose": comment(case.purpose),
+                   "held": runs(case, "held"), "expected": runs(case, "expected"),
+                   "flat_held": runs(case, "held", "{}, {},"), "flat_expected": runs(case, "expected", "{}, {},")}
+                  for case in suite.cases],
+        "guarantees": [line for sentence in suite.guarantees for line in wrap(sentence)],
+    }
+
+
+def runs(case: Case, which: str, row: str = "{{{}u, {}u}},") -> list[str]:
+    """Return a case's runs as lines of a table; *row* writes one run of ticks and bits."""
+    cells = [row.format(ticks, bits) for ticks, bits in getattr(case, which)]
+    return [" ".join(cells[i : i + ROWS_A_LINE]) for i in range(0, len(cells), ROWS_A_LINE)]

@@ -1,0 +1,472 @@
+"""From a port to the parts of a step, still in no language: trees of answers, named numbers, packed fields.
+
+Every language writes the same parts, so that a merge or a bound is worked out once, here.
+"""
+
+from dataclasses import dataclass
+from itertools import product
+from typing import Literal
+
+from porter.emit.numbers import Number, Numbers
+from porter.emit.trees import LATCH, Leaf, Tree, grow
+from porter.port.model import U16, Charge, ChargeMode, Count, Move, Port, Test
+
+# --- decisions ---
+
+Operator = Literal[">=", "<=", ">", "<"]
+
+
+@dataclass(frozen=True, slots=True)
+class Compare:
+    """``sum(coeff * X) operator limit`` over the copies X; `coeff` is (1,) for one capacitor."""
+
+    coeff: tuple[int, ...]
+    operator: Operator
+    limit: Number
+    weights: tuple[Number, ...] = ()  # the coefficients by name, where there are several
+
+    @property
+    def least(self) -> int | None:
+        """The least sum that holds, None where only a most is set."""
+        return {">=": self.limit.value, ">": self.limit.value + 1}.get(self.operator)
+
+    @property
+    def most(self) -> int | None:
+        """The greatest sum that holds, None where only a least is set."""
+        return {"<=": self.limit.value, "<": self.limit.value - 1}.get(self.operator)
+
+    def inverse(self) -> "Compare":
+        """Return the comparison that holds exactly where this one does not."""
+        opposite: dict[Operator, Operator] = {">=": "<", "<": ">=", "<=": ">", ">": "<="}
+        return Compare(self.coeff, opposite[self.operator], self.limit, self.weights)
+
+
+#: All must hold; any must hold.  An empty `All` always holds, an empty `Any` never.
+All = tuple[Compare, ...]
+Any = tuple[All, ...]
+
+
+@dataclass(frozen=True, slots=True)
+class Flips:
+    """When the latch flips, from low and from high."""
+
+    low: Any
+    high: Any
+
+
+def _bounds(coeff: tuple[int, ...]) -> tuple[int, int]:
+    return sum(min(c, 0) for c in coeff) * U16, sum(max(c, 0) for c in coeff) * U16
+
+
+def tighten(tests: All) -> All | None:
+    """Return the tightest of *tests*, or None where they can't all hold over copies in 0..65535."""
+    kept: list[Compare] = []
+    for coeff in dict.fromkeys(test.coeff for test in tests):
+        same = [test for test in tests if test.coeff == coeff]
+        low, high = _bounds(coeff)
+        floor = max((t for t in same if t.least is not None), key=lambda t: t.least or 0, default=None)
+        roof = min((t for t in same if t.most is not None), key=lambda t: t.most or 0, default=None)
+        least = low if floor is None or floor.least is None else max(floor.least, low)
+        most = high if roof is None or roof.most is None else min(roof.most, high)
+        if least > most:
+            return None
+        kept += [floor] if floor and least > low else []
+        kept += [roof] if roof and most < high else []
+    return tuple(kept)
+
+
+def flips(forward: tuple[Compare, ...], back: tuple[Compare, ...]) -> Any:
+    """Return when the latch flips and stays: any of *forward* holds and none of *back*."""
+    found = (tighten((test, *(other.inverse() for other in back))) for test in forward)
+    kept = tuple(dict.fromkeys(alternative for alternative in found if alternative is not None))
+    return ((),) if () in kept else kept
+
+
+# --- motion ---
+
+#: A capacitor copy's target: a number, or ``"stay"``.
+End = Number | Literal["stay"]
+
+
+@dataclass(frozen=True, slots=True)
+class Amount:
+    """How far a copy goes in one tick: the whole way, or by a shift or a rate of the distance."""
+
+    kind: Literal["whole", "shift", "rate"]
+    number: Number | None = None
+    wraps: bool = False  # shift: adding the half could leave 16 bits
+
+
+@dataclass(frozen=True, slots=True)
+class Alone:
+    """A copy's motion in one mode of a port where other modes mix capacitors."""
+
+    end: End
+    amount: Amount
+
+
+@dataclass(frozen=True, slots=True)
+class Mix:
+    """A copy's next value: `end` plus each copy's distance from its own end, times that copy's keep."""
+
+    end: Number
+    keep: tuple[tuple[int, Number], ...]  # sign and size in 65536ths, one for each copy
+    ends: tuple[Number, ...]
+
+
+@dataclass(frozen=True, slots=True)
+class Motion:
+    """One copy's motion: where to (`ends`) and how far (`amounts`).
+
+    Where any mode mixes capacitors, `mixed` says it all instead and the other two are empty.
+    """
+
+    ends: Tree[End]
+    amounts: Tree[Amount]
+    mixed: Tree[Alone | Mix] | None = None
+
+
+@dataclass(frozen=True, slots=True)
+class ChargeParts:
+    """A charge port taken apart."""
+
+    starts: tuple[Number, ...]
+    decide: Tree[Flips]
+    motions: tuple[Motion, ...]
+
+
+# --- counting ---
+
+
+@dataclass(frozen=True, slots=True)
+class Filter:
+    """A button's agreement counter ``n``: 0 = open and settled, `top` = pressed and settled.
+
+    ``n`` joins the reference's counter and its filtered bit: while up it counts held ticks from 0,
+    while down it counts open ticks back from `top`; the button is down where ``n >= press``.
+    """
+
+    button: int
+    press: Number
+    release: Number
+
+    @property
+    def top(self) -> int:
+        """The counter of a button that is held and settled."""
+        return self.press.value + self.release.value - 1
+
+
+@dataclass(frozen=True, slots=True)
+class ToggleParts:
+    """The toggle's numbers, each for the latch (low, high)."""
+
+    button: int
+    tap: tuple[Number, Number]
+    hold: tuple[Number, Number]
+    pace: tuple[Number, Number]
+    live: Tree[bool]
+    most: int
+    above: bool  # a held button may find the counter above `hold`
+
+
+@dataclass(frozen=True, slots=True)
+class CountParts:
+    """A count port taken apart."""
+
+    filters: tuple[Filter, ...]
+    latch: Tree[tuple[int, int]]
+    toggle: ToggleParts | None
+
+
+# --- the state in memory ---
+
+
+@dataclass(frozen=True, slots=True)
+class Field:
+    """A part of the packed state: `name`, its greatest value, its bits."""
+
+    name: str
+    most: int
+
+    @property
+    def bits(self) -> int:
+        """Bits that the greatest value takes."""
+        return max(self.most.bit_length(), 1)
+
+
+@dataclass(frozen=True, slots=True)
+class Cell:
+    """One member of the state struct, 8 or 16 bits wide, with its fields from bit 0 upwards."""
+
+    name: str
+    width: int
+    fields: tuple[Field, ...]
+
+
+@dataclass(frozen=True, slots=True)
+class Parts:
+    """Everything a language needs to write a core."""
+
+    port: Port
+    numbers: tuple[Number, ...]
+    cells: tuple[Cell, ...]
+    machine: ChargeParts | CountParts
+    answer: Tree[tuple[int, int]]
+    recorded: tuple[int, ...]  # buttons whose last reading is kept in the state, for `idle`
+    always_idle: bool  # any state is at rest for the reading that led to it
+
+
+def lower(port: Port) -> Parts:
+    """Take a port apart.
+
+    Raises:
+        ValueError: more than eight buttons or outputs, or a test's sum that leaves 32 bits.
+    """
+    if len(port.buttons) > 8 or len(port.outputs) > 8:
+        raise ValueError(f"{port.name}: at most eight buttons and eight outputs fit the step function")
+    numbers = Numbers(port)
+    charge = isinstance(port.machine, Charge)
+    machine = _charge(port, numbers) if charge else _count(port, numbers)
+    answer = grow([(port.answer[0][h], port.answer[1][h]) for h in range(port.held_count)], _buttons(port))
+    settled = isinstance(machine, CountParts) and machine.toggle is None and _steady(port)
+    recorded = () if settled else tuple(i for i in _buttons(port) if i not in _filtered(machine))
+    cells = _cells(_fields(port, machine, recorded))
+    return Parts(port, numbers.all(), cells, machine, answer, recorded, settled)
+
+
+def _buttons(port: Port) -> tuple[int, ...]:
+    return tuple(range(len(port.buttons)))
+
+
+def _filtered(machine: ChargeParts | CountParts) -> tuple[int, ...]:
+    return tuple(f.button for f in machine.filters) if isinstance(machine, CountParts) else ()
+
+
+def _steady(port: Port) -> bool:
+    """Whether deciding twice with the same buttons is the same as deciding once."""
+    assert isinstance(port.machine, Count)
+    low, high = port.machine.table
+    return all((low, high)[q][h] == q for h in range(port.held_count) for q in {low[h], high[h]})
+
+
+# --- charge ---
+
+
+def _charge(port: Port, numbers: Numbers) -> ChargeParts:
+    charge = port.machine
+    assert isinstance(charge, Charge)
+    starts = tuple(
+        numbers.get(_of("START", k, charge), "", x, f"start.{k}", f"Copy of {name} at power-on.")
+        for k, (x, name) in enumerate(zip(charge.start, charge.capacitors, strict=True))
+    )
+    decide = grow([_flips(port, h, numbers) for h in range(port.held_count)], _buttons(port))
+    motions = tuple(_motion(port, k, numbers) for k in range(len(charge.start)))
+    return ChargeParts(starts, decide, motions)
+
+
+def _of(role: str, k: int, charge: Charge) -> str:
+    return role if len(charge.start) == 1 else f"{role}_{k}"
+
+
+def _modes(port: Port) -> list[tuple[int, int, ChargeMode]]:
+    charge = port.machine
+    assert isinstance(charge, Charge)
+    return [(q, h, charge.modes[q][h]) for q, h in product((0, 1), range(port.held_count))]
+
+
+def _flips(port: Port, held: int, numbers: Numbers) -> Flips:
+    low, high = (_compares(port, q, held, numbers) for q in (0, 1))
+    return Flips(flips(low, high), flips(high, low))
+
+
+def _compares(port: Port, q: int, held: int, numbers: Numbers) -> tuple[Compare, ...]:
+    charge = port.machine
+    assert isinstance(charge, Charge)
+    tests = charge.modes[q][held].flips
+    return tuple(_compare(port, test, q, held, index, numbers) for index, test in enumerate(tests))
+
+
+def _compare(port: Port, test: Test, q: int, held: int, index: int, numbers: Numbers) -> Compare:
+    charge = port.machine
+    assert isinstance(charge, Charge)
+    if max(-_bounds(test.coeff)[0], _bounds(test.coeff)[1]) > 2**31 - 1:
+        raise ValueError(f"{port.name}: the sum of test {index} of mode q={q}, held={held} leaves 32 bits")
+    side = "at least" if test.ge else "at most"
+    about = f"The latch leaves {('low', 'high')[q]} with this mode's copy {side} here."
+    key = f"flip.q{q}.h{held}.{index}.limit"
+    role = "SUM_LIMIT" if len(test.coeff) > 1 else "LIMIT"
+    limit = numbers.get(role, numbers.place(q, held), test.limit, key, about)
+    weights = tuple(
+        numbers.get("WEIGHT", f"{numbers.place(q, held)}_{k}", c, f"flip.q{q}.h{held}.{index}.coeff.{k}",
+                    f"Weight of the copy of {charge.capacitors[k]} in the sum that decides.")
+        for k, c in enumerate(test.coeff) if len(test.coeff) > 1
+    )
+    return Compare(test.coeff, ">=" if test.ge else "<=", limit, weights)
+
+
+def _motion(port: Port, k: int, numbers: Numbers) -> Motion:
+    asks = (*_buttons(port), LATCH)
+    modes = [(q, h, mode.moves[k]) for q, h, mode in _modes(port)]
+    if any(move.kind == "mix" for _, _, move in modes):
+        mixed = [_alone_or_mix(port, k, q, h, move, numbers) for q, h, move in modes]
+        return Motion(Leaf(None), Leaf(None), grow(mixed, asks))
+    ends = [_end(port, k, q, h, move, numbers) for q, h, move in modes]
+    amounts = [_amount(port, k, q, h, move, numbers) for q, h, move in modes]
+    return Motion(grow(ends, asks), grow(amounts, asks))
+
+
+def _alone_or_mix(port: Port, k: int, q: int, held: int, move: Move, numbers: Numbers) -> Alone | Mix:
+    if move.kind == "mix":
+        return _mix(port, k, q, held, move, numbers)
+    amount = _amount(port, k, q, held, move, numbers)
+    return Alone(_end(port, k, q, held, move, numbers), amount or Amount("whole"))
+
+
+def _end(port: Port, k: int, q: int, held: int, move: Move, numbers: Numbers) -> End:
+    if move.kind == "hold":
+        return "stay"
+    return _end_number(port, k, q, held, move.end, numbers, f"move.q{q}.h{held}.{k}.end")
+
+
+def _end_number(port: Port, k: int, q: int, held: int, end: int, numbers: Numbers, key: str) -> Number:
+    charge = port.machine
+    assert isinstance(charge, Charge)
+    about = f"Where the copy of {charge.capacitors[k]} goes in the end in this mode."
+    return numbers.get(_of("END", k, charge), numbers.place(q, held), end, key, about)
+
+
+def _amount(port: Port, k: int, q: int, held: int, move: Move, numbers: Numbers) -> Amount | None:
+    charge = port.machine
+    assert isinstance(charge, Charge)
+    if move.kind == "hold":
+        return None
+    if move.kind == "jump" or (move.kind == "shift" and move.shift == 0):
+        return Amount("whole")
+    if move.kind == "shift":
+        if move.shift > 15:
+            raise ValueError(f"{port.name}: a shift of {move.shift} moves a 16-bit copy nowhere")
+        number = _pace_number(port, k, q, held, "SHIFT", move.shift, numbers)
+        half = 1 << move.shift >> 1
+        return Amount("shift", number, not half <= move.end <= U16 - half)
+    return Amount("rate", _pace_number(port, k, q, held, "RATE", move.rate, numbers))
+
+
+def _pace_number(port: Port, k: int, q: int, held: int, role: str, value: int, numbers: Numbers) -> Number:
+    charge = port.machine
+    assert isinstance(charge, Charge)
+    unit = "as a power of two" if role == "SHIFT" else "in 65536ths"
+    about = f"Part of its distance that the copy of {charge.capacitors[k]} goes in a tick, {unit}."
+    key = f"move.q{q}.h{held}.{k}.{role.lower()}"
+    return numbers.get(_of(role, k, charge), numbers.place(q, held), value, key, about)
+
+
+def _mix(port: Port, k: int, q: int, held: int, move: Move, numbers: Numbers) -> Mix:
+    key = f"move.q{q}.h{held}"
+    ends = tuple(_end_number(port, j, q, held, e, numbers, f"{key}.{j}.end") for j, e in enumerate(move.ends))
+    end = _end_number(port, k, q, held, move.end, numbers, f"{key}.{k}.end")
+    keep = tuple((1 if n >= 0 else -1, _keep_number(port, k, j, q, held, n, numbers))
+                 for j, n in enumerate(move.keep))
+    return Mix(end, keep, ends)
+
+
+def _keep_number(port: Port, k: int, j: int, q: int, held: int, keep: int, numbers: Numbers) -> Number:
+    charge = port.machine
+    assert isinstance(charge, Charge)
+    about = f"What a distance of {charge.capacitors[j]} leaves in {charge.capacitors[k]} after a tick, in 65536ths."
+    key = f"move.q{q}.h{held}.{k}.keep.{j}"
+    return numbers.get(f"KEEP_{k}_{j}", numbers.place(q, held), abs(keep), key, about)
+
+
+# --- count ---
+
+
+def _count(port: Port, numbers: Numbers) -> CountParts:
+    count = port.machine
+    assert isinstance(count, Count)
+    filters = tuple(_filter(port, i, numbers) for i in _buttons(port) if count.press[i] + count.release[i] > 2)
+    latch = grow([(count.table[0][h], count.table[1][h]) for h in range(port.held_count)], _buttons(port))
+    return CountParts(filters, latch, _toggle(port, numbers))
+
+
+def _filter(port: Port, button: int, numbers: Numbers) -> Filter:
+    count = port.machine
+    assert isinstance(count, Count)
+    word, name = numbers.held(1 << button), port.buttons[button]
+    press = numbers.get(f"PRESS_{word}", "", count.press[button], f"press.{button}",
+                        f"Ticks that {name} must be seen held in a row to count as down.")
+    release = numbers.get(f"RELEASE_{word}", "", count.release[button], f"release.{button}",
+                          f"Ticks that {name} must be seen open in a row to count as up.")
+    return Filter(button, press, release)
+
+
+def _toggle(port: Port, numbers: Numbers) -> ToggleParts | None:
+    count = port.machine
+    assert isinstance(count, Count)
+    toggle = count.toggle
+    if toggle is None:
+        return None
+    live = grow([count.live[h] if h >> toggle.button & 1 else None for h in range(port.held_count)],
+                _buttons(port))
+    most = max(*toggle.tap, *toggle.hold, 1)
+    # The latch changes under a running counter only where a level button turns it.
+    free = any(count.table[q][h] != q for q in (0, 1) for h in range(port.held_count))
+    above = any((most if free else max(toggle.tap[q], toggle.hold[q])) > toggle.hold[q] for q in (0, 1))
+    return ToggleParts(
+        toggle.button,
+        _pair(numbers, "TAP", toggle.tap, "Open ticks from a press that acted to the next that acts, latch {}."),
+        _pair(numbers, "HOLD", toggle.hold, "The same after a press held until settled, latch {}."),
+        _pair(numbers, "PACE", toggle.pace, "Most that the re-arm counter goes toward HOLD in a held tick, latch {}."),
+        live, most, above,
+    )
+
+
+def _pair(numbers: Numbers, role: str, values: tuple[int, int], about: str) -> tuple[Number, Number]:
+    found = [
+        numbers.get(role, word.upper(), values[q], f"toggle.{role.lower()}.{q}", about.format(word))
+        for q, word in enumerate(("low", "high"))
+    ]
+    return found[0], found[1]
+
+
+# --- memory ---
+
+
+def _fields(port: Port, machine: ChargeParts | CountParts, recorded: tuple[int, ...]) -> list[Field]:
+    fields = [Field("q", 1)]
+    if recorded:
+        fields.append(Field("was", (1 << len(port.buttons)) - 1))
+    if isinstance(machine, ChargeParts):
+        return fields + [Field(name, U16) for name in copies(machine)]
+    fields += [Field(filter_name(port, f.button), f.top) for f in machine.filters]
+    return fields + ([Field("c", machine.toggle.most)] if machine.toggle else [])
+
+
+def copies(machine: ChargeParts) -> tuple[str, ...]:
+    """Return the names of the capacitor copies: ``x``, or ``x0``, ``x1``..."""
+    count = len(machine.starts)
+    return ("x",) if count == 1 else tuple(f"x{k}" for k in range(count))
+
+
+def filter_name(port: Port, button: int) -> str:
+    """Return the name of a button's agreement counter, such as ``n_set``."""
+    return "n_" + Numbers(port).held(1 << button).lower()
+
+
+def _cells(fields: list[Field]) -> tuple[Cell, ...]:
+    """Pack fields into the fewest bytes: first fit, the widest first; wide cells go first in memory."""
+    bins: list[list[Field]] = []
+    for item in sorted(fields, key=lambda f: -f.bits):
+        home = next((b for b in bins if sum(f.bits for f in b) + item.bits <= _width(b[0])), None)
+        bins.append([item]) if home is None else home.append(item)
+    cells = [_cell(sorted(b, key=fields.index), i) for i, b in enumerate(bins)]
+    return tuple(sorted(cells, key=lambda cell: -cell.width))
+
+
+def _width(item: Field) -> int:
+    return 8 if item.bits <= 8 else 16
+
+
+def _cell(fields: list[Field], index: int) -> Cell:
+    width = max(_width(f) for f in fields)
+    shared = "bits" if any(f.name == "q" for f in fields) else f"bits{index}"
+    return Cell(fields[0].name if len(fields) == 1 else shared, width, tuple(fields))
