@@ -10,8 +10,8 @@ from porter.behaviour.model import Band
 from porter.report.numbers import band_range, quantity
 from porter.report.svg import CHARACTER, WIDTH, Drawing, Scale, draw_axis, log_scale
 
-_GUTTER, _RIGHT = 190.0, WIDTH - 24
-_ROW, _TOP = 58.0, 14.0
+_GUTTER, _RIGHT = 210.0, WIDTH - 24
+_ROW, _TOP = 73.0, 24.0
 #: Times farther apart than this many times share a logarithmic axis.
 _LINEAR_REACH = 40.0
 #: What an axis may span at all, in SI units: beyond it a value sits on the edge.
@@ -20,16 +20,21 @@ _TINIEST, _VASTEST = 1e-15, 1e15
 
 @dataclass(frozen=True, slots=True)
 class Bar:
-    """One row: the nominal value, its spread over the parts, and the spread that is guaranteed."""
+    """One row: the nominal value, its spread over the parts, and the spread that is guaranteed, if known."""
 
     label: str
     under: str
     parts: Band
-    guaranteed: Band
+    guaranteed: Band | None
+
+    @property
+    def outer(self) -> Band:
+        """The wider of its bands."""
+        return self.guaranteed or self.parts
 
     def values(self) -> tuple[float | None, ...]:
         """Return all six values."""
-        a, b = self.parts, self.guaranteed
+        a, b = self.parts, self.outer
         return a.nominal, a.least, a.most, b.nominal, b.least, b.most
 
 
@@ -77,18 +82,22 @@ def _draw_tick_line(drawing: Drawing, scale: Scale, tick_s: float, bottom: float
     x = scale(tick_s)
     if scale.start + 3 < x < scale.end - 3:
         drawing.line(x, _TOP - 4, x, bottom, "tick-line")
-    axis = "each decade of equal width" if scale.log else "even time axis"
+    axis = f"{'logarithmic' if scale.log else 'linear'} time axis"
     drawing.text(0, bottom + 15, axis, "small faint", fit=_GUTTER - 40)
 
 
 def _draw_zones(drawing: Drawing, scale: Scale, bar: Bar, y: float) -> None:
-    least, most = scale(bar.guaranteed.least), scale(bar.guaranteed.most)
-    drawing.line(scale.start, y + 40, least, y + 40, "zone-never")
-    drawing.line(least, y + 40, most, y + 40, "zone-either")
-    drawing.line(most, y + 40, scale.end, y + 40, "zone-always")
-    for name, left, right in (("never", scale.start, least), ("either", least, most), ("always", most, scale.end)):
+    least, most = scale(bar.outer.least), scale(bar.outer.most)
+    drawing.line(scale.start, y + 43, least, y + 43, "zone-never")
+    drawing.line(least, y + 43, most, y + 43, "zone-either")
+    drawing.line(most, y + 43, scale.end, y + 43, "zone-always")
+    for name, left, right in (
+        ("never", scale.start, least),
+        ("either", least, most),
+        ("always", most, scale.end),
+    ):
         if right - left >= CHARACTER * len(name) + 4:
-            drawing.text((left + right) / 2, y + 52, name, "small middle")
+            drawing.text((left + right) / 2, y + 56, name, "small middle")
 
 
 def _draw_tick(drawing: Drawing, scale: Scale, bar: Bar, tick_s: float, y: float) -> None:
@@ -106,6 +115,10 @@ _WINDOW_LEGEND = (
     ("guaranteed", "guaranteed by the data sheet"),
     ("tick-bar", "one tick of the port"),
 )
+
+
+_MARGIN_LEGEND = _WINDOW_LEGEND[:3]
+_LEVEL_LEGEND = (("nominal", "nominal"), ("parts", "least to most"))
 
 
 # --- volts ---
@@ -131,14 +144,14 @@ def _volts_chart(key: str, title: str, bars: Sequence[Bar], low: float, high: fl
     bottom = _TOP + row_height * len(bars) + 4
     if zero and scale(0.0) > scale.start:
         drawing.hatch(scale.start, _TOP - 8, scale(0.0) - scale.start, bottom - _TOP + 8, "wrong", 9)
-        drawing.text(scale.start + 2, _TOP - 2, "wrong side", "small")
+        drawing.text(scale.start, _TOP - 12, "wrong side", "small")
     draw_axis(drawing, scale, _TOP, bottom)
     if zero:
         drawing.line(scale(0.0), _TOP - 8, scale(0.0), bottom, "zero")
     for k, bar in enumerate(bars):
         _draw_label(drawing, bar, _TOP + k * row_height)
         _draw_bar(drawing, scale, bar, _TOP + k * row_height)
-    _legend(drawing, bottom + 40, _WINDOW_LEGEND[:3])
+    _legend(drawing, bottom + 40, _MARGIN_LEGEND if zero else _LEVEL_LEGEND)
     return drawing.markup(bottom + 56)
 
 
@@ -151,10 +164,15 @@ def _draw_label(drawing: Drawing, bar: Bar, y: float) -> None:
 
 
 def _draw_bar(drawing: Drawing, scale: Scale, bar: Bar, y: float) -> None:
-    wide, narrow = bar.guaranteed, bar.parts
-    left, right = scale(wide.least), scale(wide.most)
-    drawing.rect(left, y + 15, right - left, 16, "guaranteed")
-    drawing.hatch(left, y + 15, right - left, 16, "guaranteed-hatch", 5)
+    narrow = bar.parts
+    if bar.guaranteed is not None:
+        left, right = scale(bar.guaranteed.least), scale(bar.guaranteed.most)
+        drawing.rect(left, y + 15, right - left, 16, "guaranteed")
+        drawing.hatch(left, y + 15, right - left, 16, "guaranteed-hatch", 5)
+    if bar.outer.most is None:
+        drawing.path(((scale.end, y + 15), (scale.end + 10, y + 23), (scale.end, y + 31)), "endless")
+        if narrow.nominal is not None:
+            drawing.text(scale.end, y + 9, "to never", "small end")
     left, right = scale(narrow.least), scale(narrow.most)
     drawing.rect(left, y + 18, right - left, 10, "parts")
     x = scale(narrow.nominal)
@@ -185,5 +203,6 @@ def _describe(bars: Sequence[Bar], unit: str) -> str:
 
 def _describe_bar(bar: Bar, unit: str) -> str:
     nominal = quantity(bar.parts.nominal, unit)
-    parts, guaranteed = band_range(bar.parts, unit), band_range(bar.guaranteed, unit)
-    return f"{bar.label}, {bar.under}: {nominal}; over part tolerances {parts}; guaranteed {guaranteed}."
+    name = f"{bar.label}, {bar.under}" if bar.under else bar.label
+    guaranteed = f"; guaranteed {band_range(bar.guaranteed, unit)}" if bar.guaranteed is not None else ""
+    return f"{name}: {nominal}; over the parts {band_range(bar.parts, unit)}{guaranteed}."

@@ -10,18 +10,29 @@ from porter.report.page import Block, Cell, Figure, Items, Section, Table, Text,
 from porter.spec.model import Circuit
 from porter.trace import Trace
 
+_WINDOW_NAMES: Mapping[str, str] = {
+    "shortest-press": "shortest press",
+    "re-arm-after-tap": "re-arm after tap",
+    "re-arm-after-hold": "re-arm after hold",
+    "stray-gap": "stray gap",
+}
 _WINDOW_MEANS: Mapping[str, str] = {
     "shortest-press": "the shortest closing, from rest, that changes the output",
     "re-arm-after-tap": "how long the contact must be open after a shortest press before the next press acts",
     "re-arm-after-hold": "the same after a press held until everything has settled",
-    "stray-gap": "the longest opening during a hold, or in release bounce, that doesn't act as a second press",
+    "stray-gap": "the longest opening, in a hold or in release bounce, that doesn't act as a second press",
 }
 
 
 def held_section(behaviour: Behaviour) -> Section:
     """Return the held table."""
     rows = tuple(
-        row(together(r.held), r.start, _settled(r.output), seconds(r.period_s) if r.period_s is not None else "–")
+        row(
+            together(r.held),
+            r.start,
+            _settled(r.output),
+            seconds(r.period_s) if r.period_s is not None else "–",
+        )
         for r in behaviour.held
     )
     heads = ("Held", "From output", "Output once settled", "Period")
@@ -35,16 +46,21 @@ def _settled(output: str) -> Cell:
     return Cell(output, "bad") if output in ("oscillates", "undetermined") else Cell(output)
 
 
-
 def priority_section(behaviour: Behaviour) -> Section:
     """Return who wins, and what decides when several buttons are let go one after the other."""
     winners = tuple(
         row(together(r.held), _settled(r.output), r.winner or "neither alone") for r in behaviour.priority
     )
-    releases = tuple(row(together(r.held), ", then ".join(r.order), _settled(r.output)) for r in behaviour.releases)
+    releases = tuple(
+        row(together(r.held), ", then ".join(r.order), _settled(r.output)) for r in behaviour.releases
+    )
     one = "No two buttons can be held together."
     blocks: tuple[Block, ...] = (
-        Text(f"The circuit is {behaviour.dominance}." if behaviour.dominance else "No side dominates throughout."),
+        Text(
+            f"The circuit is {behaviour.dominance}."
+            if behaviour.dominance
+            else "No side dominates throughout."
+        ),
         Table("Buttons held together", ("Held", "Output", "Whose command wins"), winners, one),
         Table("Order of release", ("All held", "Released", "Output in the end"), releases, one),
     )
@@ -57,7 +73,9 @@ def power_on_section(circuit: Circuit, behaviour: Behaviour) -> Section:
     chosen = circuit.port.power_on or "left to the circuit"
     rows = (row("circuit", _settled(power.output)), row("asked of the port by the spec", chosen))
     table = Table("Output after the supply steps up with no button held", ("Side", "Output"), rows)
-    return Section("power-on", "Power-on", (table, Text(sentence(power.why)) if power.why else Text("No reason given.")))
+    return Section(
+        "power-on", "Power-on", (table, Text(sentence(power.why)) if power.why else Text("No reason given."))
+    )
 
 
 # --- windows ---
@@ -68,20 +86,20 @@ def windows_section(behaviour: Behaviour, tick_s: float) -> Section:
     blocks: list[Block] = [_reading_windows(behaviour)] if behaviour.windows else []
     for k, name in enumerate(dict.fromkeys(w.button for w in behaviour.windows)):
         mine = tuple(w for w in behaviour.windows if w.button == name)
-        bars = tuple(Bar(w.window.replace("-", " "), f"from {w.start}", w.seconds, w.guaranteed) for w in mine)
+        bars = tuple(Bar(_WINDOW_NAMES[w.window], f"from {w.start}", w.seconds, w.guaranteed) for w in mine)
         drawing = windows_chart(f"windows-{k}", f"Windows of button {name}", bars, tick_s)
-        blocks.append(Figure(drawing, f"Windows of button {name}; the bar beneath each is one tick, to scale"))
+        blocks.append(Figure(drawing, f"Windows of button {name}, with one tick to scale beneath each"))
     blocks.append(windows_table(behaviour.windows))
     return Section("windows", "Windows", tuple(blocks))
 
 
 def _reading_windows(behaviour: Behaviour) -> Items:
     kinds = dict.fromkeys(w.window for w in behaviour.windows)
-    meanings = (f"{kind.replace('-', ' ')}: {_WINDOW_MEANS[kind]}" for kind in kinds)
+    meanings = (f"{_WINDOW_NAMES[kind]}: {_WINDOW_MEANS[kind]}" for kind in kinds)
     zones = (
         "“From” is the output that the press in question would change.",
-        "Shorter than the least, no allowed unit acts (never); longer than the most, every unit acts (always); "
-        "between, units differ (either), and any fixed choice of the port is right.",
+        "Shorter than the least, no allowed unit acts (never); longer than the most, every unit "
+        "acts (always); between, units differ (either), and any fixed choice of the port is right.",
     )
     return Items("How to read them", tuple(sentence(text) for text in (*meanings, *zones)))
 
@@ -91,7 +109,7 @@ def windows_table(windows: Sequence[Window]) -> Table:
     rows = tuple(
         row(
             w.button,
-            w.window.replace("-", " "),
+            _WINDOW_NAMES[w.window],
             w.start,
             seconds(w.seconds.nominal),
             band_range(w.seconds, "s"),
@@ -111,13 +129,15 @@ def volts_section(circuit: Circuit, behaviour: Behaviour) -> Section:
     """Return levels and margins, drawn and in numbers."""
     blocks: list[Block] = []
     if behaviour.levels:
-        bars = tuple(Bar(n.name, "", n.volts, n.volts) for n in behaviour.levels)
+        bars = tuple(Bar(n.name, "", n.volts, None) for n in behaviour.levels)
         drawing = levels_chart("levels", "Voltages that matter", bars, circuit.supply.nominal)
         blocks.append(Figure(drawing, "Idle levels, thresholds and output levels"))
     blocks.append(_levels_table(behaviour))
     if behaviour.margins:
         bars = tuple(Bar(m.where, "", m.volts, m.guaranteed) for m in behaviour.margins)
-        blocks.append(Figure(margins_chart("margins", "Margins", bars), "Margins: how far from the threshold"))
+        blocks.append(
+            Figure(margins_chart("margins", "Margins", bars), "Margins: how far from the threshold")
+        )
     blocks.append(margins_table(behaviour.margins))
     return Section("margins", "Voltages and margins", tuple(blocks))
 
@@ -141,7 +161,9 @@ def margins_table(margins: Sequence[Margin]) -> Table:
         for m in margins
     )
     heads = ("Where", "Nominal", "Over part tolerances", "Guaranteed", "Holds", "Comes from")
-    return Table("Margins in numbers; a negative one is on the wrong side", heads, rows, "No margins were given.")
+    return Table(
+        "Margins in numbers; a negative one is on the wrong side", heads, rows, "No margins were given."
+    )
 
 
 def margin_verdict(margin: Margin) -> Cell:

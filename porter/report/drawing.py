@@ -1,6 +1,6 @@
 """The section on the circuit as it was read."""
 
-from porter.report.numbers import NBSP, percent, quantity, seconds, spread
+from porter.report.numbers import percent, quantity, seconds, spread
 from porter.report.page import Block, Cell, Section, Table, Text, row, together
 from porter.spec.model import PINS, Button, Circuit, Intent, Leak, Part, Spread
 
@@ -73,7 +73,9 @@ def _button(button: Button) -> tuple[Cell, ...]:
     bounce = seconds(button.bounce_s) if button.bounce_s is not None else "not stated"
     hazard = Cell(button.hazard, "bad") if button.hazard else Cell("not marked")
     contact = f"normally {button.normally}"
-    return row(button.name, contact, _between(button.nodes), spread(button.resistance, "ohm"), leak, bounce, hazard)
+    return row(
+        button.name, contact, _between(button.nodes), spread(button.resistance, "ohm"), leak, bounce, hazard
+    )
 
 
 def _pins(circuit: Circuit) -> Table:
@@ -100,17 +102,23 @@ def _nodes(circuit: Circuit) -> Table:
 
 
 def _figures(circuit: Circuit) -> Table:
-    rows = tuple(row(key.replace("_", " "), timer_figure(key, value)) for key, value in circuit.timer.values.items())
+    rows = tuple(
+        row(key.replace("_", " "), timer_figure(key, value)) for key, value in circuit.timer.values.items()
+    )
     return Table("Timer figures given in the spec", ("Figure", "Value (least to most)"), rows)
 
 
 def timer_figure(key: str, value: Spread) -> str:
     """Return one of the timer's overridden figures in its unit."""
     if key in _RATIOS:
-        text = spread(Spread(value.nominal, value.least, value.most), "").replace(NBSP, "")
-        return f"{text} of the supply"
+        return f"{_ratio(value)} of the supply"
     unit = next((u for word, u in _FIGURE_UNITS.items() if word in key), "V")
     return spread(value, unit)
+
+
+def _ratio(value: Spread) -> str:
+    nominal = f"{value.nominal:.4g}"
+    return f"{nominal} ({value.least:.4g} to {value.most:.4g})" if value.toleranced else nominal
 
 
 def _intent(circuit: Circuit) -> Table:

@@ -4,7 +4,7 @@ import hashlib
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 
-from porter.port.model import Charge, Count, Port
+from porter.port.model import Charge, Count, Port, Toggle
 from porter.report.drawing import wishes_table
 from porter.report.numbers import count, plural, seconds, volts
 from porter.report.page import Block, Cell, Fold, Listing, Section, Table, Text, row, together
@@ -24,7 +24,9 @@ class Size:
     cycles: int | None = None
 
 
-def firmware_section(circuit: Circuit, port: Port, files: Mapping[str, str], sizes: Sequence[Size]) -> Section:
+def firmware_section(
+    circuit: Circuit, port: Port, files: Mapping[str, str], sizes: Sequence[Size]
+) -> Section:
     """Return how the firmware works, each of its numbers, and its text with line numbers."""
     blocks: list[Block] = [wishes_table(circuit), answer_table(port), *_machine(port), constants_table(port)]
     if sizes:
@@ -86,15 +88,23 @@ def _count(port: Port, machine: Count) -> tuple[Table, ...]:
     )
     heads = ("Button", "Down after being held for", "Up after being open for")
     tables = [Table("Count style: input filters", heads, filters)]
-    toggle = machine.toggle
-    if toggle is not None:
-        rows = tuple(
-            row(f"output {level}", _ticks(toggle.tap[q], port), _ticks(toggle.hold[q], port), count(toggle.pace[q]))
-            for q, level in enumerate(("low", "high"))
-        )
-        heads = ("After turning", "Re-arm after a tap", "Re-arm after a hold", "Ticks gained per tick held")
-        tables.append(Table(f"Count style: the toggle, button {port.buttons[toggle.button]}", heads, rows))
+    if machine.toggle is not None:
+        tables.append(_toggle(port, machine.toggle))
     return tuple(tables)
+
+
+def _toggle(port: Port, toggle: Toggle) -> Table:
+    rows = tuple(
+        row(
+            f"output {level}",
+            _ticks(toggle.tap[q], port),
+            _ticks(toggle.hold[q], port),
+            count(toggle.pace[q]),
+        )
+        for q, level in enumerate(("low", "high"))
+    )
+    heads = ("After turning", "Re-arm after a tap", "Re-arm after a hold", "Ticks gained per tick held")
+    return Table(f"Count style: the toggle, button {port.buttons[toggle.button]}", heads, rows)
 
 
 def _ticks(ticks: int, port: Port) -> str:
@@ -113,7 +123,12 @@ def constants_table(port: Port) -> Table:
 
 def _sizes(sizes: Sequence[Size]) -> Table:
     rows = tuple(
-        row(s.target, count(s.flash), count(s.ram), count(s.cycles) if s.cycles is not None else "not measured")
+        row(
+            s.target,
+            count(s.flash),
+            count(s.ram),
+            count(s.cycles) if s.cycles is not None else "not measured",
+        )
         for s in sizes
     )
     heads = ("Target", "Flash, bytes", "RAM, bytes", "Cycles a step, at most")
@@ -123,17 +138,23 @@ def _sizes(sizes: Sequence[Size]) -> Table:
 # --- evidence ---
 
 
-def evidence_section(port: Port, circuit: Circuit, files: Mapping[str, str], versions: Mapping[str, str]) -> Section:
+def evidence_section(
+    port: Port, circuit: Circuit, files: Mapping[str, str], versions: Mapping[str, str]
+) -> Section:
     """Return the SHA-256 of each file of the job, and the versions of what made it."""
     rows = tuple(
-        row(path, Cell(digest(files[path]), code=True), count(len(_bytes(files[path])))) for path in sorted(files)
+        row(path, Cell(digest(files[path]), code=True), count(len(_bytes(files[path]))))
+        for path in sorted(files)
     )
     made = tuple(row(name, version) for name, version in versions.items())
     blocks: tuple[Block, ...] = (
-        Text(f"Made from {circuit.file}, SHA-256 {port.spec_sha256}. The same spec and versions give the same bytes."),
+        Text(f"Made from {circuit.file}, SHA-256 {port.spec_sha256}."),
         Table("Files of this job", ("File", "SHA-256", "Bytes"), rows, "No files were handed over."),
         Table("Versions", ("Program", "Version"), made, "Not stated."),
-        Fold("The spec as read", (Listing(circuit.file, "spec", tuple(clean_lines(circuit.source).split("\n"))),)),
+        Fold(
+            "The spec as read",
+            (Listing(circuit.file, "spec", tuple(clean_lines(circuit.source).split("\n"))),),
+        ),
     )
     return Section("evidence", "Evidence", blocks)
 

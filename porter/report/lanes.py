@@ -3,6 +3,7 @@
 from bisect import bisect_right
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
+from itertools import pairwise
 from operator import itemgetter
 
 from markupsafe import Markup
@@ -46,7 +47,7 @@ def differences(one: Changes, other: Changes, end_s: float) -> tuple[Gap, ...]:
     """Return the stretches in which two signals have different levels, neighbours merged."""
     times = sorted({0.0, end_s, *(t for t, _ in (*one, *other) if 0 <= t < end_s)})
     found: list[Gap] = []
-    for start, end in zip(times, times[1:], strict=False):
+    for start, end in pairwise(times):
         if level_at(one, start) == level_at(other, start):
             continue
         if found and found[-1].end == start:
@@ -70,7 +71,8 @@ def compare(trace: Trace, tick_s: float) -> str:
     late = [g for g in gaps if g.end - g.start > tick_s * _DUST]
     if late:
         longest = max(g.end - g.start for g in late)
-        return f"The port differs for longer than a tick {plural(len(late), 'time')}, at most {seconds(longest)}."
+        places = plural(len(late), "place")
+        return f"The port differs for longer than a tick in {places}, longest for {seconds(longest)}."
     if gaps:
         return f"Same edges; {plural(len(gaps), 'edge')} up to one tick ({seconds(tick_s)}) apart, hatched."
     return "The port's edges fall together with the circuit's."
@@ -90,7 +92,7 @@ def trace_chart(key: str, trace: Trace, tick_s: float) -> Markup:
         tick_s: the port's tick; longer differences are shaded and named.
     """
     drawing = Drawing(key, trace.title, _describe(trace, tick_s))
-    right = WIDTH - (150 if trace.levels and trace.waves else 20)
+    right = WIDTH - (200 if trace.levels and trace.waves else 20)
     time = Scale(0.0, max(trace.end_s, 1e-12), _LEFT, right, "s")
     top = _draw_volts(drawing, trace, time) if trace.waves else 8.0
     lanes = _lanes(trace)

@@ -4,7 +4,20 @@ from collections.abc import Mapping
 
 from porter.parity.model import LedgerRow, Parity
 from porter.report.numbers import count, plural, seconds, volts
-from porter.report.page import Block, Box, Cell, Fold, Items, Section, Table, Text, Tone, row, sentence, together
+from porter.report.page import (
+    Block,
+    Box,
+    Cell,
+    Fold,
+    Items,
+    Section,
+    Table,
+    Text,
+    Tone,
+    row,
+    sentence,
+    together,
+)
 from porter.spec.model import Acceptance, Circuit
 from porter.vectors.model import Suite
 
@@ -30,7 +43,8 @@ def _row_verdict(ledger: LedgerRow) -> Cell:
 def _counterexample(parity: Parity) -> Table:
     assert parity.counterexample is not None
     rows = tuple(
-        row(count(tick), seconds(tick * parity.tick_s), together(held)) for tick, held in parity.counterexample
+        row(count(tick), seconds(tick * parity.tick_s), together(held))
+        for tick, held in parity.counterexample
     )
     caption = "Counterexample: a sequence from power-on after which circuit and port part"
     return Table(caption, ("Tick", "Time", "Held from then on"), rows, "Power-on alone, with no button held.")
@@ -58,7 +72,9 @@ def _open(parity: Parity) -> tuple[LedgerRow, ...]:
 
 def _open_box(parity: Parity) -> Box:
     items = tuple(f"{r.row}: the circuit {r.circuit}; the port {r.port}" for r in _open(parity))
-    text = "These rows differ and nobody has accepted them; the proof fails until someone does, with a reason."
+    text = (
+        "These rows differ and nobody has accepted them; the proof fails until someone does, with a reason."
+    )
     return Box("bad", "Open differences", text, items)
 
 
@@ -131,7 +147,8 @@ def vectors_section(suite: Suite) -> Section:
         f"({seconds(ticks * suite.tick_s)} of running time), each from power-on."
     )
     rows = tuple(
-        row(c.name, c.purpose, count(c.ticks), seconds(c.ticks * suite.tick_s), count(len(c.held))) for c in suite.cases
+        row(c.name, c.purpose, count(c.ticks), seconds(c.ticks * suite.tick_s), count(len(c.held)))
+        for c in suite.cases
     )
     heads = ("Case", "Shows", "Ticks", "Time", "Steps of the stimulus")
     blocks: list[Block] = [Text(text)]

@@ -14,12 +14,14 @@ from markupsafe import Markup
 from porter.report.numbers import quantity
 
 #: Width of every drawing in its own units; one unit is a CSS pixel at full size.
-WIDTH = 760.0
+WIDTH = 860.0
 #: Roughly how wide a character of the drawing's text is; for fitting, not for measuring.
 CHARACTER = 6.6
 
-_UNPRINTABLE = {c: "\N{REPLACEMENT CHARACTER}" for c in (*range(32), *range(127, 160), 0xFFFE, 0xFFFF)}
-_UNPRINTABLE |= dict.fromkeys(range(0xD800, 0xE000), "\N{REPLACEMENT CHARACTER}")
+#: C0 and C1 controls, lone surrogates and non-characters: XML and HTML hold none of them.
+_UNPRINTABLE = dict.fromkeys(
+    (*range(32), *range(127, 160), *range(0xD800, 0xE000), 0xFFFE, 0xFFFF), "\N{REPLACEMENT CHARACTER}"
+)
 _LINES = {k: v for k, v in _UNPRINTABLE.items() if k not in (9, 10)}
 
 
@@ -65,11 +67,11 @@ class Drawing:
         ends = {"x1": px(x1), "y1": px(y1), "x2": px(x2), "y2": px(y2)}
         ET.SubElement(self._root, "line", {"class": style, **ends})
 
-    def path(self, points: Iterable[tuple[float, float]], style: str, *, closed: bool = False) -> None:
+    def path(self, points: Iterable[tuple[float, float]], style: str) -> None:
         """Add a line through *points*; points that fall together on paper are dropped."""
         places = [f"{px(x)},{px(y)}" for x, y in points]
         kept = [p for i, p in enumerate(places) if i == 0 or p != places[i - 1]]
-        ET.SubElement(self._root, "polygon" if closed else "polyline", {"class": style, "points": " ".join(kept)})
+        ET.SubElement(self._root, "polyline", {"class": style, "points": " ".join(kept)})
 
     def text(self, x: float, y: float, text: str, style: str = "", *, fit: float | None = None) -> None:
         """Add text at its baseline; longer than *fit* pixels it's cut, and whole in its tooltip."""
@@ -83,7 +85,8 @@ class Drawing:
 
     def hatch(self, x: float, y: float, width: float, height: float, style: str, pitch: float = 6) -> None:
         """Fill a rectangle with slanting lines, to tell it from its neighbours without colour."""
-        for step in range(1, min(int((width + height) / pitch) + 1, 400)):
+        lines = min(int((width + height) / pitch) + 1, 400) if width > 0 else 0
+        for step in range(1, lines):
             a = step * pitch
             x1, y1 = (x + a, y) if a <= width else (x + width, y + a - width)
             x2, y2 = (x, y + a) if a <= height else (x + a - height, y + height)
@@ -95,7 +98,7 @@ class Drawing:
         self._root.set("width", px(self.width))
         self._root.set("height", px(height))
         ET.indent(self._root, space=" ")
-        return Markup(ET.tostring(self._root, encoding="unicode"))  # noqa: S704  # built by ElementTree
+        return Markup(ET.tostring(self._root, encoding="unicode"))  # escaped by ElementTree
 
 
 def shorten(text: str, fit: float) -> str:
@@ -125,7 +128,7 @@ class Scale:
         """Return the pixel of *value*, kept inside the axis; None (infinite) is the upper end."""
         if value is None or value >= self.high:
             return self.end
-        if value <= self.low:
+        if not value > self.low:  # what is no number lands here too
             return self.start
         if self.log:
             share = math.log(value / self.low) / math.log(self.high / self.low)
@@ -139,7 +142,7 @@ class Scale:
         return tuple((v, quantity(v, self.unit)) for v in values)
 
 
-def _even_ticks(low: float, high: float, about: int = 6) -> tuple[float, ...]:
+def _even_ticks(low: float, high: float, about: int = 8) -> tuple[float, ...]:
     step = nice_step((high - low) / about)
     first, last = math.ceil(low / step - 1e-9), math.floor(high / step + 1e-9)
     return tuple(k * step for k in range(first, last + 1))
@@ -171,5 +174,3 @@ def draw_axis(drawing: Drawing, scale: Scale, top: float, bottom: float) -> None
         drawing.line(x, top, x, bottom, "grid")
         drawing.text(x, bottom + 15, text, "small middle")
     drawing.line(scale.start, bottom, scale.end, bottom, "axis")
-
-

@@ -46,15 +46,16 @@ def summary(circuit: Circuit, behaviour: Behaviour, port: Port, parity: Parity) 
     open_rows = sum(r.verdict == "differs" and r.accepted is None for r in parity.ledger)
     return (
         f"{circuit.title} was read from {circuit.file}, solved, and ported in the {port.style} style with a "
-        f"tick of {seconds(port.tick_s)}. As drawn, the circuit {_DRAWING[behaviour.verdict]}. The ledger has "
-        f"{plural(len(parity.ledger), 'row')}: {plural(open_rows, 'open difference')} and "
+        f"tick of {seconds(port.tick_s)}. As drawn, the circuit {_DRAWING[behaviour.verdict]}. "
+        f"The ledger has {plural(len(parity.ledger), 'row')}: {plural(open_rows, 'open difference')} and "
         f"{plural(accepted, 'accepted deviation')}."
     )
 
 
 def _drawing_text(behaviour: Behaviour) -> str:
     counts = [
-        plural(sum(f.severity == level for f in behaviour.findings), level) for level in ("error", "warning", "note")
+        plural(sum(f.severity == level for f in behaviour.findings), level)
+        for level in ("error", "warning", "note")
     ]
     return f"The circuit {_DRAWING[behaviour.verdict]}. Findings: {listed(counts)}."
 
@@ -74,7 +75,9 @@ def _finding(finding: Finding) -> Note:
     at = finding.position
     place = f"{at.file}, line {at.line}, column {at.column}"
     tone = _SEVERITY_TONE[finding.severity]
-    return Note(tone, finding.severity, finding.rule, sentence(finding.message), sentence(finding.mend), place)
+    return Note(
+        tone, finding.severity, finding.rule, sentence(finding.message), sentence(finding.mend), place
+    )
 
 
 # --- cautions ---
@@ -140,6 +143,8 @@ def title_block(circuit: Circuit, port: Port, versions: Mapping[str, str]) -> Ta
         row("Port's supply", spread(circuit.port.supply, "V")),
         row("Style and tick", f"{port.style}, {seconds(port.tick_s)}"),
         row("Controller's clock", f"±{percent(circuit.port.clock)}"),
-        row("Made with", ", ".join(f"{name} {version}" for name, version in versions.items()) or "not stated"),
+        row(
+            "Made with", ", ".join(f"{name} {version}" for name, version in versions.items()) or "not stated"
+        ),
     ]
     return Table("Identification", ("Item", "Value"), tuple(rows))

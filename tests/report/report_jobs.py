@@ -109,7 +109,9 @@ _LAMP_CIRCUIT = Circuit(
     ),
     buttons=(
         Button("SET", ("set", "gnd"), "open", Spread.exact(0.1), None, None, None, at(16)),
-        Button("CLEAR", ("clear", "gnd"), "open", Spread.exact(0.1), Spread.exact(10e6), 6.2e-3, None, at(17)),
+        Button(
+            "CLEAR", ("clear", "gnd"), "open", Spread.exact(0.1), Spread.exact(10e6), 6.2e-3, None, at(17)
+        ),
     ),
     outputs=(Output("lamp", "lit", "D1", None, at(19)),),
     intent=(
@@ -184,7 +186,9 @@ _LAMP_PORT = Port(
     start_q=0,
     answer=((0, 0, 0, 0), (1, 1, 1, 1)),
     machine=Count(((0, 1, 0, 0), (1, 1, 0, 0)), (True,) * 4, (1, 1), (1, 1), None),
-    constants=(Constant("press.SET", 1, "ticks until SET counts as down", "at once = 1 tick", "lamp_latch.yaml:16"),),
+    constants=(
+        Constant("press.SET", 1, "ticks until SET counts as down", "at once = 1 tick", "lamp_latch.yaml:16"),
+    ),
     why=("count: every button acts at once, so a latch is all it takes", "tick of 1 ms: fixed by the spec"),
 )
 
@@ -192,7 +196,9 @@ _LAMP_PARITY = Parity(
     verdict="within",
     style="count",
     tick_s=1e-3,
-    closure=Closure(16, 64, 0, None, True, 0, ("for every sequence of presses of any length the answers agree",)),
+    closure=Closure(
+        16, 64, 0, None, True, 0, ("for every sequence of presses of any length the answers agree",)
+    ),
     sequences=Sequences(6, 4096, 0, 0, (1, 7)),
     ledger=(
         LedgerRow("held-table", "8 rows", "8 rows", "same", None),
@@ -220,7 +226,7 @@ _SUITE = Suite(
 FILES = {
     "firmware/c/lamp_latch.h": "#ifndef LAMP_LATCH_H\n#define LAMP_LATCH_H\n\n#include <stdint.h>\n#endif\n",
     "firmware/c/lamp_latch.c": '#include "lamp_latch.h"\n\nstatic const uint8_t x = 1u & 3u;\n',
-    "firmware/micropython/lamp_latch.py": "class LampLatch:\n    def step(self, held):\n        return held < 2\n",
+    "firmware/micropython/lamp_latch.py": "class LampLatch:\n    def step(self, held):\n        return 1\n",
     "vectors/lamp_latch.csv": "case,tick,SET,CLEAR,lamp,purpose\r\n",
 }
 
@@ -283,7 +289,12 @@ def _memory(end_s: float = 3.0, points: int = 3001) -> Trace:
             Wave("memory", times, tuple(map(cap, times))),
             Wave("joined inputs", times, tuple(map(joined, times))),
         ),
-        levels=(("threshold, 2/3 of the supply", 8.0), ("trigger, 1/3 of the supply", 4.0), ("idle", 6.0), ("half", 5.9)),
+        levels=(
+            ("threshold, 2/3 of the supply", 8.0),
+            ("trigger, 1/3 of the supply", 4.0),
+            ("idle", 6.0),
+            ("half", 5.9),
+        ),
     )
 
 
@@ -296,7 +307,14 @@ _TOGGLE_CIRCUIT = replace(
         part("R1", "resistor", ("vcc", "in"), about(10e3, 0.05), "10k ±5%"),
         part("R2", "resistor", ("in", "gnd"), about(10e3, 0.05), "10k ±5%"),
         part("R4", "resistor", ("out", "mem"), about(100e3, 0.05), "100k ±5%"),
-        part("C2", "capacitor", ("mem", "gnd"), about(4.7e-6, 0.2), "4u7 ±20%", leak=Leak(Spread(1e-7, 0, 1e-6), None)),
+        part(
+            "C2",
+            "capacitor",
+            ("mem", "gnd"),
+            about(4.7e-6, 0.2),
+            "4u7 ±20%",
+            leak=Leak(Spread(1e-7, 0, 1e-6), None),
+        ),
         part("K1", "load", ("out", "gnd"), Spread.exact(0), "30 mA", current=about(30e-3, 0.1), relay=True),
     ),
     buttons=(Button("TOGGLE", ("in", "mem"), "open", Spread.exact(0.1), None, 5e-3, None, at(16)),),
@@ -322,19 +340,30 @@ _TOGGLE_BEHAVIOUR = Behaviour(
     power_on=PowerOn("low", "the empty capacitor does not reach the trigger"),
     windows=(
         Window("TOGGLE", "low", "shortest-press", _NOW, _NOW, "contact resistance times C2"),
-        Window("TOGGLE", "high", "re-arm-after-tap", band(0.516, 0.25), Band(0.516, 0.31, 0.82), "R4·C2·ln(…)"),
-        Window("TOGGLE", "high", "re-arm-after-hold", band(0.19, 0.25), Band(0.19, 0.09, None), "R4·C2·ln(…)"),
+        Window(
+            "TOGGLE", "high", "re-arm-after-tap", band(0.516, 0.25), Band(0.516, 0.31, 0.82), "R4·C2·ln(…)"
+        ),
+        Window(
+            "TOGGLE", "high", "re-arm-after-hold", band(0.19, 0.25), Band(0.19, 0.09, None), "R4·C2·ln(…)"
+        ),
         Window("TOGGLE", "low", "re-arm-after-tap", band(0.47, 0.25), Band(0.47, 0.3, 0.74), "R4·C2·ln(…)"),
-        Window("TOGGLE", "low", "stray-gap", band(0.18, 0.25), Band(0.18, 0.08, 0.33), "as re-arm after hold"),
+        Window(
+            "TOGGLE", "low", "stray-gap", band(0.18, 0.25), Band(0.18, 0.08, 0.33), "as re-arm after hold"
+        ),
     ),
     margins=(
         Margin("threshold, idle", Band(2, 1.7, 2.3), Band(2, 1.1, 2.7)),
         Margin("memory charged past the threshold", Band(0.6, 0.4, 0.8), Band(0.6, -0.5, 1.2)),
         Margin("trigger, TOGGLE held", Band(-0.05, -0.2, 0.1), Band(-0.05, -0.3, 0.3)),
     ),
-    levels=(NamedLevel("idle level of in", Band(6, 5.7, 6.3)), NamedLevel("threshold level", Band(8, 7.1, 8.9))),
+    levels=(
+        NamedLevel("idle level of in", Band(6, 5.7, 6.3)),
+        NamedLevel("threshold level", Band(8, 7.1, 8.9)),
+    ),
     findings=(
-        Finding("hold-not-guaranteed", "error", at(3, "fan_toggle.yaml"), "0.480 < 0.5 of the supply", "use cmos"),
+        Finding(
+            "hold-not-guaranteed", "error", at(3, "fan_toggle.yaml"), "0.480 < 0.5 of the supply", "use cmos"
+        ),
     ),
 )
 
@@ -353,7 +382,13 @@ _TOGGLE_PORT = replace(
     answer=((0, 0), (1, 1)),
     machine=Charge(("mem",), (0.0,), (12 / 65535,), (0,), ((_HOLD, _FLIP), (_HOLD, _FLIP))),
     constants=(
-        Constant("move.q0.TOGGLE.end", 32768, "resting level while held, 65536ths", "6.0 V / 12 V", "fan_toggle.yaml:9"),
+        Constant(
+            "move.q0.TOGGLE.end",
+            32768,
+            "resting level while held, 65536ths",
+            "6.0 V / 12 V",
+            "fan_toggle.yaml:9",
+        ),
         Constant("flip.q1.TOGGLE", 40000, "threshold, 65536ths", "8.0 V / 12 V * 60000", "fan_toggle.yaml:3"),
     ),
 )
