@@ -45,7 +45,8 @@ class Test:
     """A flip test on the capacitor copies: ``sum(coeff[k] * X[k])`` against ``limit``.
 
     ``ge`` True: flips when the sum is at least the limit; False: when it is at most the limit.
-    One-capacitor tests always have ``coeff == (1,)`` and a limit in 0..65535.
+    One-capacitor tests always have ``coeff == (1,)`` and a limit in 0..65535; a test that
+    always holds is ``X >= 0``.
     For more capacitors coefficients are in -32767..32767 and all sums fit 32 bits.
     """
 
@@ -62,6 +63,9 @@ class Move:
     kind ``jump``: ``X = end``.
     kind ``shift``: moves toward `end` by ``(|X - end| + (1 << shift >> 1)) >> shift``.
     kind ``multiply``: moves toward `end` by ``(|X - end| * rate + 32768) >> 16`` (rate 1..65535).
+    `only` limits ``shift`` and ``multiply``: ``up`` moves only while ``X < end``, ``down`` only while
+    ``X > end`` (an output that only sources or only sinks); elsewhere the copy stays.
+
     kind ``mix`` (more than one capacitor): ``X = clamp(end + sum over j of
     sgn(d_j) * sgn(keep_j) * ((|d_j| * |keep_j| + 32768) >> 16), 0, 65535)`` with
     ``d_j = X_j - ends[j]`` over all capacitors, `keep` in -65535..65535 (65536ths) where
@@ -74,14 +78,21 @@ class Move:
     rate: int = 0
     keep: tuple[int, ...] = ()
     ends: tuple[int, ...] = ()
+    only: Literal["both", "up", "down"] = "both"
 
 
 @dataclass(frozen=True, slots=True)
 class ChargeMode:
-    """What happens in one ``(q, held)``: when it flips, and how each capacitor copy moves."""
+    """What happens in one ``(q, held)``: when it flips, and how each capacitor copy moves.
 
-    flips: tuple[Test, ...]  # any of them true: the latch flips
+    The latch flips where any of `force` holds, or any of `flips` while none of `blocks` does.
+    ``always`` in a mode that flips whatever the copies are is `force` with a test that always holds.
+    """
+
+    flips: tuple[Test, ...]
     moves: tuple[Move, ...]  # one for each capacitor copy
+    force: tuple[Test, ...] = ()
+    blocks: tuple[Test, ...] = ()
 
 
 @dataclass(frozen=True, slots=True)

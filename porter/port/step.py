@@ -79,9 +79,16 @@ def decide(machine: Charge, q: NDArray[np.uint8], regs: Ints, held: Ints) -> NDA
 def _flips(machine: Charge, q: NDArray[np.uint8], regs: Ints, held: Ints) -> Mask:
     flips = np.zeros(len(q), bool)
     for mode, lanes in _by_mode(machine, q, held):
-        for test in mode.flips:
-            flips[lanes] |= _holds(test, regs[lanes])
+        part = regs[lanes]
+        flips[lanes] = _any(mode.force, part) | (_any(mode.flips, part) & ~_any(mode.blocks, part))
     return flips
+
+
+def _any(tests: tuple[Test, ...], regs: Ints) -> Mask:
+    held = np.zeros(len(regs), bool)
+    for test in tests:
+        held |= _holds(test, regs)
+    return held
 
 
 def _holds(test: Test, regs: Ints) -> Mask:
@@ -117,7 +124,9 @@ def move_copies(move: Move, k: int, regs: Ints) -> Ints:
         by = (far + ((1 << move.shift) >> 1)) >> move.shift
     else:
         by = (far * move.rate + 32768) >> 16
-    return np.where(X < move.end, X + by, X - by)
+    up = (X < move.end) & (move.only != "down")
+    down = (X > move.end) & (move.only != "up")
+    return np.where(up, X + by, np.where(down, X - by, X))
 
 
 def _mix(move: Move, regs: Ints) -> Ints:
