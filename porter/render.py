@@ -27,7 +27,7 @@ def render_findings(findings: Iterable[Finding], source: str, color: bool) -> st
 
 def render_summary(findings: Iterable[Finding]) -> str:
     """Return how many errors and warnings there are, such as ``2 errors, 1 warning``; empty for none."""
-    severities = [finding.severity for finding in findings]
+    severities: list[str] = [finding.severity for finding in findings]
     counts = [(severities.count(kind), kind) for kind in _COLOURS]
     return ", ".join(f"{count} {kind}{'' if count == 1 else 's'}" for count, kind in counts if count)
 

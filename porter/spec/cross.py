@@ -1,5 +1,6 @@
 """Checks between the sections of a spec: names that must exist, meet once, or agree."""
 
+from collections import Counter
 from collections.abc import Callable, Collection, Iterator, Sequence
 from dataclasses import replace
 
@@ -9,6 +10,9 @@ from porter.spec.model import RAILS, Circuit, Intent
 
 #: Names that would collide with a column of the vectors' CSV.
 RESERVED = ("case", "tick", "purpose")
+
+#: Where a drawing has far too many parts, or its timer wasn't read, single nodes are no news.
+MAX_TOUCHES = 300
 
 
 def cross_check(
@@ -21,7 +25,8 @@ def cross_check(
     _targets(desk, draft, nodes)
     _intents(desk, draft)
     _ratios(desk, draft)
-    _lonely(desk, touches, {o.target for o in draft.outputs if o.kind != "lit"})
+    if "output" in draft.timer.pins and len(touches) < MAX_TOUCHES:
+        _lonely(desk, touches, {o.target for o in draft.outputs if o.kind != "lit"})
     _alike(desk, touches)
     warnings = in_order([f for f in desk.findings if f.severity == "warning"])
     return replace(draft, nodes=nodes, positions=dict(desk.positions), warnings=warnings)
@@ -81,12 +86,13 @@ def _column_names(desk: Desk, section: str, names: Sequence[str]) -> None:
 
 def _targets(desk: Desk, draft: Circuit, nodes: Sequence[str]) -> None:
     """Outputs name an LED, or a node that something touches."""
+    unread = [p.name for p in draft.parts if not p.text]
     lamps = [p.name for p in draft.parts if p.kind == "led"]
     kinds = {p.name: p.kind for p in draft.parts}
     for output in draft.outputs:
-        if output.target in ("", *nodes) and output.kind != "lit":
+        if output.target in ("", *(unread if output.kind == "lit" else nodes)):
             continue
-        if output.kind == "lit" and output.target not in ("", *lamps):
+        if output.kind == "lit" and output.target not in lamps:
             known = kinds.get(output.target)
             message = (
                 f"`{output.target}` is a {known}, not an LED"
@@ -161,8 +167,11 @@ def _ratios(desk: Desk, draft: Circuit) -> None:
 def _lonely(desk: Desk, touches: Sequence[tuple[str, Position]], targets: Collection[str]) -> None:
     """Warn of nodes that one thing is on, unless the product takes its output there."""
     names = [name for name, _ in touches]
+    counts = Counter(names)
+    lower = {name: name.lower() for name in names}
+    spellings = Counter(lower[name] for name in set(names))
     for name, place in touches:
-        if name and name not in (*RAILS, *targets) and names.count(name) == 1:
+        if name and name not in (*RAILS, *targets) and counts[name] == 1 and spellings[lower[name]] == 1:
             others = [n for n in dict.fromkeys(names) if n != name]
             desk.warn(
                 "node-touched-once", place, f"only one thing is on node `{name}`", _lonely_mend(name, others)

@@ -109,19 +109,26 @@ class Desk:
             example: what such a mapping looks like, for hints.
         """
         entries = self.table(node, "a mapping", example)
-        for name, entry in entries.items():
-            if name not in known:
-                self._unknown_key(entry.key, known)
-            if path is not None:
+        strangers = [entry.key for name, entry in entries.items() if name not in known]
+        for key in strangers:
+            self._unknown_key(key, known)
+        if path is not None:
+            for name, entry in entries.items():
                 self.remember(f"{path}.{name}" if path else name, entry)
         if isinstance(node, Table):
-            for name in needed:
-                if name not in entries:
-                    place = Position(node.position.file, node.position.line, node.position.column)
-                    self.error("key-missing", place, f"`{name}` is missing", f"add it, as in {example}")
+            meant = {near(key.text, known) for key in strangers if len(key.text) <= MAX_NAME}
+            self._missing(
+                node, [name for name in needed if name not in entries and name not in meant], example
+            )
         return {name: entry.value for name, entry in entries.items() if name in known}
 
+    def _missing(self, node: Table, names: Sequence[str], example: str) -> None:
+        place = Position(node.position.file, node.position.line, node.position.column)
+        for name in names:
+            self.error("key-missing", place, f"`{name}` is missing", f"add it, as in {example}")
+
     def _unknown_key(self, key: Scalar, known: Collection[str]) -> None:
+        word = short(key.text)
         if key.text == "<<":
             self.error(
                 "alias-refused",
@@ -129,13 +136,17 @@ class Desk:
                 "merge keys (`<<`) aren't used in a spec",
                 "write the values out where they are used",
             )
-            return
-        self.error(
-            "key-unknown",
-            key.position,
-            f"`{short(key.text)}` isn't a key here",
-            did_you_mean(key.text, known),
-        )
+        elif re.match(r"\d+\s?[fpnumkKM]?\b", key.text):
+            self.error(
+                "value-unreadable",
+                key.position,
+                f"the comma before `{word}` ends the value",
+                "write decimals with a point, as in `4.7k`",
+            )
+        else:
+            self.error(
+                "key-unknown", key.position, f"`{word}` isn't a key here", did_you_mean(key.text, known)
+            )
 
     def remember(self, path: str, entry: Entry) -> None:
         """Keep the place of an item: the value where it is a single one, else the key."""

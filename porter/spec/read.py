@@ -14,6 +14,7 @@ from porter.spec.desk import NODE, Desk
 from porter.spec.model import (
     LEDGER_ROWS,
     PINS,
+    RAILS,
     Acceptance,
     Button,
     Circuit,
@@ -204,9 +205,16 @@ def _spec_error(desk: Desk, text: str) -> SpecError:
 
 
 def _circuit(desk: Desk, root: Node, text: str) -> Circuit:
-    if isinstance(root, Table):
-        _second_timer(desk, root)
-    found = desk.fields(root, "", TOP_KEYS, ("circuit", "supply", "timer", "buttons"), "the shipped specs")
+    if not isinstance(root, Table):
+        desk.error(
+            "wrong-kind",
+            root.position,
+            "a spec is a mapping of keys to values",
+            "begin with `circuit: My latch`",
+        )
+        raise _spec_error(desk, text)
+    known = (*TOP_KEYS, *_second_timers(desk, root))
+    found = desk.fields(root, "", known, ("circuit", "supply", "timer", "buttons"), "the shipped specs")
     title = desk.text(found["circuit"], "a title", "`My latch`") if "circuit" in found else ""
     supply = desk.quantity(found["supply"], units.SUPPLY) if "supply" in found else Spread.exact(5.0)
     timer = _timer(desk, found["timer"]) if "timer" in found else _no_timer(desk)
@@ -236,15 +244,14 @@ def _circuit(desk: Desk, root: Node, text: str) -> Circuit:
 # --- timer ----------------------------------------------------------------------------------
 
 
-def _second_timer(desk: Desk, root: Table) -> None:
-    for name, entry in root.entries.items():
-        if re.fullmatch(r"timers|timer_?\d+", name):
-            desk.error(
-                "two-timers",
-                entry.key.position,
-                f"`{name}`: a spec has one `timer`",
-                "porter ports one timer at a time: write one spec for each",
-            )
+def _second_timers(desk: Desk, root: Table) -> list[str]:
+    """Note keys such as ``timer2`` and return them."""
+    names = [name for name in root.entries if re.fullmatch(r"timers|timer_?\d+", name)]
+    for name in names:
+        where = root.entries[name].key.position
+        mend = "porter ports one timer at a time: write one spec for each"
+        desk.error("two-timers", where, f"`{name}`: a spec has one `timer`", mend)
+    return names
 
 
 def _no_timer(desk: Desk) -> Timer:
@@ -285,7 +292,7 @@ def _timer(desk: Desk, node: Node) -> Timer:
 def _pins(desk: Desk, node: Node) -> dict[str, tuple[str, Position]]:
     found = desk.fields(node, "timer.pins", PINS, ("output",), "`{trigger: set, reset: clear, output: out}`")
     pins = {name: (_node_name(desk, value), value.position) for name, value in found.items()}
-    if "output" in pins and pins["output"][0] in ("vcc", "gnd"):
+    if "output" in pins and pins["output"][0] in RAILS:
         desk.error(
             "output-on-rail",
             pins["output"][1],
@@ -296,15 +303,13 @@ def _pins(desk: Desk, node: Node) -> dict[str, tuple[str, Position]]:
 
 
 def _node_name(desk: Desk, node: Node) -> str:
+    """Return a node's name; an empty text where there is none."""
     name = desk.name(node, "a node name", NODE)
-    for rail in ("vcc", "gnd"):
-        if name != rail and name.lower() == rail:
-            desk.error(
-                "rail-misspelt",
-                node.position,
-                f"`{name}` isn't the rail `{rail}`",
-                f"write `{rail}`; node names are case-sensitive",
-            )
+    rail = name.lower()
+    if rail in RAILS and name != rail:
+        mend = f"write `{rail}`; node names are case-sensitive"
+        desk.error("rail-misspelt", node.position, f"`{name}` isn't the rail `{rail}`", mend)
+        return rail
     return name
 
 
@@ -345,7 +350,6 @@ def _entries(desk: Desk, node: Node, section: str, most: int, example: str) -> d
             f"{len(entries)} {section}, and at most {most} can be handled",
             "split the drawing into several specs",
         )
-        entries = dict(list(entries.items())[:most])
     for name, entry in entries.items():
         desk.name_fits(name, entry.key.position, f"a name among the {section}")
         desk.remember(f"{section}.{name}", entry)

@@ -1,0 +1,39 @@
+"""What all tests share: golden files and the flag that rewrites them.
+
+``pytest --update-golden`` rewrites; where CI is set the flag is refused, so that a
+build can't approve its own output.
+"""
+
+import os
+from collections.abc import Callable
+from pathlib import Path
+
+import pytest
+
+
+def pytest_addoption(parser: pytest.Parser) -> None:
+    parser.addoption(
+        "--update-golden", action="store_true", help="rewrite the golden files instead of comparing"
+    )
+
+
+def pytest_configure(config: pytest.Config) -> None:
+    if config.getoption("--update-golden") and os.environ.get("CI"):
+        raise pytest.UsageError(
+            "--update-golden is refused where CI is set: look at the change, then commit it"
+        )
+
+
+@pytest.fixture
+def golden(request: pytest.FixtureRequest) -> Callable[[Path, str], None]:
+    """Return a check that a text is the same as the golden file, byte for byte."""
+
+    def check(path: Path, text: str) -> None:
+        if request.config.getoption("--update-golden"):
+            path.parent.mkdir(parents=True, exist_ok=True)
+            path.write_text(text, encoding="utf-8", newline="")
+        assert path.exists(), f"{path} is missing: make it with `pytest --update-golden`, and read it"
+        expected = path.read_bytes().decode("utf-8")
+        assert expected == text, f"{path} differs; `pytest --update-golden` rewrites it"
+
+    return check
