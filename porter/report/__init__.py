@@ -8,7 +8,7 @@ from collections.abc import Mapping, Sequence
 from importlib.metadata import PackageNotFoundError, version
 from types import MappingProxyType
 
-from markupsafe import Markup
+from markupsafe import Markup, escape
 
 from porter.behaviour.model import Behaviour
 from porter.parity.model import Parity
@@ -72,7 +72,7 @@ def render(
         circuit_section(circuit),
         held_section(behaviour),
         priority_section(behaviour),
-        power_on_section(circuit, behaviour),
+        power_on_section(circuit, behaviour, port),
         windows_section(behaviour, port.tick_s),
         volts_section(circuit, behaviour),
         memory_section(traces, port.tick_s),
@@ -89,8 +89,18 @@ def render(
 
 
 def _page(title: str, sections: Sequence[Section], **more: object) -> str:
-    template = environment().overlay(finalize=_finished).get_template("report.html.j2")
-    return template.render(title=title, sections=sections, **more)
+    templates = environment().overlay(finalize=_finished)
+    templates.filters["quoted"] = quoted
+    return templates.get_template("report.html.j2").render(title=title, sections=sections, **more)
+
+
+def quoted(text: str) -> Markup:
+    """Return a finding's text escaped, with what stands between backticks set as code."""
+    pieces = [escape(clean_lines(piece)) for piece in text.split("`")]
+    if len(pieces) % 2 == 0:  # an odd backtick is no quotation mark
+        return escape(clean_lines(text))
+    code = Markup("<code>{}</code>")
+    return Markup("").join(code.format(piece) if k % 2 else piece for k, piece in enumerate(pieces))
 
 
 def _finished(value: object) -> object:

@@ -47,6 +47,25 @@ def finite(bars: Iterable[Bar]) -> tuple[float, ...]:
 # --- windows ---
 
 
+def companions(bars: Sequence[Bar]) -> tuple[tuple[Bar, ...], ...]:
+    """Split *bars* into groups that share an even axis well, shortest times first.
+
+    Bars that are zero or endless throughout fit any axis and go with the longest times.
+    """
+    sized = [(values, bar) for bar in bars if (values := tuple(v for v in finite((bar,)) if v >= _TINIEST))]
+    groups: list[list[Bar]] = []
+    least = 0.0
+    for values, bar in sorted(sized, key=lambda item: max(item[0])):
+        if not groups or max(values) > _LINEAR_REACH * least:
+            groups.append([])
+            least = min(values)
+        groups[-1].append(bar)
+        least = min(least, *values)
+    rest = [bar for bar in bars if not any(bar is other for _, other in sized)]
+    groups = [*groups[:-1], groups[-1] + rest] if groups else [rest]
+    return tuple(tuple(bar for bar in bars if any(bar is b for b in group)) for group in groups if group)
+
+
 def windows_chart(key: str, title: str, bars: Sequence[Bar], tick_s: float) -> Markup:
     """Draw windows on one time axis, with the zones *never*, *either*, *always* and the tick to scale.
 
@@ -72,7 +91,7 @@ def windows_chart(key: str, title: str, bars: Sequence[Bar], tick_s: float) -> M
 def time_scale(values: Sequence[float], tick_s: float) -> Scale:
     """Return an axis for times and one tick: even, or by decades where the times lie far apart."""
     above = [v for v in values if v >= _TINIEST]
-    if above and max(above) > _LINEAR_REACH * min(above):
+    if above and (max(above) > _LINEAR_REACH * min(above) or tick_s > _LINEAR_REACH * max(above)):
         return log_scale([*above, max(tick_s, _TINIEST)], _GUTTER, _RIGHT, "s")
     high = max([*(1.2 * v for v in above), 6 * tick_s, _TINIEST])
     return Scale(0.0, high, _GUTTER, _RIGHT, "s")
@@ -171,7 +190,7 @@ def _draw_bar(drawing: Drawing, scale: Scale, bar: Bar, y: float) -> None:
         drawing.hatch(left, y + 15, right - left, 16, "guaranteed-hatch", 5)
     if bar.outer.most is None:
         drawing.path(((scale.end, y + 15), (scale.end + 10, y + 23), (scale.end, y + 31)), "endless")
-        if narrow.nominal is not None:
+        if scale(narrow.nominal) < scale.end - 110:
             drawing.text(scale.end, y + 9, "to never", "small end")
     left, right = scale(narrow.least), scale(narrow.most)
     drawing.rect(left, y + 18, right - left, 10, "parts")

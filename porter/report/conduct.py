@@ -3,7 +3,8 @@
 from collections.abc import Mapping, Sequence
 
 from porter.behaviour.model import Behaviour, Margin, Window
-from porter.report.bars import Bar, levels_chart, margins_chart, windows_chart
+from porter.port.model import Port
+from porter.report.bars import Bar, companions, levels_chart, margins_chart, windows_chart
 from porter.report.lanes import compare, trace_chart
 from porter.report.numbers import band_range, seconds, volts
 from porter.report.page import Block, Cell, Figure, Items, Section, Table, Text, row, sentence, together
@@ -67,11 +68,15 @@ def priority_section(behaviour: Behaviour) -> Section:
     return Section("priority", "Who wins", blocks)
 
 
-def power_on_section(circuit: Circuit, behaviour: Behaviour) -> Section:
+def power_on_section(circuit: Circuit, behaviour: Behaviour, port: Port) -> Section:
     """Return what happens when the supply comes up."""
     power = behaviour.power_on
     chosen = circuit.port.power_on or "left to the circuit"
-    rows = (row("circuit", _settled(power.output)), row("asked of the port by the spec", chosen))
+    rows = (
+        row("circuit", _settled(power.output)),
+        row("asked of the port by the spec", chosen),
+        row("port", "high" if port.start_q else "low"),
+    )
     table = Table("Output after the supply steps up with no button held", ("Side", "Output"), rows)
     return Section(
         "power-on", "Power-on", (table, Text(sentence(power.why)) if power.why else Text("No reason given."))
@@ -82,15 +87,25 @@ def power_on_section(circuit: Circuit, behaviour: Behaviour) -> Section:
 
 
 def windows_section(behaviour: Behaviour, tick_s: float) -> Section:
-    """Return windows as a chart for each button and a table for all."""
+    """Return windows as charts for each button and a table for all."""
     blocks: list[Block] = [_reading_windows(behaviour)] if behaviour.windows else []
     for k, name in enumerate(dict.fromkeys(w.button for w in behaviour.windows)):
         mine = tuple(w for w in behaviour.windows if w.button == name)
-        bars = tuple(Bar(_WINDOW_NAMES[w.window], f"from {w.start}", w.seconds, w.guaranteed) for w in mine)
-        drawing = windows_chart(f"windows-{k}", f"Windows of button {name}", bars, tick_s)
-        blocks.append(Figure(drawing, f"Windows of button {name}, with one tick to scale beneath each"))
+        blocks += _windows_figures(f"windows-{k}", name, mine, tick_s)
     blocks.append(windows_table(behaviour.windows))
     return Section("windows", "Windows", tuple(blocks))
+
+
+def _windows_figures(key: str, button: str, windows: Sequence[Window], tick_s: float) -> list[Figure]:
+    bars = tuple(Bar(_WINDOW_NAMES[w.window], f"from {w.start}", w.seconds, w.guaranteed) for w in windows)
+    groups = companions(bars)
+    figures = []
+    for k, group in enumerate(groups):
+        part = f", part {k + 1} of {len(groups)}" if len(groups) > 1 else ""
+        title = f"Windows of button {button}{part}"
+        drawing = windows_chart(f"{key}-{k}", title, group, tick_s)
+        figures.append(Figure(drawing, f"{title}, with one tick to scale beneath each"))
+    return figures
 
 
 def _reading_windows(behaviour: Behaviour) -> Items:

@@ -124,8 +124,13 @@ def parity_section(parity: Parity) -> Section:
         row("sequences that meet grey", count(tried.grey)),
     )
     said = tuple(map(sentence, closure.said))
+    sampling = (
+        "Circuit and port are compared with buttons that change on tick boundaries. A real edge falls "
+        f"between two ticks and is seen at the next, one tick ({seconds(parity.tick_s)}) late at most."
+    )
     blocks: list[Block] = [Items("In words", said)] if said else []
     blocks += [
+        Text(sampling),
         Table("Closure: the walk over every reachable state", ("Item", "Found"), walk),
         Table("Sequences: every one run, circuit against port", ("Item", "Found"), literal),
     ]

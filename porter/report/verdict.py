@@ -7,7 +7,20 @@ from porter.findings import Finding
 from porter.parity.model import Parity
 from porter.port.model import Port
 from porter.report.numbers import percent, plural, seconds, spread
-from porter.report.page import Block, Box, Items, Note, Section, Table, Text, Tone, listed, row, sentence
+from porter.report.page import (
+    Block,
+    Box,
+    Cell,
+    Items,
+    Note,
+    Section,
+    Table,
+    Text,
+    Tone,
+    listed,
+    row,
+    sentence,
+)
 from porter.spec.model import Circuit
 
 DRAWING_TONE: Mapping[str, Tone] = {"sound": "good", "typical-only": "fair", "faulty": "bad"}
@@ -19,9 +32,9 @@ _DRAWING = {
 }
 PARITY_TONE: Mapping[str, Tone] = {"same": "good", "within": "fair", "differs": "bad"}
 _PARITY = {
-    "same": "same as the circuit",
-    "within": "within the circuit's own spread, or with accepted deviations",
-    "differs": "differs from the circuit",
+    "same": "the same as the circuit",
+    "within": "the same within the circuit's own spread or with accepted deviations",
+    "differs": "different from the circuit",
 }
 _SEVERITY_TONE: Mapping[str, Tone] = {"error": "bad", "warning": "fair", "note": ""}
 
@@ -46,7 +59,8 @@ def summary(circuit: Circuit, behaviour: Behaviour, port: Port, parity: Parity) 
     open_rows = sum(r.verdict == "differs" and r.accepted is None for r in parity.ledger)
     return (
         f"{circuit.title} was read from {circuit.file}, solved, and ported in the {port.style} style with a "
-        f"tick of {seconds(port.tick_s)}. As drawn, the circuit {_DRAWING[behaviour.verdict]}. "
+        f"tick of {seconds(port.tick_s)}. The drawing is {behaviour.verdict}; "
+        f"the port is {_PARITY[parity.verdict]}. "
         f"The ledger has {plural(len(parity.ledger), 'row')}: {plural(open_rows, 'open difference')} and "
         f"{plural(accepted, 'accepted deviation')}."
     )
@@ -137,7 +151,7 @@ def title_block(circuit: Circuit, port: Port, versions: Mapping[str, str]) -> Ta
     """Return the figures that identify the job."""
     rows = [
         row("Spec file", circuit.file),
-        row("Spec SHA-256", port.spec_sha256),
+        row("Spec SHA-256", Cell(port.spec_sha256, code=True)),
         row("Timer family", circuit.timer.family),
         row("Circuit's supply", spread(circuit.supply, "V")),
         row("Port's supply", spread(circuit.port.supply, "V")),

@@ -9,6 +9,7 @@ from report_jobs import LAMP, TOGGLE
 from report_reader import check
 
 from porter.behaviour.model import Band, Margin, NamedLevel, Window
+from porter.report.bars import Bar, companions
 from porter.report.lanes import differences, level_at, stretches
 from porter.report.numbers import NEVER, quantity
 from porter.report.svg import Scale, nice_step
@@ -27,6 +28,8 @@ def bands(values: st.SearchStrategy[float | None]) -> st.SearchStrategy[Band]:
 
 WINDOWS = st.builds(Window, NAMES, LEVELS, KINDS, bands(TIMES), bands(TIMES), NAMES)
 MARGINS = st.builds(Margin, NAMES, bands(VOLTS), bands(VOLTS), NAMES)
+SHORT, LONG = Band(2e-6, 1e-6, 3e-6), Band(0.5, 0.4, 0.6)
+BARS = st.builds(Bar, NAMES, LEVELS, bands(TIMES), bands(TIMES))
 CHANGES = st.lists(st.tuples(st.floats(0, 10), st.integers(0, 1)), max_size=8).map(lambda c: tuple(sorted(c)))
 TICKS = st.sampled_from([1e-9, 1e-3, 1.0, 3600.0])
 
@@ -58,6 +61,21 @@ def test_any_trace(
         name, end_s, buttons, {name: circuit}, {name: port}, circuit, waves, ((name, 1.0), (name, 1.0))
     )
     check(replace(TOGGLE, traces=(trace,)).html())
+
+
+@given(st.lists(BARS, max_size=8))
+def test_every_bar_is_drawn_once(bars: list[Bar]) -> None:
+    """Windows far apart get axes of their own; none is lost and none drawn twice."""
+    drawn = [bar for group in companions(bars) for bar in group]
+    assert sorted(map(id, drawn)) == sorted(map(id, bars))
+
+
+def test_windows_far_apart_do_not_share_an_axis() -> None:
+    """A press of microseconds beside a re-arm of half a second would shrink one of them to nothing."""
+    short, long, none = (
+        Bar(n, "", b, b) for n, b in (("a", SHORT), ("b", LONG), ("c", Band(0.0, 0.0, None)))
+    )
+    assert companions((long, short, none)) == ((short,), (long, none))
 
 
 @given(CHANGES, CHANGES)
