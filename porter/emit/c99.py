@@ -1,6 +1,7 @@
 """Writes a port in C99: fits 8-bit parts, and means the same with an ``int`` of 16 bits as with one of 32."""
 
-from porter.emit import trees
+import re
+
 from porter.emit.language import Job, banner, microseconds, why
 from porter.emit.lower import (
     All,
@@ -23,7 +24,7 @@ from porter.emit.lower import (
 )
 from porter.emit.names import comment, string, unique
 from porter.emit.numbers import Number, wrap
-from porter.emit.trees import LATCH, Syntax, branch, leaves, render
+from porter.emit.trees import LATCH, Leaf, Syntax, Tree, branch, leaves, render
 from porter.port.model import Port
 from porter.vectors.model import Case, Suite
 
@@ -59,6 +60,8 @@ class Core:
     def context(self) -> dict[str, object]:
         """Return the context for every template of the folder."""
         port, parts = self.port, self.parts
+        step, init, idle = self._step(), self._init(), self._idle()
+        words = set(re.findall(r"\w+", "\n".join([*step, *init, *idle])))
         return {
             "name": self.name,
             "prefix": self.prefix,
@@ -68,11 +71,11 @@ class Core:
             "buttons": _bits(self.buttons, port.buttons),
             "outputs": _bits(self.outputs, port.outputs),
             "members": [self._member(cell) for cell in parts.cells],
-            "numbers": [self._define(number) for number in parts.numbers],
-            "helpers": self._helpers(),
-            "init": self._init(),
-            "step": self._step(),
-            "idle": self._idle(),
+            "numbers": [self._define(number) for number in parts.numbers if self._ref(number) in words],
+            "helpers": [h for h in ("clamp", "kept", "shift", "rate") if f"{self.name}_{h}" in words],
+            "init": init,
+            "step": step,
+            "idle": idle,
             "recovery": recovery(parts),
             "suite": suite_rows(self.job.suite),
             "title": string(port.title),
@@ -132,7 +135,7 @@ class Core:
 
     def _answer(self) -> list[str]:
         tree = self.parts.answer
-        if isinstance(tree, trees.Leaf) and tree.value is not None:
+        if isinstance(tree, Leaf) and tree.value is not None:
             return [f"return {self._bits(tree.value)};"]
         lines = render(tree, self._ask, lambda pair: [f"active = {self._bits(pair)};"], SYNTAX)
         return ["/* Answer for the latch and the buttons as they are. */", "uint8_t active;", *lines, "return active;"]
@@ -313,42 +316,59 @@ class Core:
         terms = [f"({self._ref(w)} * (int32_t){x})" for x, w in zip(names, test.weights, strict=True) if w.value]
         return f"({' + '.join(terms) or 'INT32_C(0)'}) {test.operator} {self._ref(test.limit)}"
 
-    def _move(self, ends: trees.Tree[End], amounts: trees.Tree[Amount], x: str, y: str) -> list[str]:
-        targets = set(leaves(ends))
-        if targets == {"stay"}:
-            return [] if x == y else [f"uint16_t {y} = {x};"]
-        kinds = {amount.kind for amount in leaves(amounts)}
-        if kinds == {"whole"}:
-            opened = [] if x == y else [f"uint16_t {y} = {x};"]
-            return opened + render(ends, self._ask, lambda e: [] if e == "stay" else [f"{y} = {self._end(e, x)};"], SYNTAX)
-        k = x[1:]
-        end, by = f"end{k}", f"by{k}"
-        target = render(ends, self._ask, lambda e: [f"{end} = {self._end(e, x)};"], SYNTAX)
-        if len(targets) == 1:
-            target = []
-            end = self._end(next(iter(targets)), x)
-        else:
-            target = [f"uint16_t {end};", *target]
-        part = render(amounts, self._ask, lambda a: self._part(a, by), SYNTAX)
+    def _move(self, ends: Tree[End], amounts: Tree[Amount], x: str, y: str) -> list[str]:
+        opened = [] if x == y else [f"uint16_t {y} = {x};"]
+        if not leaves(amounts):  # only jumps and rests
+            return opened + render(ends, self._ask, lambda e: self._jump(e, y), SYNTAX)
+        end, by = f"end{x[1:]}", f"by{x[1:]}"
+        target = render(ends, self._ask, lambda e: self._aim(e, y, end), SYNTAX)
+        declared, part = self._part(amounts, by, x[1:])
         return [
+            *opened,
+            f"uint16_t {end};",
+            *declared,
             *target,
-            f"uint16_t {by} = ({x} < {end}) ? (uint16_t)({end} - {x}) : (uint16_t)({x} - {end});",
-            *part,
-            f"{'' if x == y else 'uint16_t '}{y} = ({x} < {end}) ? (uint16_t)({x} + {by}) : (uint16_t)({x} - {by});",
+            f"uint16_t {by} = ({y} < {end}) ? (uint16_t)({end} - {y}) : (uint16_t)({y} - {end});",
+            part,
+            f"{y} = ({y} < {end}) ? (uint16_t)({y} + {by}) : (uint16_t)({y} - {by});",
         ]
 
-    def _end(self, end: End, x: str) -> str:
-        return x if isinstance(end, str) else self._ref(end)
+    def _aim(self, end: End, x: str, name: str) -> list[str]:
+        """Return the lines that set the target; a jump goes there at once, and the motion finds nothing left."""
+        if end.number is None:
+            return [f"{name} = {x};"]
+        return [*(self._jump(end, x) if end.whole else []), f"{name} = {self._target(end, x)};"]
 
-    def _part(self, amount: Amount, by: str) -> list[str]:
-        if amount.number is None:
-            return []
-        ref = self._ref(amount.number)
-        if amount.kind == "rate":
-            return [f"{by} = (uint16_t)((((uint32_t){by} * {ref}) + 32768u) >> 16u);"]
-        if amount.wraps:
-            return [f"{by} = (uint16_t)(({by} >> {ref}) + (({by} >> ({ref} - 1u)) & 1u));"]
-        return [f"{by} = (uint16_t)(({by} + (1u << ({ref} - 1u))) >> {ref});"]
+    def _jump(self, end: End, x: str) -> list[str]:
+        return [] if end.number is None else [f"{x} = {self._target(end, x)};"]
+
+    def _target(self, end: End, x: str) -> str:
+        if end.number is None:
+            return x
+        ref = self._ref(end.number)
+        test = {"up": f"({x} < {ref})", "down": f"({x} > {ref})"}.get(end.only)
+        return f"{test} ? {ref} : {x}" if test else ref
+
+    def _part(self, amounts: Tree[Amount], by: str, k: str) -> tuple[list[str], str]:
+        """Return the lines that choose the shift or rate, and the line that takes that part of the distance."""
+        used = set(leaves(amounts))
+        kind = next(iter(used)).kind
+        name = f"{kind}{k}"
+        if len(used) == 1:
+            chosen, name = [], self._ref(next(iter(used)).number)
+        else:
+            tree = render(amounts, self._ask, lambda a: [f"{name} = {self._ref(a.number)};"], SYNTAX)
+            chosen = [f"uint{8 if kind == 'shift' else 16}_t {name};", *tree]
+        if kind == "rate":
+            return chosen, f"{by} = (uint16_t)((((uint32_t){by} * {name}) + 32768u) >> 16u);"
+        return chosen, self._shifted(by, name, min(amount.number.value for amount in used))
+
+    def _shifted(self, by: str, shift: str, least: int) -> str:
+        """Return the line for a rounded shift that can't leave 16 bits on the way."""
+        half = f"(uint16_t)({by} >> ({shift} - 1u))"
+        if least > 1:
+            return f"{by} = (uint16_t)((uint16_t)({half} + 1u) >> 1u);"
+        return f"{by} = (uint16_t)((uint16_t)({by} >> {shift}) + ({half} & 1u));"
 
     def _mixed(self, leaf: Alone | Mix, x: str, y: str, names: tuple[str, ...]) -> list[str]:
         if isinstance(leaf, Mix):
@@ -356,10 +376,8 @@ class Core:
                      zip(leaf.keep, names, leaf.ends, strict=True) if keep.value]
             total = " ".join([f"(int32_t){self._ref(leaf.end)}", *terms])
             return [f"{y} = {self.name}_clamp({total});"]
-        if leaf.end == "stay":
-            return [f"{y} = {x};"]
-        end = self._end(leaf.end, x)
-        if leaf.amount.number is None:
+        end = self._target(leaf.end, x)
+        if leaf.amount is None:
             return [f"{y} = {end};"]
         return [f"{y} = {self.name}_{leaf.amount.kind}({x}, {end}, {self._ref(leaf.amount.number)});"]
 
@@ -368,11 +386,6 @@ class Core:
         if keep.value == 65536:
             return f"{mark} ((int32_t){x} - (int32_t){self._ref(end)})"
         return f"{mark} {self.name}_kept({x}, {self._ref(end)}, {self._ref(keep)})"
-
-    def _helpers(self) -> list[str]:
-        """Return which static functions of the template the step needs."""
-        text = "\n".join(self._step())
-        return [h for h in ("clamp", "kept", "shift", "rate") if f"{self.name}_{h}(" in text]
 
 
 def _bits(words: tuple[str, ...], names: tuple[str, ...]) -> list[dict[str, str]]:

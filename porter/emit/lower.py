@@ -3,7 +3,7 @@
 Every language writes the same parts, so that a merge or a bound is worked out once, here.
 """
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from itertools import product
 from typing import Literal
 
@@ -75,26 +75,62 @@ def tighten(tests: All) -> All | None:
     return tuple(kept)
 
 
-def flips(forward: tuple[Compare, ...], back: tuple[Compare, ...]) -> Any:
-    """Return when the latch flips and stays: any of *forward* holds and none of *back*."""
-    found = (tighten((test, *(other.inverse() for other in back))) for test in forward)
-    kept = tuple(dict.fromkeys(alternative for alternative in found if alternative is not None))
-    return ((),) if () in kept else kept
+@dataclass(frozen=True, slots=True)
+class Tests:
+    """One mode's tests: the latch flips where any of `force` holds, or any of `flips` and none of `blocks`."""
+
+    flips: tuple[Compare, ...]
+    force: tuple[Compare, ...]
+    blocks: tuple[Compare, ...]
+
+    def holds(self) -> list[All]:
+        """Return the alternatives that make the mode flip."""
+        free = tuple(test.inverse() for test in self.blocks)
+        return [(test,) for test in self.force] + [(test, *free) for test in self.flips]
+
+    def fails(self) -> list[All]:
+        """Return the alternatives that keep the mode from flipping."""
+        calm = tuple(test.inverse() for test in self.force)
+        still = tuple(test.inverse() for test in self.flips)
+        return [(*calm, *still)] + ([(*calm, test) for test in self.blocks] if self.flips else [])
+
+
+def flips(forward: Tests, back: Tests) -> Any:
+    """Return when the latch flips and stays: *forward* holds and *back*, the mode behind the flip, doesn't."""
+    found = (tighten((*go, *stay)) for go, stay in product(forward.holds(), back.fails()))
+    kept = list(dict.fromkeys(alternative for alternative in found if alternative is not None))
+    return tuple(a for i, a in enumerate(kept) if not any(_covers(b, a, j < i) for j, b in enumerate(kept) if j != i))
+
+
+def _covers(wide: All, narrow: All, first: bool) -> bool:
+    """Whether *wide* holds wherever *narrow* does; of two equal ones the *first* covers the other."""
+    covers = all(tighten((test.inverse(), *narrow)) is None for test in wide)
+    return covers and (first or not all(tighten((test.inverse(), *wide)) is None for test in narrow))
 
 
 # --- motion ---
 
-#: A capacitor copy's target: a number, or ``"stay"``.
-End = Number | Literal["stay"]
+@dataclass(frozen=True, slots=True)
+class End:
+    """Where a copy goes: a number, or nowhere (None).
+
+    `only`: ``up`` goes there from below only, ``down`` from above only; `whole`: all the way in one tick.
+    """
+
+    number: Number | None
+    only: Literal["both", "up", "down"] = "both"
+    whole: bool = False
+
+
+STAY = End(None)
 
 
 @dataclass(frozen=True, slots=True)
 class Amount:
-    """How far a copy goes in one tick: the whole way, or by a shift or a rate of the distance."""
+    """How far a copy goes in one tick, of its distance: ``1 / 2**number``, or number 65536ths."""
 
-    kind: Literal["whole", "shift", "rate"]
-    number: Number | None = None
-    wraps: bool = False  # shift: adding the half could leave 16 bits
+    kind: Literal["shift", "rate"]
+    number: Number
 
 
 @dataclass(frozen=True, slots=True)
@@ -102,7 +138,7 @@ class Alone:
     """A copy's motion in one mode of a port where other modes mix capacitors."""
 
     end: End
-    amount: Amount
+    amount: Amount | None
 
 
 @dataclass(frozen=True, slots=True)
@@ -275,33 +311,47 @@ def _modes(port: Port) -> list[tuple[int, int, ChargeMode]]:
 
 
 def _flips(port: Port, held: int, numbers: Numbers) -> Flips:
-    low, high = (_compares(port, q, held, numbers) for q in (0, 1))
+    low, high = (_tests(port, q, held, numbers) for q in (0, 1))
     return Flips(flips(low, high), flips(high, low))
 
 
-def _compares(port: Port, q: int, held: int, numbers: Numbers) -> tuple[Compare, ...]:
+def _tests(port: Port, q: int, held: int, numbers: Numbers) -> Tests:
     charge = port.machine
     assert isinstance(charge, Charge)
-    tests = charge.modes[q][held].flips
-    return tuple(_compare(port, test, q, held, index, numbers) for index, test in enumerate(tests))
+    mode = charge.modes[q][held]
+    return Tests(*(
+        tuple(_compare(port, test, q, held, f"{kind}.q{q}.h{held}.{i}", numbers) for i, test in enumerate(tests))
+        for kind, tests in (("flip", mode.flips), ("force", mode.force), ("block", mode.blocks))
+    ))
 
 
-def _compare(port: Port, test: Test, q: int, held: int, index: int, numbers: Numbers) -> Compare:
+_LIMITS = {"flip": "LIMIT", "force": "FORCE", "block": "BLOCK"}
+
+
+def _compare(port: Port, test: Test, q: int, held: int, key: str, numbers: Numbers) -> Compare:
     charge = port.machine
     assert isinstance(charge, Charge)
     if max(-_bounds(test.coeff)[0], _bounds(test.coeff)[1]) > 2**31 - 1:
-        raise ValueError(f"{port.name}: the sum of test {index} of mode q={q}, held={held} leaves 32 bits")
-    side = "at least" if test.ge else "at most"
-    about = f"The latch leaves {('low', 'high')[q]} with this mode's copy {side} here."
-    key = f"flip.q{q}.h{held}.{index}.limit"
-    role = "SUM_LIMIT" if len(test.coeff) > 1 else "LIMIT"
-    limit = numbers.get(role, numbers.place(q, held), test.limit, key, about)
+        raise ValueError(f"{port.name}: the sum of {key} leaves 32 bits")
+    place = numbers.place(q, held)
+    limit = numbers.get(_role(test, key), place, test.limit, f"{key}.limit", _about_test(test, q, key))
     weights = tuple(
-        numbers.get("WEIGHT", f"{numbers.place(q, held)}_{k}", c, f"flip.q{q}.h{held}.{index}.coeff.{k}",
+        numbers.get("WEIGHT", f"{place}_{k}", c, f"{key}.coeff.{k}",
                     f"Weight of the copy of {charge.capacitors[k]} in the sum that decides.")
         for k, c in enumerate(test.coeff) if len(test.coeff) > 1
     )
     return Compare(test.coeff, ">=" if test.ge else "<=", limit, weights)
+
+
+def _role(test: Test, key: str) -> str:
+    role = _LIMITS[key.split(".")[0]]
+    return f"SUM_{role}" if len(test.coeff) > 1 else role
+
+
+def _about_test(test: Test, q: int, key: str) -> str:
+    side = "at least" if test.ge else "at most"
+    does = "can't leave" if key.startswith("block") else "leaves"
+    return f"The latch {does} {('low', 'high')[q]} where the copy is {side} this."
 
 
 def _motion(port: Port, k: int, numbers: Numbers) -> Motion:
@@ -310,22 +360,37 @@ def _motion(port: Port, k: int, numbers: Numbers) -> Motion:
     if any(move.kind == "mix" for _, _, move in modes):
         mixed = [_alone_or_mix(port, k, q, h, move, numbers) for q, h, move in modes]
         return Motion(Leaf(None), Leaf(None), grow(mixed, asks))
+    if {move.kind for _, _, move in modes} >= {"shift", "multiply"}:
+        modes = [(q, h, _as_rate(move)) for q, h, move in modes]
     ends = [_end(port, k, q, h, move, numbers) for q, h, move in modes]
     amounts = [_amount(port, k, q, h, move, numbers) for q, h, move in modes]
     return Motion(grow(ends, asks), grow(amounts, asks))
 
 
+def _as_rate(move: Move) -> Move:
+    """Return a shift as the rate that rounds the same: ``(d + 2**(s-1)) >> s == (d * 2**(16-s) + 2**15) >> 16``."""
+    if move.kind != "shift" or move.shift == 0:
+        return move
+    return replace(move, kind="multiply", rate=1 << (16 - move.shift), shift=0)
+
+
 def _alone_or_mix(port: Port, k: int, q: int, held: int, move: Move, numbers: Numbers) -> Alone | Mix:
     if move.kind == "mix":
         return _mix(port, k, q, held, move, numbers)
-    amount = _amount(port, k, q, held, move, numbers)
-    return Alone(_end(port, k, q, held, move, numbers), amount or Amount("whole"))
+    return Alone(_end(port, k, q, held, move, numbers), _amount(port, k, q, held, move, numbers))
 
 
 def _end(port: Port, k: int, q: int, held: int, move: Move, numbers: Numbers) -> End:
     if move.kind == "hold":
-        return "stay"
-    return _end_number(port, k, q, held, move.end, numbers, f"move.q{q}.h{held}.{k}.end")
+        return STAY
+    number = _end_number(port, k, q, held, move.end, numbers, f"move.q{q}.h{held}.{k}.end")
+    if move.kind == "jump":
+        return End(number, whole=True)
+    return End(number, move.only, whole=_is_whole(move))
+
+
+def _is_whole(move: Move) -> bool:
+    return move.kind == "jump" or (move.kind == "shift" and move.shift == 0)
 
 
 def _end_number(port: Port, k: int, q: int, held: int, end: int, numbers: Numbers, key: str) -> Number:
@@ -336,18 +401,12 @@ def _end_number(port: Port, k: int, q: int, held: int, end: int, numbers: Number
 
 
 def _amount(port: Port, k: int, q: int, held: int, move: Move, numbers: Numbers) -> Amount | None:
-    charge = port.machine
-    assert isinstance(charge, Charge)
-    if move.kind == "hold":
+    if move.kind == "hold" or _is_whole(move):
         return None
-    if move.kind == "jump" or (move.kind == "shift" and move.shift == 0):
-        return Amount("whole")
     if move.kind == "shift":
         if move.shift > 15:
             raise ValueError(f"{port.name}: a shift of {move.shift} moves a 16-bit copy nowhere")
-        number = _pace_number(port, k, q, held, "SHIFT", move.shift, numbers)
-        half = 1 << move.shift >> 1
-        return Amount("shift", number, not half <= move.end <= U16 - half)
+        return Amount("shift", _pace_number(port, k, q, held, "SHIFT", move.shift, numbers))
     return Amount("rate", _pace_number(port, k, q, held, "RATE", move.rate, numbers))
 
 

@@ -3,12 +3,13 @@
 A step takes no memory from the heap: attributes are small integers, and no product leaves 30 bits.
 """
 
+import re
+
 from porter.emit.c99 import suite_rows
 from porter.emit.language import Job, banner, microseconds, why
 from porter.emit.lower import (
     All,
     Alone,
-    Amount,
     Any,
     ChargeParts,
     Compare,
@@ -54,8 +55,8 @@ class Core:
     def context(self) -> dict[str, object]:
         """Return the context for every template of the folder."""
         port, name = self.port, self.job.name
-        step = self._step()
-        text = "\n".join(step)
+        state, step, idle = self._state(), self._step(), self._idle()
+        words = set(re.findall(r"\w+", "\n".join([*state, *step, *idle])))
         return {
             "name": name,
             "cls": camel(name),
@@ -67,11 +68,12 @@ class Core:
                         for i, (w, n) in enumerate(zip(self.buttons, port.buttons, strict=True))],
             "outputs": [{"word": w, "mask": 1 << i, "name": comment(n)}
                         for i, (w, n) in enumerate(zip(unique(port.outputs), port.outputs, strict=True))],
-            "numbers": [{"about": n.about, "name": _ref(n), "value": n.value} for n in self.parts.numbers],
-            "helpers": [h for h in ("part", "kept", "against") if f"_{h}(" in text],
-            "state": self._state(),
+            "numbers": [{"about": n.about, "name": _ref(n), "value": n.value} for n in self.parts.numbers
+                        if _ref(n) in words],
+            "helpers": [h for h in ("part", "kept", "against") if f"_{h}" in words],
+            "state": state,
             "step": step,
-            "idle": self._idle(),
+            "idle": idle,
             "suite": suite_rows(self.job.suite),
         }
 
@@ -192,24 +194,24 @@ class Core:
     def _motion(self, motion: Motion, x: str, y: str, names: tuple[str, ...]) -> list[str]:
         if motion.mixed:
             return render(motion.mixed, self._ask, lambda leaf: self._mixed(leaf, x, y, names), SYNTAX)
-        targets = set(leaves(motion.ends))
-        if targets == {"stay"}:
-            return [] if x == y else [f"{y} = {x}"]
-        target = render(motion.ends, self._ask, lambda e: [f"end = {_end(e, x)}"], SYNTAX)
-        part = render(motion.amounts, self._ask, _part, SYNTAX)
-        return [*target, f"by = end - {x} if {x} < end else {x} - end", *part,
-                f"{y} = {x} + by if {x} < end else {x} - by"]
+        opened = [] if x == y else [f"{y} = {x}"]
+        if not leaves(motion.amounts):  # only jumps and rests
+            return opened + render(motion.ends, self._ask, lambda e: _jump(e, y), SYNTAX)
+        target = render(motion.ends, self._ask, lambda e: _aim(e, y), SYNTAX)
+        name = leaves(motion.amounts)[0].kind
+        chosen = render(motion.amounts, self._ask, lambda a: [f"{name} = {_ref(a.number)}"], SYNTAX)
+        return [*opened, *target, *chosen, f"by = end - {y} if {y} < end else {y} - end", _part(name, name),
+                f"{y} = {y} + by if {y} < end else {y} - by"]
 
     def _mixed(self, leaf: Alone | Mix, x: str, y: str, names: tuple[str, ...]) -> list[str]:
         if isinstance(leaf, Mix):
             terms = [_kept(sign, keep, copy, end) for (sign, keep), copy, end in
                      zip(leaf.keep, names, leaf.ends, strict=True) if keep.value]
             return [f"{y} = min(max({' '.join([_ref(leaf.end), *terms])}, 0), 65535)"]
-        if leaf.end == "stay":
-            return [f"{y} = {x}"]
-        end = _end(leaf.end, x)
-        return [f"by = {end} - {x} if {x} < {end} else {x} - {end}", *_part(leaf.amount),
-                f"{y} = {x} + by if {x} < {end} else {x} - by"]
+        if leaf.amount is None:
+            return [f"{y} = {_target(leaf.end, x)}"]
+        return [*_aim(leaf.end, x), f"by = end - {x} if {x} < end else {x} - end",
+                _part(leaf.amount.kind, _ref(leaf.amount.number)), f"{y} = {x} + by if {x} < end else {x} - by"]
 
 
 def _ref(number: Number) -> str:
@@ -224,15 +226,25 @@ def _either(pair: tuple[Number, Number]) -> str:
     return _ref(pair[0]) if pair[0] == pair[1] else f"{_ref(pair[1])} if q else {_ref(pair[0])}"
 
 
-def _end(end: End, x: str) -> str:
-    return x if isinstance(end, str) else _ref(end)
+def _target(end: End, x: str) -> str:
+    if end.number is None:
+        return x
+    ref = _ref(end.number)
+    test = {"up": f"{x} < {ref}", "down": f"{x} > {ref}"}.get(end.only)
+    return f"{ref} if {test} else {x}" if test else ref
 
 
-def _part(amount: Amount) -> list[str]:
-    if amount.number is None:
-        return []
-    ref = _ref(amount.number)
-    return [f"by = (by + (1 << {ref} >> 1)) >> {ref}" if amount.kind == "shift" else f"by = _part(by, {ref})"]
+def _jump(end: End, x: str) -> list[str]:
+    return [] if end.number is None else [f"{x} = {_target(end, x)}"]
+
+
+def _aim(end: End, x: str) -> list[str]:
+    """Return the lines that set the target; a jump goes there at once, and the motion finds nothing left."""
+    return [*(_jump(end, x) if end.whole else []), f"end = {_target(end, x)}"]
+
+
+def _part(kind: str, number: str) -> str:
+    return f"by = (by + (1 << {number} >> 1)) >> {number}" if kind == "shift" else f"by = _part(by, {number})"
 
 
 def _kept(sign: int, keep: Number, x: str, end: Number) -> str:

@@ -10,7 +10,7 @@ from porter.port.step import run
 from porter.vectors.model import Case, Suite
 
 WORDS = ("SET", "CLEAR", "MODE", "STOP")
-START, HOLD = 0, Move("hold", 0)
+HOLD = Move("hold", 0)
 
 
 def port(name, machine, buttons, *, start_q=0, answer=None, outputs=("lamp",), constants=(), title="A test latch"):
@@ -153,12 +153,16 @@ def _dressed(draw, machine, n: int) -> Port:
 COPY = st.one_of(st.sampled_from((0, 1, 127, 32768, 65408, 65535)), st.integers(0, 65535))
 
 
+ONLY = st.sampled_from(("both", "both", "up", "down"))
+
+
 def _move(caps: int) -> st.SearchStrategy[Move]:
     plain = st.one_of(
         st.just(HOLD),
         st.builds(Move, st.just("jump"), COPY),
-        st.builds(lambda end, shift: Move("shift", end, shift), COPY, st.integers(0, 15)),
-        st.builds(lambda end, rate: Move("multiply", end, rate=rate), COPY, st.integers(1, 65535)),
+        st.builds(lambda end, shift, only: Move("shift", end, shift, only=only), COPY, st.integers(0, 15), ONLY),
+        st.builds(lambda end, rate, only: Move("multiply", end, rate=rate, only=only), COPY,
+                  st.integers(1, 65535), ONLY),
     )
     if caps == 1:
         return plain
@@ -181,7 +185,8 @@ def charge_ports(draw, most_caps: int = 3) -> Port:
     """Ports of the charge style with every kind of move, sensible or not."""
     n, caps = draw(st.integers(1, 3)), draw(st.integers(1, most_caps))
     # A few modes used over and over, as in real ports, so that merging has something to do.
-    mode = st.builds(ChargeMode, st.lists(_test(caps), max_size=2).map(tuple), st.tuples(*[_move(caps)] * caps))
+    mode = st.builds(ChargeMode, st.lists(_test(caps), max_size=2).map(tuple), st.tuples(*[_move(caps)] * caps),
+                     st.lists(_test(caps), max_size=1).map(tuple), st.lists(_test(caps), max_size=2).map(tuple))
     pool = st.sampled_from(draw(st.lists(mode, min_size=1, max_size=4)))
     half = st.tuples(*[pool] * (1 << n))
     start = draw(st.tuples(*[COPY] * caps))
