@@ -1,5 +1,6 @@
 """From a port to its suite: answers to every stimulus, and words with a guarantee."""
 
+import re
 from collections.abc import Iterable
 from itertools import groupby
 
@@ -52,13 +53,14 @@ def _distinct(stimuli: Iterable[Stimulus]) -> list[Stimulus]:
 
 
 def _uniquely_named(stimuli: list[Stimulus]) -> list[Stimulus]:
-    """Number the names that two stimuli share, which button names with underscores can bring about."""
+    """Make identifiers of the names, and number those that two stimuli would share."""
     taken: set[str] = set()
     out = []
     for s in stimuli:
-        name, n = s.name, 2
+        stem = re.sub(r"[^0-9A-Za-z_]", "_", s.name)
+        name, n = stem, 2
         while name in taken:
-            name, n = f"{s.name}_{n}", n + 1
+            name, n = f"{stem}_{n}", n + 1
         taken.add(name)
         out.append(Stimulus(s.group, name, s.purpose, s.held))
     return out

@@ -3,6 +3,7 @@
 import csv
 import io
 import json
+import re
 from collections.abc import Iterator
 from dataclasses import replace
 from fractions import Fraction
@@ -15,7 +16,7 @@ from porter.vectors.drive import Runs, merged
 from porter.vectors.model import Case, Suite
 
 #: Added to the purpose of a case that has rows only where something changes.
-HELD_NOTE = " (rows only where something changes and at the last tick; values hold until the next row)"
+HELD_NOTE = " (values hold until the next row)"
 
 
 # --- CSV ---
@@ -192,11 +193,13 @@ def write_vcd(suite: Suite) -> str:
         default_scope_type="module",
         check_values=True,
     ) as writer:
-        top = suite.name
+        top = _word(suite.name)
         number = writer.register_var(top, "case", "integer", size=32, init=0)
         reset = writer.register_var(top, "power_on", "wire", size=1, init=1)
-        buttons = [writer.register_var((top, "buttons"), b, "wire", size=1, init=0) for b in suite.buttons]
-        outputs = [writer.register_var((top, "outputs"), o, "wire", size=1) for o in suite.outputs]
+        buttons = [
+            writer.register_var((top, "buttons"), _word(b), "wire", size=1, init=0) for b in suite.buttons
+        ]
+        outputs = [writer.register_var((top, "outputs"), _word(o), "wire", size=1) for o in suite.outputs]
         tick = 0
         for i, case in enumerate(suite.cases):
             begin: list[tuple[Any, int | str]] = [
@@ -213,6 +216,11 @@ def write_vcd(suite: Suite) -> str:
             tick += 1 + case.ticks
         writer.change(reset, tick * stride, 1)
     return text.getvalue()
+
+
+def _word(name: str) -> str:
+    """Return *name* without white space and ``$``, which would end a word of the dump."""
+    return re.sub(r"[\s$]", "_", name)
 
 
 def _changes(case: Case, buttons: list[Any], outputs: list[Any]) -> list[tuple[int, Any, int]]:

@@ -164,6 +164,10 @@ def _listed(stage: Stage, buttons: tuple[int, ...] | list[int]) -> str:
     return ", then ".join(stage.port.buttons[b] for b in buttons)
 
 
+def _ticks(count: int) -> str:
+    return f"{count} tick" if count == 1 else f"{count} ticks"
+
+
 def _mask(buttons: tuple[int, ...] | list[int]) -> int:
     return sum(1 << b for b in buttons)
 
@@ -210,7 +214,7 @@ def single_presses(stage: Stage) -> Iterator[Stimulus]:
             yield Stimulus(
                 "single presses",
                 f"{level}_{name}_hold",
-                f"{begin} held until settled, released.",
+                f"{begin} held until settled.",
                 (*lead, _hold(stage, 1 << b), (settle, 0)),
             )
             least = stage.acts[b, level]
@@ -218,7 +222,7 @@ def single_presses(stage: Stage) -> Iterator[Stimulus]:
                 yield Stimulus(
                     "single presses",
                     f"{level}_{name}_press_{ticks}",
-                    f"{begin} pressed for {ticks} ticks; the port acts from {least} on.",
+                    f"{begin} pressed for {_ticks(ticks)}; the port acts from {least} on.",
                     (*lead, (ticks, 1 << b), (settle if ticks else 0, 0)),
                 )
 
@@ -301,7 +305,7 @@ def _pair(stage: Stage, level: Level, a: int, b: int) -> Iterator[Stimulus]:
         *(
             (
                 f"{one}_overlaps_{two}_{n}",
-                f"goes up {n} ticks after {{}} goes down",
+                f"goes up {_ticks(n)} after {{}} goes down",
                 (hold_a, (n, both), hold_b),
             )
             for n in sorted({1, short_b[0] - 1, short_b[0]} - {0})
@@ -346,7 +350,7 @@ def _around(probe: Probe, edge: int | None) -> Iterator[Stimulus]:
     facts = [] if probe.nominal is None else [f"the circuit's nominal is {probe.nominal}"]
     facts += [] if edge is None else [f"the port acts from {edge} on"]
     for ticks in sorted({n + by for n in known for by in (-1, 0, 1) if n + by >= 1}):
-        purpose = f"{probe.what} of {ticks} ticks; {' and '.join(facts)}."
+        purpose = f"{probe.what} {_ticks(ticks)}; {' and '.join(facts)}."
         yield Stimulus("windows", f"{probe.name}_{ticks}", purpose, probe.make(ticks))
 
 
@@ -361,16 +365,16 @@ def _probes(behaviour: Behaviour, stage: Stage) -> list[Probe]:
             for kind in KINDS:
                 seconds = told.get((name, start, kind))
                 nominal = None if seconds is None else round(seconds / stage.port.tick_s)
-                if _can_try(stage, b, start, kind) and (nominal is not None or kind != "shortest-press"):
+                if _can_try(stage, b, start, kind, nominal):
                     probes.append(_probe(stage, b, start, kind, nominal))
     return probes
 
 
-def _can_try(stage: Stage, b: int, start: Level, kind: str) -> bool:
-    """True where the level to begin at can be reached and the button changes what it has to."""
-    if kind == "shortest-press":
-        return start in stage.lead
-    return all(stage.acts.get((b, level)) for level in LEVELS)
+def _can_try(stage: Stage, b: int, start: Level, kind: str, nominal: int | None) -> bool:
+    """True where the probe can begin, and either the circuit or the port has such a window."""
+    if nominal is not None:
+        return (start if kind == "shortest-press" else _other(start)) in stage.lead
+    return kind != "shortest-press" and all(stage.acts.get((b, level)) for level in LEVELS)
 
 
 def _probe(stage: Stage, b: int, start: Level, kind: str, nominal: int | None) -> Probe:
@@ -379,10 +383,14 @@ def _probe(stage: Stage, b: int, start: Level, kind: str, nominal: int | None) -
     name, tap, hold = stage.port.buttons[b], stage.tap(b, begin), _hold(stage, mask)
     stem = f"{start}_{name}_{kind.replace('-', '_')}"
     if kind == "shortest-press":
-        return Probe(stem, f"Settled {start}: a press of {name}", start, nominal, _press(lead, mask, settle))
+        return Probe(
+            stem, f"Settled {start}: {name} is pressed for", start, nominal, _press(lead, mask, settle)
+        )
     first = {"re-arm-after-tap": (tap, mask), "re-arm-after-press": (tap + 2, mask)}.get(kind, hold)
     again = (stage.tap(b, start), mask) if kind == "stray-gap" else hold
-    what = f"{kind} of {name} while {start}: an open time"
+    how = {"re-arm-after-tap": "a tap", "re-arm-after-press": "a press a little longer"}.get(kind, "a hold")
+    then = "its contact opens for" if kind == "stray-gap" else "it is pressed again after"
+    what = f"After {how} of {name} that turned the output {start} {then}"
     return Probe(stem, what, start, nominal, lambda ticks: (*lead, first, (ticks, 0), again, (settle, 0)))
 
 
@@ -437,7 +445,7 @@ def quick(stage: Stage) -> Iterator[Stimulus]:
                 yield Stimulus(
                     "double taps",
                     f"{level}_{name}_double_tap_{tap}_{gap}",
-                    f"Settled {level}: two taps of {name} of {tap} ticks, {gap} ticks apart.",
+                    f"Settled {level}: two taps of {name} of {_ticks(tap)}, {_ticks(gap)} apart.",
                     (*lead, (tap, 1 << b), (gap, 0), (tap, 1 << b), (stage.rest.settle, 0)),
                 )
 
@@ -451,14 +459,14 @@ def stuck(stage: Stage) -> Iterator[Stimulus]:
         for ticks in (257, 65537 + settle):
             yield Stimulus(
                 "stuck buttons",
-                f"{name}_stuck_{ticks}",
+                f"stuck_{name}_{ticks}",
                 f"{name} is stuck for {ticks} ticks, longer than a counter of that size can tell.",
                 (*lead, (ticks, mask), (settle, 0), press, (settle, 0)),
             )
             yield Stimulus(
                 "stuck buttons",
-                f"{name}_after_{ticks}_idle",
-                f"{name} is pressed after {ticks} ticks in which nobody presses anything.",
+                f"idle_{ticks}_{name}",
+                f"{name} is pressed, left alone for {ticks} ticks, and pressed again.",
                 (*lead, press, (ticks, 0), press, (settle, 0)),
             )
 
@@ -471,13 +479,13 @@ def repeated(behaviour: Behaviour, stage: Stage) -> Iterator[Stimulus]:
         lead = ((stage.rest.settle, 0),)
         yield Stimulus(
             "repeated",
-            f"{name}_repeated",
-            f"{name} is pressed {REPEATS} times with gaps of {gap} ticks.",
+            f"repeated_{name}",
+            f"{name} is pressed {REPEATS} times with gaps of {_ticks(gap)}.",
             (*lead, *(press, (gap, 0)) * REPEATS, (stage.rest.settle, 0)),
         )
         yield Stimulus(
             "repeated",
-            f"{name}_repeated_fast",
+            f"repeated_fast_{name}",
             f"{name} is pressed {CHATTER} times for one tick, one tick apart.",
             (*lead, *((1, 1 << b), (1, 0)) * CHATTER, (stage.rest.settle, 0)),
         )
