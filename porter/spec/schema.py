@@ -105,7 +105,7 @@ class Diode(Closed):
 
 
 class Load(Closed):
-    """Anything else that draws current: a resistance (390 ohm), or a current (20 mA, first to second node)."""
+    """What else draws current: a resistance (390 ohm), or a current (20 mA, first to second node)."""
 
     load: Quantity
     between: Between
