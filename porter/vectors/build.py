@@ -6,7 +6,7 @@ from itertools import groupby
 
 from porter.behaviour.model import Behaviour
 from porter.port.model import Port
-from porter.vectors.drive import Rest, Runs, cut, drive, merged
+from porter.vectors.drive import Rest, Runs, cut, drive, merged, total
 from porter.vectors.mealy import Mealy, explore, hsi_suite, minimise
 from porter.vectors.model import Case, Suite
 from porter.vectors.stimuli import Stimulus, all_stimuli, set_stage
@@ -67,17 +67,20 @@ def _uniquely_named(stimuli: list[Stimulus]) -> list[Stimulus]:
 
 
 def _answered(port: Port, stimuli: list[Stimulus]) -> list[tuple[str, Case]]:
-    said = drive(port, [s.held for s in stimuli])[0]
-    return [(s.group, _case(s.name, s.purpose, s.held, a)) for s, a in zip(stimuli, said, strict=True)]
+    said = drive(port, [s.held for s in stimuli], MOST_ANSWERS)[0]
+    cases = [(s.group, _case(s.name, s.purpose, s.held, a)) for s, a in zip(stimuli, said, strict=True)]
+    once: dict[Runs, tuple[str, Case]] = {}
+    for group, case in cases:  # cutting can make twins
+        once.setdefault(case.held, (group, case))
+    return list(once.values())
 
 
 def _case(name: str, purpose: str, held: Runs, expected: Runs) -> Case:
-    if len(expected) <= MOST_ANSWERS:
+    ticks = total(expected)
+    if ticks == total(held):
         return Case(name, purpose, held, expected)
-    kept = expected[:MOST_ANSWERS]
-    ticks = sum(length for length, _ in kept)
     note = f"{purpose} Cut after {ticks} ticks: the output goes on changing."
-    return Case(name, note, cut(held, ticks), kept)
+    return Case(name, note, cut(held, ticks), expected)
 
 
 def entries(case: Case) -> int:

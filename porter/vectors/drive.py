@@ -1,7 +1,8 @@
 """Drive a port's reference step with run-length coded stimuli, many at a time."""
 
-from collections.abc import Iterable, Sequence
+from collections.abc import Callable, Iterable, Sequence
 from dataclasses import dataclass
+from functools import lru_cache
 
 import numpy as np
 from numpy.typing import NDArray
@@ -15,6 +16,8 @@ Ints = NDArray[np.int64]
 
 #: The most ticks that a port is given to come to rest; longer is taken as "never".
 LONGEST_SETTLE = 1 << 16
+#: Held combinations up to which a one-capacitor port is stepped by look-up.
+MOST_TABLES = 16
 
 
 def merged(runs: Iterable[tuple[int, int]]) -> Runs:
@@ -43,42 +46,127 @@ def cut(runs: Runs, ticks: int) -> Runs:
     return merged(out)
 
 
-def drive(port: Port, stimuli: Sequence[Runs]) -> tuple[list[Runs], State]:
+# --- stepping ---
+
+
+@dataclass(frozen=True, slots=True)
+class Stepper:
+    """The reference step on rows of state, shape (B, 1 + registers).
+
+    `advance` takes rows and held masks and returns the rows after the tick and the outputs' bits.
+    """
+
+    first: Ints
+    advance: Callable[[Ints, Ints], tuple[Ints, Ints]]
+
+
+@lru_cache(maxsize=2)
+def stepper(port: Port) -> Stepper:
+    """Return the reference step of *port*, as a table where it has one capacitor and few buttons."""
+    if isinstance(port.machine, Charge) and len(port.machine.start) == 1 and port.held_count <= MOST_TABLES:
+        return _tabled(port)
+    return Stepper(rows(start(port)), lambda now, masks: _plain(port, now, masks))
+
+
+def _plain(port: Port, now: Ints, masks: Ints) -> tuple[Ints, Ints]:
+    after, out = step(port, state_of(now), masks)
+    return rows(after), out.astype(np.int64)
+
+
+def _tabled(port: Port) -> Stepper:
+    """Step every one of the 2 x 65 536 states once with each mask; then a step is a look-up."""
+    q, X = np.divmod(np.arange(2 * (U16 + 1)), U16 + 1)
+    every = np.column_stack([q, X])
+    tables = [_plain(port, every, np.full(len(every), mask)) for mask in range(port.held_count)]
+    after, out = (np.stack([table[i] for table in tables]) for i in (0, 1))
+
+    def advance(now: Ints, masks: Ints) -> tuple[Ints, Ints]:
+        place = now[:, 0] * (U16 + 1) + now[:, 1]
+        return after[masks, place], out[masks, place]
+
+    return Stepper(rows(start(port)), advance)
+
+
+def drive(port: Port, stimuli: Sequence[Runs], most_answers: int | None = None) -> tuple[list[Runs], State]:
     """Run *stimuli* from power-on, all beside each other.
 
-    A run in which a step changes nothing is over at once, since every further
-    step of it would be the same step; so long holds cost only as many steps as the
-    port needs to come to rest.
+    Long runs cost only as many steps as the port needs to come to rest or round: where a step
+    changes nothing the rest of the run is the same step again, and where a lane is back at a
+    state from before, its outputs unchanged since, whole rounds are left out.
 
     Args:
         stimuli: B run-length coded stimuli, none empty.
+        most_answers: stop a lane whose outputs changed more often; its answer then has
+            that many entries, and covers the beginning of the stimulus only.
 
     Returns:
         The outputs' bits of each, run-length coded, and the state of each at its end (B lanes).
     """
-    ticks, masks = _padded(stimuli)
-    now = rows(start(port, len(stimuli)))
-    place, left, tick = (np.zeros(len(stimuli), np.int64) for _ in range(3))
-    left += ticks[:, 0]
-    last = np.full(len(stimuli), -1)
-    changes: list[list[tuple[int, int]]] = [[] for _ in stimuli]
-    lanes = np.arange(len(stimuli))
-    while len(lanes):
-        before = now[lanes]
-        after, out = step(port, state_of(before), masks[lanes, place[lanes]])
-        now[lanes] = rows(after)
-        turned = lanes[out != last[lanes]]
-        last[lanes] = out
-        for lane in turned.tolist():
-            changes[lane].append((int(tick[lane]), int(last[lane])))
-        by = np.where((now[lanes] == before).all(axis=1), left[lanes], 1)
-        tick[lanes] += by
-        left[lanes] -= by
-        done = lanes[left[lanes] == 0]
-        place[done] += 1
-        left[done] = ticks[done, place[done]]
-        lanes = lanes[left[lanes] > 0]
-    return [_runs(c, int(end)) for c, end in zip(changes, tick, strict=True)], state_of(now)
+    lanes = _Lanes(stepper(port), stimuli, most_answers)
+    while len(lanes.live):
+        lanes.advance()
+    ends = lanes.tick.tolist()
+    said = [_runs(c, end, most_answers) for c, end in zip(lanes.changes, ends, strict=True)]
+    return said, state_of(lanes.now)
+
+
+class _Lanes:
+    """The working state of `drive`: arrays over all lanes, `live` the indices of those not done."""
+
+    def __init__(self, move: Stepper, stimuli: Sequence[Runs], most_answers: int | None) -> None:
+        count = len(stimuli)
+        self.move, self.most = move, most_answers
+        self.ticks, self.masks = _padded(stimuli)
+        self.now = np.repeat(move.first, count, axis=0)
+        self.place, self.tick = np.zeros(count, np.int64), np.zeros(count, np.int64)
+        self.left = self.ticks[:, 0].copy()
+        self.last = np.full(count, -1)
+        self.changes: list[list[tuple[int, int]]] = [[] for _ in stimuli]
+        # Brent's cycle search: a state to come back to, steps since then, and when to take a later one
+        self.mark, self.age, self.renew = self.now.copy(), np.zeros(count, np.int64), np.ones(count, np.int64)
+        self.live = np.arange(count)
+
+    def advance(self) -> None:
+        """Take one step in every live lane, and leave out what would only repeat it."""
+        live = self.live
+        before = self.now[live]
+        after, out = self.move.advance(before, self.masks[live, self.place[live]])
+        turned = out != self.last[live]
+        self.now[live], self.last[live] = after, out
+        self._note(live[turned])
+        by = self._span(before, after, turned)
+        self.tick[live] += by
+        self.left[live] -= by
+        self._take_mark(live[turned | (self.age[live] >= self.renew[live])])
+        self._begin(live[(self.left[live] == 0) & (by > 0)])
+        self.renew[live[turned]] = 1
+        self.live = live[self.left[live] > 0]
+
+    def _note(self, lanes: Ints) -> None:
+        """Note the lanes whose outputs changed; stop those that changed too often."""
+        for lane in lanes.tolist():
+            self.changes[lane].append((int(self.tick[lane]), int(self.last[lane])))
+            if self.most is not None and len(self.changes[lane]) > self.most:
+                self.left[lane] = 0
+
+    def _span(self, before: Ints, after: Ints, turned: NDArray[np.bool_]) -> Ints:
+        """Return how many ticks of its run each live lane's step stands for."""
+        self.age[self.live] += 1
+        left, age = self.left[self.live], self.age[self.live]
+        still = (after == before).all(axis=1)
+        round_ = (after == self.mark[self.live]).all(axis=1) & ~turned
+        rounds = np.where(round_, 1 + (left - 1) // age * age, 1)
+        return np.where(still, left, np.minimum(left, rounds))
+
+    def _take_mark(self, lanes: Ints) -> None:
+        self.mark[lanes], self.age[lanes] = self.now[lanes], 0
+        self.renew[lanes] *= 2
+
+    def _begin(self, lanes: Ints) -> None:
+        """Go on to the next run, if there is one."""
+        self.place[lanes] += 1
+        self.left[lanes] = self.ticks[lanes, self.place[lanes]]
+        self.mark[lanes], self.age[lanes], self.renew[lanes] = self.now[lanes], 0, 1
 
 
 def _padded(stimuli: Sequence[Runs]) -> tuple[Ints, Ints]:
@@ -90,9 +178,9 @@ def _padded(stimuli: Sequence[Runs]) -> tuple[Ints, Ints]:
     return both[:, :, 0], both[:, :, 1]
 
 
-def _runs(changes: list[tuple[int, int]], end: int) -> Runs:
+def _runs(changes: list[tuple[int, int]], end: int, most: int | None) -> Runs:
     ends = [tick for tick, _ in changes[1:]] + [end]
-    return tuple((stop - tick, value) for (tick, value), stop in zip(changes, ends, strict=True))
+    return tuple((stop - tick, value) for (tick, value), stop in zip(changes, ends, strict=True))[:most]
 
 
 @dataclass(frozen=True, slots=True)
@@ -158,11 +246,12 @@ def _to_rest(port: Port, now: Ints, masks: Ints) -> tuple[Ints, Ints, Ints]:
         The last states, the steps taken, and per lane the period (0 at rest, -1 undecided).
         Periods are found with R. P. Brent's cycle search (BIT 20, 176-184, 1980).
     """
+    move = stepper(port)
     now, mark, marked = now.copy(), now.copy(), 0
     steps, period = np.zeros(len(now), np.int64), np.full(len(now), -1)
     lanes = np.arange(len(now))
     for tick in range(1, LONGEST_SETTLE + 1):
-        after = rows(step(port, state_of(now[lanes]), masks[lanes])[0])
+        after = move.advance(now[lanes], masks[lanes])[0]
         same, round_ = (after == now[lanes]).all(axis=1), (after == mark[lanes]).all(axis=1)
         now[lanes], steps[lanes] = after, tick
         period[lanes[round_]] = tick - marked

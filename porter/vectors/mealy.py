@@ -139,9 +139,9 @@ def _shortest(machine: Mealy, first: int = 0) -> dict[int, Word]:
 
 
 def state_cover(machine: Mealy) -> Words:
-    """Return for each state the shortest word that reaches it from the start."""
+    """Return for each state that can be reached the shortest word from the start to it."""
     words = _shortest(machine)
-    return tuple(words[state] for state in range(machine.states))
+    return tuple(words[state] for state in sorted(words))
 
 
 def transition_cover(machine: Mealy) -> Words:

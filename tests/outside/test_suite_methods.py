@@ -40,7 +40,19 @@ def test_the_published_characterisation_set():
 
 
 def test_the_published_transition_cover():
-    assert spelled(transition_cover(EXAMPLE)) == set(" a b bb ba bab baa baab baaa baaab baaaa".split(" "))
+    assert spelled(transition_cover(EXAMPLE)) == {
+        "",
+        "a",
+        "b",
+        "bb",
+        "ba",
+        "bab",
+        "baa",
+        "baab",
+        "baaa",
+        "baaab",
+        "baaaa",
+    }
 
 
 def test_the_published_tail_of_the_suite():
@@ -106,6 +118,7 @@ def test_aalpy_finds_the_same_set_for_the_example():
 @settings(max_examples=60, deadline=None)
 def test_minimal_machines_agree_with_aalpy(machine):
     least, theirs = minimise(machine), as_aalpy(machine)
+    assume(len(state_cover(machine)) == machine.states)  # aalpy keeps states that can't be reached
     theirs.minimize()
     assert least.states == theirs.size
     assume(least.states > 1)
@@ -178,7 +191,7 @@ TOGGLE = Mealy(np.array([[1, 0], [0, 1]]), np.array([[1, 0], [0, 1]]))
 @pytest.mark.parametrize("method", [w_suite, hsi_suite])
 @pytest.mark.parametrize("machine", [LATCH, TOGGLE], ids=["latch", "toggle"])
 def test_every_machine_of_at_most_m_states_that_passes_is_equivalent(method, machine):
-    """Chow 1978; Petrenko, Yevtushenko, v. Bochmann 1993-96: all 46 656 machines of three states are tried."""
+    """Chow 1978; Petrenko, Yevtushenko, v. Bochmann 1993-96: tried on all 46 656 machines of three states."""
     least = minimise(machine)
     after, out = all_machines(3)
     good = passes(after, out, least, method(least, 3 - least.states))

@@ -6,7 +6,16 @@ import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
-from vector_ports import behaviour, charge, count_ports, latch, oscillator, three_buttons, toggle, toggle_and_clear
+from vector_ports import (
+    behaviour,
+    charge,
+    count_ports,
+    latch,
+    oscillator,
+    three_buttons,
+    toggle,
+    toggle_and_clear,
+)
 
 from porter.port.model import Port
 from porter.port.step import run
@@ -57,7 +66,9 @@ def test_expected_is_what_the_reference_step_says_of_known_ports(port):
 runs_of = st.lists(st.tuples(st.integers(1, 40), st.integers(0, 3)), min_size=1, max_size=12)
 
 
-@given(st.lists(runs_of, min_size=1, max_size=4), st.sampled_from([latch((2, 1), (3, 2)), toggle_and_clear()]))
+@given(
+    st.lists(runs_of, min_size=1, max_size=4), st.sampled_from([latch((2, 1), (3, 2)), toggle_and_clear()])
+)
 @settings(deadline=None)
 def test_driving_by_runs_is_stepping_tick_by_tick(stimuli, port):
     stimuli = [merged(runs) for runs in stimuli]
@@ -147,14 +158,19 @@ def test_a_port_is_tried_where_its_own_window_ends():
     assert any(ends.get(gap) == 1 and ends.get(gap + 1) == 0 for gap in ends)
 
 
-@each_port
+@pytest.mark.parametrize("port", PORTS[:-1], ids=NAMES[:-1])
 def test_stuck_buttons_cross_8_and_16_bit_counters(port):
+    suite = suite_of(port)
     for b in range(len(port.buttons)):
-        longest = {max(t for t, mask in c.held if mask == 1 << b) for c in suite_of(port).cases
-                   if any(mask == 1 << b for _, mask in c.held)}
-        assert any(256 < ticks < 65536 for ticks in longest)
-        if port is not PORTS[-1]:  # the oscillator's are cut short
-            assert max(longest) > 65536
+        holds = {ticks for case in suite.cases for ticks, mask in case.held if mask == 1 << b}
+        assert any(256 < ticks < 65536 for ticks in holds)
+        assert max(holds) > 65536
+
+
+def test_a_case_that_goes_on_changing_is_cut_short_and_says_so():
+    stuck = [case for case in suite_of(oscillator()).cases if "stuck" in case.name]
+    assert stuck
+    assert all("Cut after" in case.purpose and len(case.expected) == 128 for case in stuck)
 
 
 # --- size and order ---

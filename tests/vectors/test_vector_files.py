@@ -3,6 +3,7 @@
 import csv
 import io
 import json
+from itertools import pairwise
 
 import pytest
 from hypothesis import given
@@ -47,8 +48,9 @@ def test_csv_holds_every_tick_for_a_reader_that_knows_only_csv(suite):
         ticks = [int(row[1]) for row in mine]
         assert ticks[0] == 0
         assert ticks[-1] == case.ticks - 1
-        held = merged((b - a, int(r[2]) + 2 * int(r[3])) for a, b, r in zip(ticks, [*ticks[1:], case.ticks], mine))
-        said = merged((b - a, int(r[4]) + 2 * int(r[5])) for a, b, r in zip(ticks, [*ticks[1:], case.ticks], mine))
+        spans = [b - a for a, b in pairwise([*ticks, case.ticks])]
+        held = merged((n, int(r[2]) + 2 * int(r[3])) for n, r in zip(spans, mine, strict=True))
+        said = merged((n, int(r[4]) + 2 * int(r[5])) for n, r in zip(spans, mine, strict=True))
         assert (held, said) == (case.held, case.expected)
 
 
@@ -73,11 +75,17 @@ def test_json_has_a_format_number_and_a_fixed_order():
     assert list(data["cases"][0]) == ["name", "purpose", "held", "expected"]
 
 
-@pytest.mark.parametrize("text", [
-    "[]", "{", '{"format": 2}', '{"format": 1}',
-    '{"format": 1, "name": "s", "title": "", "buttons": [], "outputs": [], "tick_s": 1, "guarantees": [],'
-    ' "cases": [{"name": "c", "purpose": "", "held": [[2, 0]], "expected": [[1, 0]]}]}',
-])
+@pytest.mark.parametrize(
+    "text",
+    [
+        "[]",
+        "{",
+        '{"format": 2}',
+        '{"format": 1}',
+        '{"format": 1, "name": "s", "title": "", "buttons": [], "outputs": [], "tick_s": 1, "guarantees": [],'
+        ' "cases": [{"name": "c", "purpose": "", "held": [[2, 0]], "expected": [[1, 0]]}]}',
+    ],
+)
 def test_json_that_is_no_suite_is_refused(text):
     with pytest.raises(ValueError):
         read_json(text)

@@ -11,7 +11,14 @@ from porter.vectors.mutants import equivalent, fails
 
 @pytest.mark.parametrize(
     "port",
-    [latch(), latch((3, 1), (2, 2)), toggle(), toggle(1, 1, (4, 6), (0, 2), (2, 1)), toggle_and_clear(), three_buttons()],
+    [
+        latch(),
+        latch((3, 1), (2, 2)),
+        toggle(),
+        toggle(1, 1, (4, 6), (0, 2), (2, 1)),
+        toggle_and_clear(),
+        three_buttons(),
+    ],
     ids=["latch", "filtered_latch", "toggle", "quick_toggle", "toggle_and_clear", "three_buttons"],
 )
 def test_every_wrong_count_port_is_caught(port):
@@ -41,6 +48,8 @@ def test_equivalence_is_decided_by_walking_all_pairs():
 def test_coarse_faults_of_a_charge_port_are_caught():
     port = charge()
     suite = build_vectors(behaviour(port.buttons), port)
-    coarse = [m for m in mutants(port) if any(word in m.what for word in ("ge", "left out", "jumps", "start_q"))]
+    coarse = [
+        m for m in mutants(port) if any(word in m.what for word in ("ge", "left out", "jumps", "start_q"))
+    ]
     passed = [m.what for m in coarse if not fails(m.port, suite) and equivalent(port, m.port) is False]
     assert passed == []

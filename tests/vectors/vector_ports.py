@@ -19,9 +19,24 @@ def port(buttons: tuple[str, ...], machine: Count | Charge, **other: object) -> 
     """Return a port of one output, the latch itself, unless told otherwise."""
     n = 1 << len(buttons)
     style = "count" if isinstance(machine, Count) else "charge"
-    fields: dict[str, object] = {"outputs": ("lamp",), "tick_s": 0.001, "start_q": 0, "answer": ((0,) * n, (1,) * n)}
-    return Port(name="by_hand", title="By hand", spec_file="by_hand.yaml", spec_sha256="0" * 64, buttons=buttons,
-                style=style, machine=machine, constants=(), why=(), **(fields | other))
+    fields: dict[str, object] = {
+        "outputs": ("lamp",),
+        "tick_s": 0.001,
+        "start_q": 0,
+        "answer": ((0,) * n, (1,) * n),
+    }
+    return Port(
+        name="by_hand",
+        title="By hand",
+        spec_file="by_hand.yaml",
+        spec_sha256="0" * 64,
+        buttons=buttons,
+        style=style,
+        machine=machine,
+        constants=(),
+        why=(),
+        **(fields | other),
+    )
 
 
 def latch(press: tuple[int, int] = (1, 1), release: tuple[int, int] = (1, 1)) -> Port:
@@ -65,9 +80,9 @@ def charge(rate: int = 6520, held_rate: int = 30000) -> Port:
 def oscillator() -> Port:
     """Return a port that flips every tick while its button is held."""
     stay = ChargeMode((), (Move("hold", 0),))
-    up = ChargeMode((Test((1,), False, 0),), (Move("jump", 9),))
-    down = ChargeMode((Test((1,), True, 9),), (Move("jump", 0),))
-    return port(("RUN",), Charge(("c",), (0.0,), (1.0,), (0,), ((stay, down), (stay, up))))
+    low = ChargeMode((Test((1,), False, 0),), (Move("jump", 0),))
+    high = ChargeMode((Test((1,), True, 9),), (Move("jump", 9),))
+    return port(("RUN",), Charge(("c",), (0.0,), (1.0,), (0,), ((stay, low), (stay, high))))
 
 
 @st.composite
@@ -79,7 +94,18 @@ def count_ports(draw: st.DrawFn) -> Port:
     times = st.tuples(*[few] * len(buttons))
     pair = st.tuples(st.integers(0, 4), st.integers(0, 4))
     toggles = st.builds(Toggle, st.integers(0, len(buttons) - 1), pair, pair, st.tuples(few, few))
-    machine = Count(draw(st.tuples(row, row)), draw(st.tuples(*[st.booleans()] * n)), draw(times), draw(times),
-                    draw(st.none() | toggles))
+    machine = Count(
+        draw(st.tuples(row, row)),
+        draw(st.tuples(*[st.booleans()] * n)),
+        draw(times),
+        draw(times),
+        draw(st.none() | toggles),
+    )
     bits = st.tuples(*[st.integers(0, 3)] * n)
-    return port(buttons, machine, outputs=("x", "y"), answer=draw(st.tuples(bits, bits)), start_q=draw(st.integers(0, 1)))
+    return port(
+        buttons,
+        machine,
+        outputs=("x", "y"),
+        answer=draw(st.tuples(bits, bits)),
+        start_q=draw(st.integers(0, 1)),
+    )
