@@ -10,6 +10,8 @@ from porter.spec.tree import split_lines
 
 #: Longer lines are cut around the value; most terminals show about this much.
 MAX_LINE = 120
+#: More than this nobody reads; `--json` has them all.
+MAX_SHOWN = 200
 _COLOURS = {"error": "red", "warning": "yellow", "note": "cyan"}
 
 
@@ -22,7 +24,9 @@ def render_findings(findings: Iterable[Finding], source: str, color: bool) -> st
         color: True adds the terminal's colours.
     """
     lines = split_lines(source)
-    return "".join(_block(finding, lines, color) for finding in findings)
+    every = list(findings)
+    more = f"… and {len(every) - MAX_SHOWN} more\n" if len(every) > MAX_SHOWN else ""
+    return "".join(_block(finding, lines, color) for finding in every[:MAX_SHOWN]) + more
 
 
 def render_summary(findings: Iterable[Finding]) -> str:
