@@ -8,7 +8,7 @@ import numpy as np
 
 from porter.behaviour.corner import Population, population
 from porter.behaviour.explain import margin_why, window_why
-from porter.behaviour.measure import OSCILLATES, Measures, measure, works
+from porter.behaviour.measure import OSCILLATES, Measures, measure, release_in_order, works
 from porter.behaviour.model import (
     Band,
     Behaviour,
@@ -132,21 +132,9 @@ def _orders(group: Sequence[int]) -> Iterator[tuple[int, ...]]:
 
 
 def _after_releases(engine: Engine, order: Sequence[int]) -> Settled:
-    seen = {output for q in (0, 1) if (output := release_in_order(engine, q, order)) is not None}
+    found = (release_in_order(engine, q, order) for q in (0, 1))
+    seen = {_OUTPUTS[output] for output in found if output is not None}
     return seen.pop() if len(seen) == 1 else "oscillates" if "oscillates" in seen else "keeps"
-
-
-def release_in_order(engine: Engine, q: int, order: Sequence[int]) -> Settled | None:
-    """Hold all of *order* from rest at *q*, release one by one, each settled; None where q has no rest."""
-    lanes, ok = engine.rest(q)
-    if not ok[0]:
-        return None
-    mask = sum(1 << i for i in order)
-    for gone in (0, *(1 << i for i in order)):
-        mask &= ~gone
-        engine.press(lanes, mask)
-        engine.run(lanes, np.inf)
-    return _OUTPUTS[OSCILLATES if lanes.busy[0] else int(lanes.q[0])]
 
 
 def _power_on(circuit: Circuit, engine: Engine) -> PowerOn:

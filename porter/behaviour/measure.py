@@ -4,7 +4,7 @@ Everything here is batched over the engine's units; `derive` takes the same
 measurements of the nominal unit and of the corners.
 """
 
-from collections.abc import Iterator, Mapping
+from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass, field
 
 import numpy as np
@@ -64,6 +64,23 @@ def measure(engine: Engine, margin_keys: tuple[MarginKey, ...] | None = None) ->
         out.windows.update(_windows(engine, i, [lanes for lanes, _ in rests], out.rests))
     _margins(engine, [lanes for lanes, _ in rests], settled, out, margin_keys)
     return out
+
+
+def release_in_order(engine: Engine, q: int, order: Sequence[int]) -> int | None:
+    """Hold all buttons of *order* from rest at *q* and release them one by one, each settled (first unit).
+
+    Returns:
+        LOW, HIGH or OSCILLATES; None where *q* has no rest.
+    """
+    lanes, ok = engine.rest(q)
+    if not ok[0]:
+        return None
+    mask = sum(1 << i for i in order)
+    for gone in (0, *(1 << i for i in order)):
+        mask &= ~gone
+        engine.press(lanes, mask)
+        engine.run(lanes, np.inf)
+    return OSCILLATES if lanes.busy[0] else int(lanes.q[0])
 
 
 # --- windows ---

@@ -6,9 +6,10 @@ from dataclasses import dataclass
 import numpy as np
 
 from porter.behaviour.corner import single_steps
-from porter.behaviour.rules.case import Case
+from porter.behaviour.rules.case import Case, settle
 from porter.behaviour.rules.words import change, series, with_tolerance
 from porter.circuit.engine import Engine, Mask
+from porter.circuit.network import VCC
 from porter.circuit.values import Floats
 
 _SAMPLE = 300  # units on which a candidate is tried beyond the nominal one
@@ -101,3 +102,10 @@ def worst_row(case: Case, badness: Callable[[Engine], Floats]) -> Floats:
         if max(least, most) > values[0]:
             row[0, column] = cols.least[column] if least > most else cols.most[column]
     return row
+
+
+def settle_volts(engine: Engine, q: int, held: int, node: int | None) -> Floats:
+    """Return a node's settled voltage in every unit, the latch kept at *q*, shape (U,)."""
+    if node is None or node < 0:
+        return engine.supply if node == VCC else np.zeros(len(engine.rows))
+    return engine.volts(settle(engine, q, held))[:, node]
