@@ -88,7 +88,7 @@ class Core:
 
     def _define(self, number: Number) -> dict[str, object]:
         value = f"{number.value}u"
-        if number.name.startswith(("SUM_LIMIT", "WEIGHT")):
+        if number.name.startswith(("SUM_", "WEIGHT")):
             value = f"INT32_C({number.value})" if number.value >= 0 else f"(-INT32_C({-number.value}))"
         return {"about": number.about, "name": self._ref(number), "value": value}
 
@@ -131,7 +131,8 @@ class Core:
         body = self._charge(machine) if isinstance(machine, ChargeParts) else self._count(machine)
         opened = [line for cell in self.parts.cells for line in _unpack(cell)]
         closed = [self._pack(cell) for cell in self.parts.cells]
-        return [*opened, *body, "", *closed, "", *self._answer()]
+        lines = [*opened, *body, "", *closed, "", *self._answer()]
+        return lines if any(re.search(r"\bheld\b", line) for line in lines) else ["(void)held;", "", *lines]
 
     def _answer(self) -> list[str]:
         tree = self.parts.answer
