@@ -3,7 +3,7 @@
 from porter.vectors.build import build_vectors
 from porter.vectors.files import read_csv, read_json, write_csv, write_json, write_vcd
 from porter.vectors.model import Case, Suite
-from porter.vectors.mutants import Score, mutants, score
+from porter.vectors.mutants import Score, mutants, score, sharpen
 
 __all__ = [
     "Case",
@@ -14,6 +14,7 @@ __all__ = [
     "read_csv",
     "read_json",
     "score",
+    "sharpen",
     "write_csv",
     "write_json",
     "write_vcd",

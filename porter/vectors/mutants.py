@@ -8,8 +8,8 @@ import numpy as np
 
 from porter.port.model import U16, Charge, ChargeMode, Count, Move, Port, Test
 from porter.port.step import start
-from porter.vectors.drive import drive
-from porter.vectors.mealy import Ints, rows, successors
+from porter.vectors.drive import drive, merged
+from porter.vectors.mealy import Ints, Word, rows, successors
 from porter.vectors.model import Case, Suite
 
 T = TypeVar("T")
@@ -80,18 +80,41 @@ def equivalent(a: Port, b: Port, most: int = MOST_PAIRS) -> bool | None:
     Returns:
         None where *most* pairs were seen without an answer.
     """
+    decided, word = tell_apart(a, b, most)
+    return word is None if decided else None
+
+
+def tell_apart(a: Port, b: Port, most: int = MOST_PAIRS) -> tuple[bool, Word | None]:
+    """Look for a shortest input sequence that two ports answer differently, one mask a tick.
+
+    Returns:
+        Whether that was decided within *most* pairs of states, and the sequence if there is one.
+    """
     pairs = np.column_stack([rows(start(a)), rows(start(b))])
-    wide = rows(start(a)).shape[1]
-    seen = {pairs[0].tobytes()}
+    wide, k = rows(start(a)).shape[1], a.held_count
+    seen, came = {pairs[0].tobytes()}, list[Ints]()
     while len(pairs):
         after_a, out_a = successors(a, pairs[:, :wide])
         after_b, out_b = successors(b, pairs[:, wide:])
-        if (out_a != out_b).any():
-            return False
-        pairs = _fresh(np.concatenate([after_a, after_b], axis=2).reshape(-1, pairs.shape[1]), seen)
+        wrong = np.flatnonzero(out_a != out_b)
+        if len(wrong):
+            return True, _back(came, int(wrong[0]), k)
+        flat = np.concatenate([after_a, after_b], axis=2).reshape(-1, pairs.shape[1])
+        fresh = _fresh(flat, seen)
+        pairs = flat[fresh]
+        came.append(fresh)
         if len(seen) > most:
-            return None
-    return True
+            return False, None
+    return True, None
+
+
+def _back(came: list[Ints], place: int, k: int) -> Word:
+    """Return the word to a place in the last level; places are pair * k + input, in every level."""
+    word = [place % k]
+    for fresh in reversed(came):
+        place = int(fresh[place // k])
+        word.append(place % k)
+    return tuple(reversed(word))
 
 
 def _fresh(pairs: Ints, seen: set[bytes]) -> Ints:
@@ -101,7 +124,45 @@ def _fresh(pairs: Ints, seen: set[bytes]) -> Ints:
         if key not in seen:
             seen.add(key)
             kept.append(i)
-    return pairs[kept]
+    return np.array(kept, np.int64)
+
+
+# --- cases that wrong ports call for ---
+
+
+def sharpen(port: Port, suite: Suite, *, most_pairs: int = 1 << 14, most_entries: int = 4000) -> Suite:
+    """Return *suite* with a case for each wrong port that it lets pass and that a short search exposes.
+
+    A charge port's numbers differ from their neighbours by some 20 ppm of the supply; pressing at
+    the windows' ends alone can't tell them apart, a sequence looked for on purpose often can.
+
+    Args:
+        most_pairs: pairs of states looked at for each wrong port.
+        most_entries: run-length coded entries that the whole suite may have.
+    """
+    room = most_entries - sum(len(case.held) + len(case.expected) for case in suite.cases)
+    found: list[Case] = []
+    passed = 0
+    for mutant in mutants(port):
+        if fails(mutant.port, replace(suite, cases=tuple(found))) or fails(mutant.port, suite):
+            continue
+        decided, word = tell_apart(port, mutant.port, most_pairs)
+        if decided and word is None:
+            continue
+        case = None if word is None else _told_by(port, word, mutant.what, len(found) + 1)
+        if case is None or len(case.held) + len(case.expected) > room:
+            passed += 1
+            continue
+        room -= len(case.held) + len(case.expected)
+        found.append(case)
+    said = f"Of the wrong ports with one number, entry or choice changed, {passed} pass undecided."
+    return replace(suite, cases=(*suite.cases, *found), guarantees=(*suite.guarantees, said))
+
+
+def _told_by(port: Port, word: Word, what: str, number: int) -> Case:
+    held = merged((1, mask) for mask in word)
+    purpose = f"Tells the port from a wrong one ({what})."
+    return Case(f"wrong_{number:03}", purpose, held, drive(port, [held])[0][0])
 
 
 # --- the wrong ports ---

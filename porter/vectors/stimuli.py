@@ -7,11 +7,11 @@ rest with the output low or high, the shortest press it acts on.
 import random
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass
-from itertools import combinations, permutations
+from itertools import accumulate, combinations, permutations
 
 from porter.behaviour.model import Behaviour, Level
 from porter.port.model import Port
-from porter.vectors.drive import Rest, Runs, drive, merged, rest
+from porter.vectors.drive import Rest, Runs, drive, merged, rest, total
 
 LEVELS: tuple[Level, Level] = ("low", "high")
 #: Windows tried; the middling press (two ticks more than a tap) shows how fast holding moves the re-arm time.
@@ -148,6 +148,7 @@ def all_stimuli(behaviour: Behaviour, stage: Stage) -> Iterator[Stimulus]:
     yield from combinations_held(stage)
     yield from together(stage)
     yield from windows(behaviour, stage)
+    yield from timed(stage)
     yield from bounces(stage)
     yield from quick(stage)
     yield from stuck(stage)
@@ -392,6 +393,26 @@ def _probe(stage: Stage, b: int, start: Level, kind: str, nominal: int | None) -
     then = "its contact opens for" if kind == "stray-gap" else "it is pressed again after"
     what = f"After {how} of {name} that turned the output {start} {then}"
     return Probe(stem, what, start, nominal, lambda ticks: (*lead, first, (ticks, 0), again, (settle, 0)))
+
+
+def timed(stage: Stage) -> Iterator[Stimulus]:
+    """Yield second presses around the time at which the effect of a first one ends by itself."""
+    keys = [(level, b) for level in stage.lead for b in range(len(stage.port.buttons))]
+    begins = [(*stage.lead[level], (stage.tap(b, level), 1 << b)) for level, b in keys]
+    if not keys:
+        return
+    said = drive(stage.port, [(*begin, (stage.rest.settle, 0)) for begin in begins], 64)[0]
+    for (level, b), begin, runs in zip(keys, begins, said, strict=True):
+        ends = [end - total(begin) for end in accumulate(ticks for ticks, _ in runs)]
+        for gap in [end for end in ends[:-1] if end > 0][:2]:
+            for ticks in sorted({gap // 2, gap - 1, gap, gap + 1} - {0}):
+                yield Stimulus(
+                    "timed outputs",
+                    f"{level}_{stage.port.buttons[b]}_again_{ticks}",
+                    f"Settled {level}: {stage.port.buttons[b]} is pressed again {_ticks(ticks)} after a press"
+                    f" whose effect ends by itself after {_ticks(gap)}.",
+                    (*begin, (ticks, 0), begin[-1], (stage.rest.settle, 0)),
+                )
 
 
 # --- contacts and people ---

@@ -2,11 +2,13 @@
 
 from dataclasses import replace
 
+import numpy as np
 import pytest
 from vector_ports import behaviour, charge, latch, three_buttons, toggle, toggle_and_clear
 
-from porter.vectors import build_vectors, mutants, score
-from porter.vectors.mutants import equivalent, fails
+from porter.port.step import run
+from porter.vectors import build_vectors, mutants, score, sharpen
+from porter.vectors.mutants import equivalent, fails, tell_apart
 
 
 @pytest.mark.parametrize(
@@ -53,3 +55,23 @@ def test_coarse_faults_of_a_charge_port_are_caught():
     ]
     passed = [m.what for m in coarse if not fails(m.port, suite) and equivalent(port, m.port) is False]
     assert passed == []
+
+
+def test_a_telling_sequence_is_one():
+    right, wrong = toggle(), toggle(hold=(6, 4))
+    decided, word = tell_apart(right, wrong)
+    assert decided
+    said = [run(p, np.array([word]))[0].tolist() for p in (right, wrong)]
+    assert said[0][:-1] == said[1][:-1]
+    assert said[0][-1] != said[1][-1]
+
+
+def test_sharpening_catches_faults_of_one_step_in_65536():
+    port = charge()
+    suite = build_vectors(behaviour(port.buttons), port)
+    sharp = sharpen(port, suite, most_pairs=1 << 14)
+    assert sharp.cases[: len(suite.cases)] == suite.cases
+    before, after = score(port, suite), score(port, sharp)
+    assert set(before.killed) < set(after.killed)
+    assert sum(len(c.held) + len(c.expected) for c in sharp.cases) <= 4000
+    assert not fails(port, sharp)

@@ -77,6 +77,16 @@ def charge(rate: int = 6520, held_rate: int = 30000) -> Port:
     return port(("PUSH",), Charge(("memory",), (0.0,), (5 / 65535,), (0,), (modes[0], modes[1])))
 
 
+def one_shot() -> Port:
+    """Return a port whose button starts an output that ends by itself."""
+    fill = (Move("jump", 0),)
+    rise = (Move("multiply", 65535, rate=4000),)
+    end = (Test((1,), True, 43690),)
+    start = ChargeMode((Test((1,), True, 0),), fill)
+    modes = ((ChargeMode((), fill), start), (ChargeMode(end, rise), ChargeMode((), rise)))
+    return port(("GO",), Charge(("timing",), (0.0,), (1.0,), (0,), modes))
+
+
 def oscillator() -> Port:
     """Return a port that flips every tick while its button is held."""
     stay = ChargeMode((), (Move("hold", 0),))
