@@ -2,6 +2,7 @@
 
 import re
 
+from porter.emit.fold import fold
 from porter.emit.language import Job, banner, microseconds, why
 from porter.emit.lower import (
     All,
@@ -68,14 +69,14 @@ class Core:
             "banner": lambda what: banner(self.job, what),
             "why": why(port),
             "tick_us": microseconds(port),
-            "buttons": _bits(self.buttons, port.buttons),
-            "outputs": _bits(self.outputs, port.outputs),
+            "buttons": _bits(self.buttons, port.buttons, 0, (17, 26, 16, 20, 23, 22, 21, 0)),
+            "outputs": _bits(self.outputs, port.outputs, len(port.buttons), (3, 2, 1, 4, 5, 6, 7, 8)),
             "members": [self._member(cell) for cell in parts.cells],
             "numbers": [self._define(number) for number in parts.numbers if self._ref(number) in words],
             "helpers": [h for h in ("clamp", "kept", "shift", "rate") if f"{self.name}_{h}" in words],
-            "init": init,
-            "step": step,
-            "idle": idle,
+            "init": fold(init, 4),
+            "step": fold(step, 4),
+            "idle": fold(idle, 4),
             "recovery": recovery(parts),
             "suite": suite_rows(self.job.suite),
             "title": string(port.title),
@@ -92,9 +93,9 @@ class Core:
             value = f"INT32_C({number.value})" if number.value >= 0 else f"(-INT32_C({-number.value}))"
         return {"about": number.about, "name": self._ref(number), "value": value}
 
-    def _member(self, cell: Cell) -> dict[str, str]:
-        holds = ", ".join(self._field_note(field, cell) for field in cell.fields)
-        return {"type": f"uint{cell.width}_t", "name": cell.name, "about": comment(holds)}
+    def _member(self, cell: Cell) -> dict[str, object]:
+        holds = "; ".join(self._field_note(field, cell) for field in cell.fields)
+        return {"type": f"uint{cell.width}_t", "name": cell.name, "about": wrap(f"{holds}.")}
 
     def _field_note(self, field: Field, cell: Cell) -> str:
         at, last = _place(field, cell)
@@ -122,7 +123,8 @@ class Core:
         values = {"q": f"{self.port.start_q}u"}
         if isinstance(self.parts.machine, ChargeParts):
             values |= {
-                x: self._ref(n) for x, n in zip(copies(self.parts.machine), self.parts.machine.starts, strict=True)
+                x: self._ref(n)
+                for x, n in zip(copies(self.parts.machine), self.parts.machine.starts, strict=True)
             }
         return [f"m->{cell.name} = {values.get(cell.fields[0].name, '0u')};" for cell in self.parts.cells]
 
@@ -139,7 +141,12 @@ class Core:
         if isinstance(tree, Leaf) and tree.value is not None:
             return [f"return {self._bits(tree.value)};"]
         lines = render(tree, self._ask, lambda pair: [f"active = {self._bits(pair)};"], SYNTAX)
-        return ["/* Answer for the latch and the buttons as they are. */", "uint8_t active;", *lines, "return active;"]
+        return [
+            "/* Answer for the latch and the buttons as they are. */",
+            "uint8_t active;",
+            *lines,
+            "return active;",
+        ]
 
     def _bits(self, pair: tuple[int, int]) -> str:
         if pair == (0, 1):
@@ -182,10 +189,20 @@ class Core:
             opened = [line for line in opened if " was = " in line]
             return [*trial, *opened, "", f"(void){self.name}_step(&next, was);", f"return {same};"]
         opened = [line for line in opened if " n_" in line]
-        guess = [line for f in filters for line in
-                 branch(self._ask_down(f.button)[0], [f"was |= {self.buttons[f.button]};"], [], SYNTAX)]
-        return [*trial, *opened, "uint8_t was = 0u;", "", *guess,
-                f"(void){self.name}_step(&next, was);", f"return {same};"]
+        guess = [
+            line
+            for f in filters
+            for line in branch(self._ask_down(f.button)[0], [f"was |= {self.buttons[f.button]};"], [], SYNTAX)
+        ]
+        return [
+            *trial,
+            *opened,
+            "uint8_t was = 0u;",
+            "",
+            *guess,
+            f"(void){self.name}_step(&next, was);",
+            f"return {same};",
+        ]
 
     def _settled(self, item: Filter) -> str:
         n = filter_name(self.port, item.button)
@@ -196,8 +213,11 @@ class Core:
     def _count(self, machine: CountParts) -> list[str]:
         lines: list[str] = []
         for item in machine.filters:
-            lines += ["", f"/* {comment(self.port.buttons[item.button])}: a change counts once seen long enough. */",
-                      *self._filter(item)]
+            lines += [
+                "",
+                f"/* {comment(self.port.buttons[item.button])}: a change counts once seen long enough. */",
+                *self._filter(item),
+            ]
         latch = render(machine.latch, self._ask_down, self._set_latch, SYNTAX)
         lines += ["", "/* The latch by level. */", *latch] if latch else []
         return lines + (self._toggle(machine.toggle) if machine.toggle else [])
@@ -222,7 +242,13 @@ class Core:
             opened = branch(f"{n} > 0u", down, [], SYNTAX)
         else:
             opened = branch(f"{n} > {press}", down, [f"{n} = 0u;"], SYNTAX)
-        return [self._ask(item.button)[0].join(SYNTAX.first), *_indent(held), SYNTAX.otherwise, *_indent(opened), "}"]
+        return [
+            self._ask(item.button)[0].join(SYNTAX.first),
+            *_indent(held),
+            SYNTAX.otherwise,
+            *_indent(opened),
+            "}",
+        ]
 
     def _set_latch(self, pair: tuple[int, int]) -> list[str]:
         if pair == (0, 1):
@@ -314,7 +340,9 @@ class Core:
     def _compare(self, test: Compare, names: tuple[str, ...]) -> str:
         if len(test.coeff) == 1:
             return f"{names[0]} {test.operator} {self._ref(test.limit)}"
-        terms = [f"({self._ref(w)} * (int32_t){x})" for x, w in zip(names, test.weights, strict=True) if w.value]
+        terms = [
+            f"({self._ref(w)} * (int32_t){x})" for x, w in zip(names, test.weights, strict=True) if w.value
+        ]
         return f"({' + '.join(terms) or 'INT32_C(0)'}) {test.operator} {self._ref(test.limit)}"
 
     def _move(self, ends: Tree[End], amounts: Tree[Amount], x: str, y: str) -> list[str]:
@@ -373,8 +401,11 @@ class Core:
 
     def _mixed(self, leaf: Alone | Mix, x: str, y: str, names: tuple[str, ...]) -> list[str]:
         if isinstance(leaf, Mix):
-            terms = [self._kept(sign, keep, copy, end) for (sign, keep), copy, end in
-                     zip(leaf.keep, names, leaf.ends, strict=True) if keep.value]
+            terms = [
+                self._kept(sign, keep, copy, end)
+                for (sign, keep), copy, end in zip(leaf.keep, names, leaf.ends, strict=True)
+                if keep.value
+            ]
             total = " ".join([f"(int32_t){self._ref(leaf.end)}", *terms])
             return [f"{y} = {self.name}_clamp({total});"]
         end = self._target(leaf.end, x)
@@ -389,9 +420,22 @@ class Core:
         return f"{mark} {self.name}_kept({x}, {self._ref(end)}, {self._ref(keep)})"
 
 
-def _bits(words: tuple[str, ...], names: tuple[str, ...]) -> list[dict[str, str]]:
-    return [{"word": w, "mask": f"0x{1 << i:02X}u", "name": comment(n), "bit": str(i)}
-            for i, (w, n) in enumerate(zip(words, names, strict=True))]
+def _bits(
+    words: tuple[str, ...], names: tuple[str, ...], first: int, edge: tuple[int, ...]
+) -> list[dict[str, str]]:
+    """Return rows for buttons or outputs; the example boards' pins are *first* and on, and those of *edge*."""
+    shorts = unique(names)
+    return [
+        {
+            "word": w,
+            "mask": f"0x{1 << i:02X}u",
+            "name": comment(n),
+            "short": shorts[i],
+            "avr": str(first + i),
+            "nrf": str(edge[i]),
+        }
+        for i, (w, n) in enumerate(zip(words, names, strict=True))
+    ]
 
 
 def _type(most: int) -> str:
@@ -444,14 +488,23 @@ def _indent(lines: list[str]) -> list[str]:
 
 def recovery(parts: Parts) -> list[str]:
     """Return what the core does from an impossible state, as comment lines."""
-    spare = [(1 << (last - at + 1)) - 1 - f.most for cell in parts.cells for f in cell.fields
-             if not f.name.startswith(("x", "was", "q")) for at, last in [_place(f, cell)]]
+    spare = [
+        (1 << (last - at + 1)) - 1 - f.most
+        for cell in parts.cells
+        for f in cell.fields
+        if not f.name.startswith(("x", "was", "q"))
+        for at, last in [_place(f, cell)]
+    ]
     if isinstance(parts.machine, ChargeParts):
-        return wrap("Every bit pattern of the state is a legal one after one step: a copy that was disturbed is some "
-                    "voltage, and decays with the circuit's own time constant.")
+        return wrap(
+            "Every bit pattern of the state is a legal one after one step: a copy that was disturbed is some "
+            "voltage, and decays with the circuit's own time constant."
+        )
     ticks = max(spare, default=0) + 1
-    return wrap(f"From any bit pattern of the state the core is back in a legal one after at most {ticks} "
-                f"tick{'s' * (ticks > 1)} with the buttons open.")
+    return wrap(
+        f"From any bit pattern of the state the core is back in a legal one after at most {ticks} "
+        f"tick{'s' * (ticks > 1)} with the buttons open."
+    )
 
 
 # --- vectors ---
@@ -460,10 +513,18 @@ def recovery(parts: Parts) -> list[str]:
 def suite_rows(suite: Suite) -> dict[str, object]:
     """Return the suite as finished rows: the cases in order, with stimulus and answer as lines of runs."""
     return {
-        "cases": [{"name": string(case.name), "ticks": case.ticks, "purpose": comment(case.purpose),
-                   "held": runs(case, "held"), "expected": runs(case, "expected"),
-                   "flat_held": runs(case, "held", "{}, {},"), "flat_expected": runs(case, "expected", "{}, {},")}
-                  for case in suite.cases],
+        "cases": [
+            {
+                "name": string(case.name),
+                "ticks": case.ticks,
+                "purpose": comment(case.purpose),
+                "held": runs(case, "held"),
+                "expected": runs(case, "expected"),
+                "flat_held": runs(case, "held", "{}, {},"),
+                "flat_expected": runs(case, "expected", "{}, {},"),
+            }
+            for case in suite.cases
+        ],
         "guarantees": [line for sentence in suite.guarantees for line in wrap(sentence)],
     }
 

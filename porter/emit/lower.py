@@ -99,7 +99,9 @@ def flips(forward: Tests, back: Tests) -> Any:
     """Return when the latch flips and stays: *forward* holds and *back*, the mode behind the flip, doesn't."""
     found = (tighten((*go, *stay)) for go, stay in product(forward.holds(), back.fails()))
     kept = list(dict.fromkeys(alternative for alternative in found if alternative is not None))
-    return tuple(a for i, a in enumerate(kept) if not any(_covers(b, a, j < i) for j, b in enumerate(kept) if j != i))
+    return tuple(
+        a for i, a in enumerate(kept) if not any(_covers(b, a, j < i) for j, b in enumerate(kept) if j != i)
+    )
 
 
 def _covers(wide: All, narrow: All, first: bool) -> bool:
@@ -109,6 +111,7 @@ def _covers(wide: All, narrow: All, first: bool) -> bool:
 
 
 # --- motion ---
+
 
 @dataclass(frozen=True, slots=True)
 class End:
@@ -319,10 +322,15 @@ def _tests(port: Port, q: int, held: int, numbers: Numbers) -> Tests:
     charge = port.machine
     assert isinstance(charge, Charge)
     mode = charge.modes[q][held]
-    return Tests(*(
-        tuple(_compare(port, test, q, held, f"{kind}.q{q}.h{held}.{i}", numbers) for i, test in enumerate(tests))
-        for kind, tests in (("flip", mode.flips), ("force", mode.force), ("block", mode.blocks))
-    ))
+    return Tests(
+        *(
+            tuple(
+                _compare(port, test, q, held, f"{kind}.q{q}.h{held}.{i}", numbers)
+                for i, test in enumerate(tests)
+            )
+            for kind, tests in (("flip", mode.flips), ("force", mode.force), ("block", mode.blocks))
+        )
+    )
 
 
 _LIMITS = {"flip": "LIMIT", "force": "FORCE", "block": "BLOCK"}
@@ -336,9 +344,15 @@ def _compare(port: Port, test: Test, q: int, held: int, key: str, numbers: Numbe
     place = numbers.place(q, held)
     limit = numbers.get(_role(test, key), place, test.limit, f"{key}.limit", _about_test(test, q, key))
     weights = tuple(
-        numbers.get("WEIGHT", f"{place}_{k}", c, f"{key}.coeff.{k}",
-                    f"Weight of the copy of {charge.capacitors[k]} in the sum that decides.")
-        for k, c in enumerate(test.coeff) if len(test.coeff) > 1
+        numbers.get(
+            "WEIGHT",
+            f"{place}_{k}",
+            c,
+            f"{key}.coeff.{k}",
+            f"Weight of the copy of {charge.capacitors[k]} in the sum that decides.",
+        )
+        for k, c in enumerate(test.coeff)
+        if len(test.coeff) > 1
     )
     return Compare(test.coeff, ">=" if test.ge else "<=", limit, weights)
 
@@ -423,8 +437,9 @@ def _mix(port: Port, k: int, q: int, held: int, move: Move, numbers: Numbers) ->
     key = f"move.q{q}.h{held}"
     ends = tuple(_end_number(port, j, q, held, e, numbers, f"{key}.{j}.end") for j, e in enumerate(move.ends))
     end = _end_number(port, k, q, held, move.end, numbers, f"{key}.{k}.end")
-    keep = tuple((1 if n >= 0 else -1, _keep_number(port, k, j, q, held, n, numbers))
-                 for j, n in enumerate(move.keep))
+    keep = tuple(
+        (1 if n >= 0 else -1, _keep_number(port, k, j, q, held, n, numbers)) for j, n in enumerate(move.keep)
+    )
     return Mix(end, keep, ends)
 
 
@@ -442,7 +457,9 @@ def _keep_number(port: Port, k: int, j: int, q: int, held: int, keep: int, numbe
 def _count(port: Port, numbers: Numbers) -> CountParts:
     count = port.machine
     assert isinstance(count, Count)
-    filters = tuple(_filter(port, i, numbers) for i in _buttons(port) if count.press[i] + count.release[i] > 2)
+    filters = tuple(
+        _filter(port, i, numbers) for i in _buttons(port) if count.press[i] + count.release[i] > 2
+    )
     latch = grow([(count.table[0][h], count.table[1][h]) for h in range(port.held_count)], _buttons(port))
     return CountParts(filters, latch, _toggle(port, numbers))
 
@@ -451,10 +468,20 @@ def _filter(port: Port, button: int, numbers: Numbers) -> Filter:
     count = port.machine
     assert isinstance(count, Count)
     word, name = numbers.held(1 << button), port.buttons[button]
-    press = numbers.get(f"PRESS_{word}", "", count.press[button], f"press.{button}",
-                        f"Ticks that {name} must be seen held in a row to count as down.")
-    release = numbers.get(f"RELEASE_{word}", "", count.release[button], f"release.{button}",
-                          f"Ticks that {name} must be seen open in a row to count as up.")
+    press = numbers.get(
+        f"PRESS_{word}",
+        "",
+        count.press[button],
+        f"press.{button}",
+        f"Ticks that {name} must be seen held in a row to count as down.",
+    )
+    release = numbers.get(
+        f"RELEASE_{word}",
+        "",
+        count.release[button],
+        f"release.{button}",
+        f"Ticks that {name} must be seen open in a row to count as up.",
+    )
     return Filter(button, press, release)
 
 
@@ -464,18 +491,28 @@ def _toggle(port: Port, numbers: Numbers) -> ToggleParts | None:
     toggle = count.toggle
     if toggle is None:
         return None
-    live = grow([count.live[h] if h >> toggle.button & 1 else None for h in range(port.held_count)],
-                _buttons(port))
+    live = grow(
+        [count.live[h] if h >> toggle.button & 1 else None for h in range(port.held_count)], _buttons(port)
+    )
     most = max(*toggle.tap, *toggle.hold, 1)
     # The latch changes under a running counter only where a level button turns it.
     free = any(count.table[q][h] != q for q in (0, 1) for h in range(port.held_count))
     above = any((most if free else max(toggle.tap[q], toggle.hold[q])) > toggle.hold[q] for q in (0, 1))
     return ToggleParts(
         toggle.button,
-        _pair(numbers, "TAP", toggle.tap, "Open ticks from a press that acted to the next that acts, latch {}."),
+        _pair(
+            numbers, "TAP", toggle.tap, "Open ticks from a press that acted to the next that acts, latch {}."
+        ),
         _pair(numbers, "HOLD", toggle.hold, "The same after a press held until settled, latch {}."),
-        _pair(numbers, "PACE", toggle.pace, "Most that the re-arm counter goes toward HOLD in a held tick, latch {}."),
-        live, most, above,
+        _pair(
+            numbers,
+            "PACE",
+            toggle.pace,
+            "Most that the re-arm counter goes toward HOLD in a held tick, latch {}.",
+        ),
+        live,
+        most,
+        above,
     )
 
 

@@ -6,6 +6,7 @@ A step takes no memory from the heap: attributes are small integers, and no prod
 import re
 
 from porter.emit.c99 import suite_rows
+from porter.emit.fold import fold
 from porter.emit.language import Job, banner, microseconds, why
 from porter.emit.lower import (
     All,
@@ -64,16 +65,23 @@ class Core:
             "banner": lambda what: banner(self.job, what),
             "why": why(port),
             "tick_us": microseconds(port),
-            "buttons": [{"word": w, "mask": 1 << i, "name": comment(n), "short": w.removeprefix("_BUTTON_")}
-                        for i, (w, n) in enumerate(zip(self.buttons, port.buttons, strict=True))],
-            "outputs": [{"word": w, "mask": 1 << i, "name": comment(n)}
-                        for i, (w, n) in enumerate(zip(unique(port.outputs), port.outputs, strict=True))],
-            "numbers": [{"about": n.about, "name": _ref(n), "value": n.value} for n in self.parts.numbers
-                        if _ref(n) in words],
+            "buttons": [
+                {"word": w, "mask": 1 << i, "name": comment(n), "short": w.removeprefix("_BUTTON_")}
+                for i, (w, n) in enumerate(zip(self.buttons, port.buttons, strict=True))
+            ],
+            "outputs": [
+                {"word": w, "mask": 1 << i, "name": comment(n)}
+                for i, (w, n) in enumerate(zip(unique(port.outputs), port.outputs, strict=True))
+            ],
+            "numbers": [
+                {"about": n.about, "name": _ref(n), "value": n.value}
+                for n in self.parts.numbers
+                if _ref(n) in words
+            ],
             "helpers": [h for h in ("part", "kept", "against") if f"_{h}" in words],
-            "state": state,
-            "step": step,
-            "idle": idle,
+            "state": fold(state, 8),
+            "step": fold(step, 8),
+            "idle": fold(idle, 8),
             "suite": suite_rows(self.job.suite),
         }
 
@@ -83,8 +91,9 @@ class Core:
     def _state(self) -> list[str]:
         values = {"q": str(self.port.start_q)}
         if isinstance(self.parts.machine, ChargeParts):
-            values |= {x: _ref(n) for x, n in
-                       zip(copies(self.parts.machine), self.parts.machine.starts, strict=True)}
+            values |= {
+                x: _ref(n) for x, n in zip(copies(self.parts.machine), self.parts.machine.starts, strict=True)
+            }
         return [f"self._{name} = {values.get(name, '0')}" for name in self._fields()]
 
     def _ask(self, ask: int) -> tuple[str, str]:
@@ -165,10 +174,16 @@ class Core:
         acts = ["q ^= 1", f"c = {_either(toggle.tap)}"]
         live = render(toggle.live, self._ask_down, lambda yes: acts if yes else [], SYNTAX)
         press = [*branch("not c", live, [], SYNTAX)] if live else []
-        press += [f"hold = {_either(toggle.hold)}", f"pace = {_either(toggle.pace)}",
-                  *branch("c < hold", ["c = min(c + pace, hold)"], ["c = max(c - pace, hold)"], SYNTAX)]
+        press += [
+            f"hold = {_either(toggle.hold)}",
+            f"pace = {_either(toggle.pace)}",
+            *branch("c < hold", ["c = min(c + pace, hold)"], ["c = max(c - pace, hold)"], SYNTAX),
+        ]
         note = f"# {comment(self.port.buttons[toggle.button])} turns the latch once the re-arm counter has run out."
-        return [note, *branch(self._ask_down(toggle.button)[0], press, branch("c", ["c -= 1"], [], SYNTAX), SYNTAX)]
+        return [
+            note,
+            *branch(self._ask_down(toggle.button)[0], press, branch("c", ["c -= 1"], [], SYNTAX), SYNTAX),
+        ]
 
     # --- charge ---
 
@@ -200,18 +215,31 @@ class Core:
         target = render(motion.ends, self._ask, lambda e: _aim(e, y), SYNTAX)
         name = leaves(motion.amounts)[0].kind
         chosen = render(motion.amounts, self._ask, lambda a: [f"{name} = {_ref(a.number)}"], SYNTAX)
-        return [*opened, *target, *chosen, f"by = end - {y} if {y} < end else {y} - end", _part(name, name),
-                f"{y} = {y} + by if {y} < end else {y} - by"]
+        return [
+            *opened,
+            *target,
+            *chosen,
+            f"by = end - {y} if {y} < end else {y} - end",
+            _part(name, name),
+            f"{y} = {y} + by if {y} < end else {y} - by",
+        ]
 
     def _mixed(self, leaf: Alone | Mix, x: str, y: str, names: tuple[str, ...]) -> list[str]:
         if isinstance(leaf, Mix):
-            terms = [_kept(sign, keep, copy, end) for (sign, keep), copy, end in
-                     zip(leaf.keep, names, leaf.ends, strict=True) if keep.value]
+            terms = [
+                _kept(sign, keep, copy, end)
+                for (sign, keep), copy, end in zip(leaf.keep, names, leaf.ends, strict=True)
+                if keep.value
+            ]
             return [f"{y} = min(max({' '.join([_ref(leaf.end), *terms])}, 0), 65535)"]
         if leaf.amount is None:
             return [f"{y} = {_target(leaf.end, x)}"]
-        return [*_aim(leaf.end, x), f"by = end - {x} if {x} < end else {x} - end",
-                _part(leaf.amount.kind, _ref(leaf.amount.number)), f"{y} = {x} + by if {x} < end else {x} - by"]
+        return [
+            *_aim(leaf.end, x),
+            f"by = end - {x} if {x} < end else {x} - end",
+            _part(leaf.amount.kind, _ref(leaf.amount.number)),
+            f"{y} = {x} + by if {x} < end else {x} - by",
+        ]
 
 
 def _ref(number: Number) -> str:
@@ -249,7 +277,11 @@ def _part(kind: str, number: str) -> str:
 
 def _kept(sign: int, keep: Number, x: str, end: Number) -> str:
     mark = "+" if sign > 0 else "-"
-    return f"{mark} ({x} - {_ref(end)})" if keep.value == 65536 else f"{mark} _kept({x}, {_ref(end)}, {_ref(keep)})"
+    return (
+        f"{mark} ({x} - {_ref(end)})"
+        if keep.value == 65536
+        else f"{mark} _kept({x}, {_ref(end)}, {_ref(keep)})"
+    )
 
 
 def _turned(condition: str | None, value: int) -> list[str]:
@@ -260,7 +292,10 @@ def _turned(condition: str | None, value: int) -> list[str]:
 
 def _any(any_of: Any, names: tuple[str, ...]) -> str | None:
     """Return the condition as text; empty where it always holds, None where it never does."""
-    return " or ".join(_all(a, names) for a in any_of) if any_of else None
+    if not any_of:
+        return None
+    text = " or ".join(_all(a, names) for a in any_of)
+    return f"({text})" if " or " in text or " and " in text else text
 
 
 def _all(all_of: All, names: tuple[str, ...]) -> str:
@@ -275,4 +310,3 @@ def _compare(test: Compare, names: tuple[str, ...]) -> str:
     high = " + ".join(f"{w} * ({x} >> 8)" for x, w in used) or "0"
     low = " + ".join(f"{w} * ({x} & 255)" for x, w in used) or "0"
     return f"_against({high}, {low}, {_ref(test.limit)}) {test.operator} 0"
-

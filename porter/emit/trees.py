@@ -77,8 +77,9 @@ class Syntax:
     indent: str = "    "
 
 
-def render(tree: Tree[V], ask: Callable[[int], tuple[str, str]], act: Callable[[V], list[str]],
-           syntax: Syntax) -> list[str]:
+def render(
+    tree: Tree[V], ask: Callable[[int], tuple[str, str]], act: Callable[[V], list[str]], syntax: Syntax
+) -> list[str]:
     """Return the tree as lines of an ``if`` chain.
 
     Args:

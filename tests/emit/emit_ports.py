@@ -13,13 +13,24 @@ WORDS = ("SET", "CLEAR", "MODE", "STOP")
 HOLD = Move("hold", 0)
 
 
-def port(name, machine, buttons, *, start_q=0, answer=None, outputs=("lamp",), constants=(), title="A test latch"):
+def port(
+    name, machine, buttons, *, start_q=0, answer=None, outputs=("lamp",), constants=(), title="A test latch"
+):
     """Return a port around *machine*; the answer is the latch unless told otherwise."""
     width = 1 << len(buttons)
     return Port(
-        name=name, title=title, spec_file=f"{name}.yaml", spec_sha256="0" * 64, buttons=tuple(buttons),
-        outputs=tuple(outputs), tick_s=1e-3, style="charge" if isinstance(machine, Charge) else "count",
-        start_q=start_q, answer=answer or ((0,) * width, (1,) * width), machine=machine, constants=tuple(constants),
+        name=name,
+        title=title,
+        spec_file=f"{name}.yaml",
+        spec_sha256="0" * 64,
+        buttons=tuple(buttons),
+        outputs=tuple(outputs),
+        tick_s=1e-3,
+        style="charge" if isinstance(machine, Charge) else "count",
+        start_q=start_q,
+        answer=answer or ((0,) * width, (1,) * width),
+        machine=machine,
+        constants=tuple(constants),
         why=("Made by hand for a test.",),
     )
 
@@ -33,7 +44,9 @@ def two_button():
 def filtered(press=5, release=5):
     """The same with both buttons agreeing over some ticks."""
     table = ((0, 1, 0, 0), (1, 1, 0, 0))
-    return port("pump_latch", Count(table, (False,) * 4, (press,) * 2, (release,) * 2, None), ("SET", "CLEAR"))
+    return port(
+        "pump_latch", Count(table, (False,) * 4, (press,) * 2, (release,) * 2, None), ("SET", "CLEAR")
+    )
 
 
 def toggle_count():
@@ -46,19 +59,27 @@ def toggle_sides():
     """A toggle that differs by side, with a clear button over it."""
     toggle = Toggle(0, (20, 31), (7, 9), (3, 1))
     machine = Count(((0, 0, 0, 0), (1, 1, 0, 0)), (True, True, False, False), (1, 3), (2, 2), toggle)
-    return port("desk_toggle", machine, ("PUSH", "CLEAR"), answer=((0, 0, 2, 2), (1, 1, 3, 3)), outputs=("lamp", "busy"))
+    return port(
+        "desk_toggle",
+        machine,
+        ("PUSH", "CLEAR"),
+        answer=((0, 0, 2, 2), (1, 1, 3, 3)),
+        outputs=("lamp", "busy"),
+    )
 
 
 def _one_cap(open_moves, held_moves, name, low=40000, high=20000):
     flip = (Test((1,), True, low),), (Test((1,), False, high),)
-    modes = tuple(
-        (ChargeMode((), (open_moves[q],)), ChargeMode(flip[q], (held_moves[q],))) for q in (0, 1)
-    )
+    modes = tuple((ChargeMode((), (open_moves[q],)), ChargeMode(flip[q], (held_moves[q],))) for q in (0, 1))
     start = open_moves[0].end
     constants = [
-        Constant("start.0", start, "Copy of the memory at power-on", f"0 V / 0.1 mV = {start}", f"{name}.yaml:3"),
+        Constant(
+            "start.0", start, "Copy of the memory at power-on", f"0 V / 0.1 mV = {start}", f"{name}.yaml:3"
+        ),
         Constant("flip.q0.h1.0.limit", low, "Upper threshold", "2/3 * 65536", f"{name}.yaml:4"),
-        Constant("move.q1.h1.0.end", held_moves[1].end, "Held level", "12 V * 10k/(10k + 5k)", f"{name}.yaml:6"),
+        Constant(
+            "move.q1.h1.0.end", held_moves[1].end, "Held level", "12 V * 10k/(10k + 5k)", f"{name}.yaml:6"
+        ),
     ]
     charge = Charge(("mem",), (0.0,), (1e-4,), (start,), modes)
     return port(name, charge, ("PUSH",), constants=constants)
@@ -85,9 +106,13 @@ def two_caps():
         (Test((3, -2), True, 60000),),
         (Move("mix", 50000, keep=(65000, 300), ends=ends), Move("mix", 40000, keep=(-200, 65536), ends=ends)),
     )
-    loose = ChargeMode((Test((3, -2), False, 5000),), (Move("shift", 100, 5), Move("multiply", 65535, rate=900)))
+    loose = ChargeMode(
+        (Test((3, -2), False, 5000),), (Move("shift", 100, 5), Move("multiply", 65535, rate=900))
+    )
     jump = ChargeMode((), (Move("jump", 12345), HOLD))
-    charge = Charge(("mem", "filter-gnd"), (0.0, 0.0), (1e-4, 1e-4), (0, 65535), ((mixed, jump), (loose, mixed)))
+    charge = Charge(
+        ("mem", "filter-gnd"), (0.0, 0.0), (1e-4, 1e-4), (0, 65535), ((mixed, jump), (loose, mixed))
+    )
     return port("pair_latch", charge, ("PUSH",))
 
 
@@ -109,8 +134,13 @@ def stimulus(made: Port, ticks: int, seed: int) -> np.ndarray:
 def suite(made: Port, ticks: int = 600, cases: int = 2) -> Suite:
     """Return a suite whose answers are the reference's."""
     return Suite(
-        made.name, made.title, made.buttons, made.outputs, made.tick_s,
-        tuple(_case(made, stimulus(made, ticks, seed), seed) for seed in range(cases)), ("Made for a test.",),
+        made.name,
+        made.title,
+        made.buttons,
+        made.outputs,
+        made.tick_s,
+        tuple(_case(made, stimulus(made, ticks, seed), seed) for seed in range(cases)),
+        ("Made for a test.",),
     )
 
 
@@ -137,7 +167,9 @@ def count_ports(draw, most_buttons: int = 4) -> Port:
     ticks = st.tuples(*[st.integers(1, 9)] * n)
     sides = lambda least, most: st.tuples(st.integers(least, most), st.integers(least, most))  # noqa: E731
     most = draw(st.sampled_from((12, 300)))
-    toggle = draw(st.none() | st.builds(Toggle, st.integers(0, n - 1), sides(0, most), sides(0, most), sides(0, most)))
+    toggle = draw(
+        st.none() | st.builds(Toggle, st.integers(0, n - 1), sides(0, most), sides(0, most), sides(0, most))
+    )
     live = draw(st.tuples(*[st.booleans()] * width))
     machine = Count((draw(bits), draw(bits)), live, draw(ticks), draw(ticks), toggle)
     return _dressed(draw, machine, n)
@@ -146,8 +178,14 @@ def count_ports(draw, most_buttons: int = 4) -> Port:
 def _dressed(draw, machine, n: int) -> Port:
     outputs = draw(st.integers(1, 2))
     row = st.tuples(*[st.integers(0, (1 << outputs) - 1)] * (1 << n))
-    return port("any_latch", machine, WORDS[:n], start_q=draw(st.integers(0, 1)), answer=(draw(row), draw(row)),
-                outputs=("lamp", "fan")[:outputs])
+    return port(
+        "any_latch",
+        machine,
+        WORDS[:n],
+        start_q=draw(st.integers(0, 1)),
+        answer=(draw(row), draw(row)),
+        outputs=("lamp", "fan")[:outputs],
+    )
 
 
 COPY = st.one_of(st.sampled_from((0, 1, 127, 32768, 65408, 65535)), st.integers(0, 65535))
@@ -160,15 +198,25 @@ def _move(caps: int) -> st.SearchStrategy[Move]:
     plain = st.one_of(
         st.just(HOLD),
         st.builds(Move, st.just("jump"), COPY),
-        st.builds(lambda end, shift, only: Move("shift", end, shift, only=only), COPY, st.integers(0, 15), ONLY),
-        st.builds(lambda end, rate, only: Move("multiply", end, rate=rate, only=only), COPY,
-                  st.integers(1, 65535), ONLY),
+        st.builds(
+            lambda end, shift, only: Move("shift", end, shift, only=only), COPY, st.integers(0, 15), ONLY
+        ),
+        st.builds(
+            lambda end, rate, only: Move("multiply", end, rate=rate, only=only),
+            COPY,
+            st.integers(1, 65535),
+            ONLY,
+        ),
     )
     if caps == 1:
         return plain
     keep = st.one_of(st.sampled_from((0, 65536)), st.integers(-65535, 65535))
-    mix = st.builds(lambda end, keeps, ends: Move("mix", end, keep=keeps, ends=ends),
-                    COPY, st.tuples(*[keep] * caps), st.tuples(*[COPY] * caps))
+    mix = st.builds(
+        lambda end, keeps, ends: Move("mix", end, keep=keeps, ends=ends),
+        COPY,
+        st.tuples(*[keep] * caps),
+        st.tuples(*[COPY] * caps),
+    )
     return st.one_of(plain, mix)
 
 
@@ -185,13 +233,19 @@ def charge_ports(draw, most_caps: int = 3) -> Port:
     """Ports of the charge style with every kind of move, sensible or not."""
     n, caps = draw(st.integers(1, 3)), draw(st.integers(1, most_caps))
     # A few modes used over and over, as in real ports, so that merging has something to do.
-    mode = st.builds(ChargeMode, st.lists(_test(caps), max_size=2).map(tuple), st.tuples(*[_move(caps)] * caps),
-                     st.lists(_test(caps), max_size=1).map(tuple), st.lists(_test(caps), max_size=2).map(tuple))
+    mode = st.builds(
+        ChargeMode,
+        st.lists(_test(caps), max_size=2).map(tuple),
+        st.tuples(*[_move(caps)] * caps),
+        st.lists(_test(caps), max_size=1).map(tuple),
+        st.lists(_test(caps), max_size=2).map(tuple),
+    )
     pool = st.sampled_from(draw(st.lists(mode, min_size=1, max_size=4)))
     half = st.tuples(*[pool] * (1 << n))
     start = draw(st.tuples(*[COPY] * caps))
-    charge = Charge(tuple(f"node{k}" for k in range(caps)), (0.0,) * caps, (1e-4,) * caps, start,
-                    (draw(half), draw(half)))
+    charge = Charge(
+        tuple(f"node{k}" for k in range(caps)), (0.0,) * caps, (1e-4,) * caps, start, (draw(half), draw(half))
+    )
     return _dressed(draw, charge, n)
 
 

@@ -65,8 +65,11 @@ class Core:
         self._write("state_at", states)
         self._write("held_at", held.astype(np.uint8))
         self._call("many", len(states))
-        return (self._read("state_at", len(states), self.kinds), self._read("answers_at", len(states), np.uint8),
-                self._read("rest_at", len(states), np.uint8))
+        return (
+            self._read("state_at", len(states), self.kinds),
+            self._read("answers_at", len(states), np.uint8),
+            self._read("rest_at", len(states), np.uint8),
+        )
 
     def _call(self, function: str, *arguments: int) -> int:
         return self.exports[f"{self.name}_{function}"](self.store, *arguments)  # type: ignore[operator]
@@ -104,10 +107,17 @@ def compile_cores(ports: list[Port], texts: list[dict[str, str]], where: Path, c
 def _zig(sources: list[str], where: Path, cache: Path) -> None:
     # One translation unit: starting the compiler costs more than compiling.
     (where / "all.c").write_text("".join(f'#include "{name}"\n' for name in sources))
-    flags = "-target wasm32-freestanding -std=c99 -O1 -nostdlib -Wl,--no-entry -Wall -Wextra -Wconversion -Werror"
+    flags = (
+        "-target wasm32-freestanding -std=c99 -O1 -nostdlib -Wl,--no-entry -Wall -Wextra -Wconversion -Werror"
+    )
     places = {"ZIG_GLOBAL_CACHE_DIR": str(cache), "ZIG_LOCAL_CACHE_DIR": str(cache)}
-    done = subprocess.run([sys.executable, "-m", "ziglang", "cc", *flags.split(), "all.c", "-o", "cores.wasm"],
-                          cwd=where, env=os.environ | places, capture_output=True, text=True)
+    done = subprocess.run(
+        [sys.executable, "-m", "ziglang", "cc", *flags.split(), "all.c", "-o", "cores.wasm"],
+        cwd=where,
+        env=os.environ | places,
+        capture_output=True,
+        text=True,
+    )
     assert done.returncode == 0, done.stderr
 
 

@@ -13,8 +13,14 @@ from porter.emit import emit
 from porter.port import step as reference
 from porter.port.model import Charge, Port, State
 
-MANY = settings(deadline=None, max_examples=2, phases=[Phase.generate], database=None, derandomize=True,
-                suppress_health_check=list(HealthCheck))
+MANY = settings(
+    deadline=None,
+    max_examples=2,
+    phases=[Phase.generate],
+    database=None,
+    derandomize=True,
+    suppress_health_check=list(HealthCheck),
+)
 MOST_STATES = 300_000
 
 
@@ -52,7 +58,9 @@ def walk(port: Port, core: Core) -> int:
 
 
 def _new(ours: State, theirs: np.ndarray, seen: set[bytes]) -> tuple[State, np.ndarray]:
-    rows = np.column_stack([ours.q, ours.regs, *(theirs[name] for name in theirs.dtype.names)]).astype(np.int32)
+    rows = np.column_stack([ours.q, ours.regs, *(theirs[name] for name in theirs.dtype.names)]).astype(
+        np.int32
+    )
     keys = [row.tobytes() for row in rows]
     fresh = [i for i, key in enumerate(keys) if key not in seen and not seen.add(key)]
     return State(ours.q[fresh], ours.regs[fresh]), theirs[fresh]
@@ -114,7 +122,9 @@ def _reachable(port: Port, core: Core) -> set[bytes]:
     while len(states):
         states = np.repeat(states, port.held_count)
         states, _, _ = core.step(states, np.tile(np.arange(port.held_count), len(states) // port.held_count))
-        states = states[[i for i, s in enumerate(states) if s.tobytes() not in ever and not ever.add(s.tobytes())]]
+        states = states[
+            [i for i, s in enumerate(states) if s.tobytes() not in ever and not ever.add(s.tobytes())]
+        ]
     return ever
 
 
@@ -146,7 +156,9 @@ def test_micropython_runs_without_the_heap():
     """In MicroPython itself the answers are the reference's, with the heap locked during each step."""
     ports = [make() for make in HAND_MADE]
     held = [stimulus(port, 400, 3) for port in ports]
-    expected = [bytes(reference.run(port, h[None, :])[0].tolist()) for port, h in zip(ports, held, strict=True)]
+    expected = [
+        bytes(reference.run(port, h[None, :])[0].tolist()) for port, h in zip(ports, held, strict=True)
+    ]
     # One interpreter for all, since its start is what costs; each script with names of its own.
     scripts = (f"exec({_drive(p, bytes(h.tolist()))!r}, {{}})" for p, h in zip(ports, held, strict=True))
     assert [f"bytearray({e!r})" for e in expected] == micropython("\n".join(scripts)).splitlines()
