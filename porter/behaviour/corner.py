@@ -64,7 +64,8 @@ def population(
     free = cols.free(published)
     alone = single_steps(cols, free)
     table = quantities(measure(Engine(circuit, alone, cols), keys))
-    moves = np.abs(table[1:] - table[0]).reshape(len(free), 2, -1) > 1e-9 * (1e-3 + np.abs(table[0]))
+    far = np.abs(table[1:] - table[0]) > 1e-9 * (1e-3 + np.abs(table[0]))
+    moves = far.reshape(len(free), 2, table.shape[1])
     moving = free[moves.any(axis=(1, 2))] if len(free) else free
     exhaustive = len(moving) <= MOST
     rows = corners(cols, moving) if exhaustive else _pointed(cols, free, moving, table)

@@ -39,15 +39,23 @@ class _Lost:
 
 def hold_not_guaranteed(case: Case) -> Iterator[Finding]:
     """A margin that the nominal unit has and some allowed unit has not; one finding a cause."""
-    busy = oscillating_masks(case)
-    causes: dict[tuple[int, bool, bool], list[_Lost]] = {}
+    busy, causes = oscillating_masks(case), {}
     for key, nominal in case.evidence.nominal.margins.items():
-        if nominal[0] >= 0 and key[0] not in busy:
+        if nominal[0] >= 0 and key[0] not in busy and not _follows(case, key):
             lost = _lost(case, key)
             if lost is not None:
                 causes.setdefault((lost.column, lost.at_most, lost.by_parts), []).append(lost)
     for losses in causes.values():
         yield _unsure(case, sorted(losses, key=_rank))
+
+
+def _follows(case: Case, key: MarginKey) -> bool:
+    """True where every unit that loses this margin while held has lost one at rest or at the press before."""
+    if key[0] == 0 or key[2] == "press":
+        return False
+    margins = case.evidence.published.measures.margins
+    before = [v < -_NEAR for k, v in margins.items() if k[0] == 0 or k[2] == "press"]
+    return bool(before) and not ((margins[key] < -_NEAR) & ~np.logical_or.reduce(before)).any()
 
 
 def _lost(case: Case, key: MarginKey) -> _Lost | None:
@@ -204,7 +212,7 @@ def _bound(case: Case, lost: _Lost, column: int, share: float) -> str:
         least = nominal + share * (least - nominal)
     kind, _, rest = name.partition(".")
     unit = _unit(case, name)
-    value = three(nominal, least, most, "" if unit in ("", "ohm") else unit)
+    value = three(nominal, least, most, {"": "1", "ohm": ""}.get(unit, unit))
     if kind == "timer":
         return f"fit a timer that is sure of `{rest}: {value}` and write that among its values"
     if kind == "supply":

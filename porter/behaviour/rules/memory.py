@@ -277,7 +277,7 @@ def _higher(case: Case, m: MemoryButton) -> str:
     family = FAMILIES[case.circuit.timer.family]
     for supply in _SUPPLIES:
         if case.supply < supply <= family.supply_v[1] and _works_at(case, m, supply):
-            return f"write `supply: {with_tolerance(supply, case.circuit.supply)}V`".replace(" ±", "V ±", 1).replace("%V`", "%`")
+            return f"write `supply: {with_tolerance(supply, case.circuit.supply, ' V')}`"
     return f"fit a timer whose output comes closer to the rails: `family: {_rail_to_rail()}`"
 
 

@@ -82,10 +82,8 @@ def wording(case: Case, candidate: Candidate) -> str:
     """Word the mend that a candidate is."""
     part = case.part(candidate.name)
     assert part is not None
-    text = with_tolerance(candidate.value, part.current or part.value)
-    if part.current is not None:
-        text = text.replace(" ", "A ", 1) if " " in text else text + "A"
-    return change(candidate.name, text)
+    unit = "A" if part.current is not None else ""
+    return change(candidate.name, with_tolerance(candidate.value, part.current or part.value, unit))
 
 
 def worst_row(case: Case, badness: Callable[[Engine], Floats]) -> Floats:

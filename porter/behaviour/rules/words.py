@@ -41,21 +41,24 @@ def plain(value: float, digits: int = 6) -> str:
     return str(_Figure(value, "").render(prec=digits - 1)).replace(" ", "").replace("µ", "u")
 
 
-def with_tolerance(value: float, spread: Spread) -> str:
+def with_tolerance(value: float, spread: Spread, unit: str = "") -> str:
     """Return a new nominal value with the relative tolerance that the old one had."""
     up, down = spread.most / spread.nominal - 1, 1 - spread.least / spread.nominal
+    text = f"{plain(value)}{unit}"
     if up < 1e-12 and down < 1e-12:
-        return plain(value)
+        return text
     if math.isclose(up, down, rel_tol=1e-6):
-        return f"{plain(value)} ±{up * 100:.6g}%"
-    return f"{plain(value)} +{up * 100:.6g}% -{down * 100:.6g}%"
+        return f"{text} ±{up * 100:.6g}%"
+    return f"{text} +{up * 100:.6g}% -{down * 100:.6g}%"
 
 
 def three(nominal: float, least: float, most: float, unit: str = "") -> str:
-    """Return a value with its range as a spec takes it."""
-    tail = f" {unit}" if unit else ""
+    """Return a value with its range as a spec takes it; a ratio has the unit ``1``."""
     named = (("nominal", nominal), ("least", least), ("most", most))
-    return "{" + ", ".join(f"{name}: {plain(v, 12)}{tail}" for name, v in named) + "}"
+    if unit == "1":
+        return "{" + ", ".join(f"{name}: {v:.6g}" for name, v in named) + "}"
+    tail = f" {unit}" if unit else ""
+    return "{" + ", ".join(f"{name}: {plain(v)}{tail}" for name, v in named) + "}"
 
 
 def series(value: float, up: bool, factor: float = 100.0) -> list[float]:
