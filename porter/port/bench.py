@@ -133,7 +133,9 @@ def _press_acts(port: Port, opened: State, button: int, q: int) -> np.ndarray:
         state = after
         if (still | acts).all():
             break
-    return acts & (opened.q == q)
+    # A state that turns by itself at this very tick says nothing about the press.
+    alone, _ = step(port, opened, np.zeros(len(opened.q), np.int64))
+    return acts & (opened.q == q) & (alone.q == q)
 
 
 def is_charge(port: Port) -> bool:
