@@ -12,7 +12,7 @@ from numpy.typing import NDArray
 
 from porter.behaviour.model import WindowKind
 from porter.circuit.engine import RESET, THRESHOLD, TRIGGER, Engine, Ints, Lanes, Mask
-from porter.circuit.flow import first_fall
+from porter.circuit.flow import first_fall, reach, turning_points
 from porter.circuit.network import Mode
 from porter.circuit.values import Floats
 
@@ -283,16 +283,11 @@ def _margins(
     wanted = _wanted(engine, rests, settled, out) if keys is None else keys
     guards = {key: engine.guards(lanes) for key, lanes in settled.items()}
     for mask, q, what in wanted:
-        if what.startswith("press"):
-            out.margins[mask, q, what] = _press_margin(engine, rests[q], mask)
-            continue
-        pin, side = what.split()
-        start = int(side[-1])
-        f = guards[start, mask][:, _PINS[pin]]
-        lanes = settled[start, mask]
-        sign = 1.0 if side.startswith("above") else -1.0
-        # A unit whose latch went the other way has lost the margin: tell by how much, on the side it fell.
-        out.margins[mask, q, what] = np.where(lanes.q == q, sign * f, -np.abs(f))
+        if what == "press":
+            out.margins[mask, q, what] = press_margin(engine, rests[q], mask)
+        else:
+            key = (int(what[-1]), mask)
+            out.margins[mask, q, what] = _hold_margin(settled[key], guards[key], q, what)
 
 
 def _wanted(
@@ -334,22 +329,59 @@ def _holding(q: int, f: Floats) -> Iterator[tuple[str, str]]:
         yield "trigger", "above"
 
 
-def _press_margin(engine: Engine, rest: Lanes, mask: int) -> Floats:
-    """How far the deciding voltage goes past its level when a button is pressed from rest."""
+def margin_of(engine: Engine, key: MarginKey) -> Floats:
+    """Return one margin of all units, shape (U,)."""
+    mask, q, what = key
+    if what == "press":
+        return press_margin(engine, engine.rest(q)[0], mask)
+    lanes, _ = engine.rest(int(what[-1]))
+    engine.press(lanes, mask)
+    engine.run(lanes, np.inf)
+    return _hold_margin(lanes, engine.guards(lanes), q, what)
+
+
+def _hold_margin(lanes: Lanes, guards: Floats, q: int, what: str) -> Floats:
+    pin, side = what.split()
+    f = guards[:, _PINS[pin]]
+    # A unit whose latch went the other way has lost the margin: tell by how much, on the side it fell.
+    return np.where(lanes.q == q, f if side.startswith("above") else -f, -np.abs(f))
+
+
+def press_margin(engine: Engine, rest: Lanes, mask: int) -> Floats:
+    """Return how far the deciding voltage goes past its level when a button is pressed from rest.
+
+    The farthest point is at the press, in the end, or (two capacitors sharing their charge) between.
+    """
     lanes = rest.copy()
     lanes.held[:] = mask
     engine.resolve(lanes, frozen=True)
-    now = _beyond(engine, lanes)
-    engine.run(lanes, np.inf, frozen=True)
-    return np.maximum(now, _beyond(engine, lanes))
+    best = _beyond(engine.guards(lanes), lanes.q)
+
+    def watch(rows: Ints, mode: Mode, z0: Floats, _: Floats, length: Floats) -> None:
+        best[rows] = np.maximum(best[rows], _between(mode, lanes.unit[rows], z0, length))
+
+    engine.run(lanes, np.inf, frozen=True, watcher=watch if engine.topo.states > 1 else None)
+    return np.maximum(best, _beyond(engine.guards(lanes), lanes.q))
 
 
-def _beyond(engine: Engine, lanes: Lanes) -> Floats:
+def _between(mode: Mode, unit: Ints, z0: Floats, length: Floats) -> Floats:
+    """Farthest that a stretch takes the deciding voltages at their turning points, shape (B,)."""
+    rate, G = mode.rate[unit], mode.Gz[unit, :3]
+    pull = mode.drive[unit] - rate * z0
+    best = np.full(len(unit), -np.inf)
+    for guard in range(3):
+        for t in turning_points(G[:, guard] * pull, rate, length).T:
+            z = z0 + pull * reach(rate, t[:, None])
+            f = mode.g0[unit, :3] + (G @ z[..., None])[..., 0]
+            best = np.maximum(best, _beyond(f, np.full(len(unit), mode.q)))
+    return best
+
+
+def _beyond(f: Floats, q: Ints) -> Floats:
     """Volts by which the comparators want to flip each latch (negative: they don't)."""
-    f = engine.guards(lanes)
     turn_low = np.maximum(np.minimum(f[:, THRESHOLD], f[:, TRIGGER]), -f[:, RESET])
     turn_high = np.minimum(-f[:, TRIGGER], f[:, RESET])
-    return np.where(lanes.q == 1, turn_low, turn_high)
+    return np.where(q == 1, turn_low, turn_high)
 
 
 def works(measures: Measures, nominal: Measures) -> NDArray[np.bool_]:

@@ -48,6 +48,25 @@ def first_fall(f0: Floats, d: Floats, rate: Floats, until: Floats) -> Floats:
     return t
 
 
+def turning_points(d: Floats, rate: Floats, until: Floats) -> Floats:
+    """Return where ``sum_i d_i reach(rate_i, t)`` turns, shape (R, m - 1); unused places hold an end.
+
+    Args:
+        d, rate: shape (R, m); until: shape (R,), may be inf.
+    """
+    order = np.argsort(rate, axis=1)
+    d, rate = np.take_along_axis(d, order, 1), np.take_along_axis(rate, order, 1)
+    return _exponential_zeros(d, rate, _end(rate, until))
+
+
+def _end(rate: Floats, until: Floats) -> Floats:
+    """Return when the last of rising rates is over, or *until* if that is sooner."""
+    slowest = np.where(rate > 0, rate, np.inf).min(axis=1)
+    with np.errstate(divide="ignore"):
+        settled = np.where(rate[:, 0] == 0, _LONG, 745.0 / slowest)  # exp(-745) is the last number above 0
+    return np.minimum(until, settled)
+
+
 def _one_term(f0: Floats, d: Floats, rate: Floats) -> Floats:
     with np.errstate(divide="ignore", invalid="ignore"):
         need = -f0 / d  # what reach() must become
@@ -59,10 +78,7 @@ def _one_term(f0: Floats, d: Floats, rate: Floats) -> Floats:
 def _many_terms(f0: Floats, d: Floats, rate: Floats, until: Floats) -> Floats:
     order = np.argsort(rate, axis=1)
     d, rate = np.take_along_axis(d, order, 1), np.take_along_axis(rate, order, 1)
-    slowest = np.where(rate > 0, rate, np.inf).min(axis=1)
-    with np.errstate(divide="ignore"):
-        settled = np.where(rate[:, 0] == 0, _LONG, 745.0 / slowest)  # exp(-745) is the last number above 0
-    end = np.minimum(until, settled)
+    end = _end(rate, until)
     turns = _exponential_zeros(d, rate, end)
     stops = np.concatenate([np.zeros((len(f0), 1)), turns, end[:, None]], 1)
 

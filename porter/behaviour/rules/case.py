@@ -127,14 +127,25 @@ def settle(engine: Engine, q: int, held: int) -> Lanes:
     return lanes
 
 
+def arrived(engine: Engine, q: int, mask: int) -> tuple[Lanes, Mask]:
+    """Return all units settled at *q* after a hold of *mask* turned them there, and where that works."""
+    lanes, ok = engine.rest(1 - q)
+    engine.press(lanes, mask)
+    engine.run(lanes, np.inf)
+    ok &= ~lanes.busy
+    engine.press(lanes, 0)
+    engine.run(lanes, np.inf)
+    return lanes, ok & (lanes.q == q) & ~lanes.busy
+
+
 def toggles(engine: Engine, mask: int) -> Mask:
-    """Return which units rest both ways and are turned both ways by a hold of *mask*, shape (U,)."""
+    """Return which units rest both ways and are turned both ways by holds of *mask*, again and again, shape (U,)."""
     good = np.ones(len(engine.rows), bool)
     for q in (0, 1):
-        rest, ok = engine.rest(q)
-        engine.press(rest, mask)
-        engine.run(rest, np.inf)
-        good &= ok & (rest.q == 1 - q) & ~rest.busy
+        lanes, ok = arrived(engine, q, mask)
+        engine.press(lanes, mask)
+        engine.run(lanes, np.inf)
+        good &= ok & engine.rest(q)[1] & (lanes.q == 1 - q) & ~lanes.busy
     return good
 
 
@@ -241,8 +252,9 @@ def _reaches(topo: Topology, start: int, inputs: set[int], evidence: Evidence) -
 
 
 def _turns(evidence: Evidence, m: MemoryButton) -> bool:
-    held, rests = evidence.nominal.held, evidence.nominal.rests
-    return all(rests[q][0] and held[q, m.mask][0] == 1 - q for q in (0, 1))
+    nominal = evidence.nominal
+    at_first = all(nominal.rests[q][0] and nominal.held[q, m.mask][0] == 1 - q for q in (0, 1))
+    return at_first and all(np.isfinite(nominal.windows[m.index, q, "re-arm-after-hold"][0]) for q in (0, 1))
 
 
 def _cured(evidence: Evidence, failing: Sequence[MemoryButton], rows: Floats | None) -> tuple[MemoryButton, ...]:

@@ -6,17 +6,15 @@ from dataclasses import dataclass
 import numpy as np
 
 from porter.behaviour.corner import Population
-from porter.behaviour.measure import MarginKey
+from porter.behaviour.measure import MarginKey, margin_of
 from porter.behaviour.rules.case import Case
 from porter.behaviour.rules.memory import oscillating_masks
 from porter.behaviour.rules.words import figure, held_words, level, plain, three, volts
-from porter.circuit.engine import RESET, THRESHOLD, TRIGGER, Engine
 from porter.circuit.family import KEYS
 from porter.circuit.values import Floats
 from porter.findings import Finding, Position
 from porter.spec.model import Button
 
-_PINS = {"trigger": TRIGGER, "threshold": THRESHOLD, "reset": RESET}
 _NEAR = 1e-9  # V; a margin of this much below zero is rounding
 
 
@@ -36,15 +34,25 @@ class _Lost:
     by_parts: bool
     parts_worst: float
 
+    @property
+    def cause(self) -> tuple[int, bool, bool]:
+        """What losses are merged by."""
+        return self.column, self.at_most, self.by_parts
+
 
 def hold_not_guaranteed(case: Case) -> Iterator[Finding]:
     """A margin that the nominal unit has and some allowed unit has not; one finding a cause."""
-    busy, causes = oscillating_masks(case), {}
-    for key, nominal in case.evidence.nominal.margins.items():
-        if nominal[0] >= 0 and key[0] not in busy and not _follows(case, key):
-            lost = _lost(case, key)
-            if lost is not None:
-                causes.setdefault((lost.column, lost.at_most, lost.by_parts), []).append(lost)
+    busy = oscillating_masks(case)
+    margins = case.evidence.nominal.margins
+    keys = [key for key, nominal in margins.items() if nominal[0] >= 0 and key[0] not in busy]
+    lost = [found for key in keys if (found := _lost(case, key)) is not None]
+    causes: dict[tuple[int, bool, bool], list[_Lost]] = {}
+    for one in lost:
+        if not _follows(case, one.key):
+            causes.setdefault(one.cause, []).append(one)
+    for one in lost:
+        if causes and _follows(case, one.key):
+            causes.get(one.cause, next(iter(causes.values()))).append(one)
     for losses in causes.values():
         yield _unsure(case, sorted(losses, key=_rank))
 
@@ -143,30 +151,6 @@ def _place(case: Case, name: str) -> Position:
     part = case.part(rest.split(".")[0])
     button = next((b for b in case.circuit.buttons if b.name == rest.split(".")[0]), None)
     return part.position if part else button.position if button else case.circuit.supply_position
-
-
-def margin_of(engine: Engine, key: MarginKey) -> Floats:
-    """Return one margin of all units (as `measure` takes it), shape (U,)."""
-    mask, q, what = key
-    if what == "press":
-        rest, _ = engine.rest(q)
-        rest.q[:], rest.held[:] = q, mask
-        engine.resolve(rest, frozen=True)
-        now = _beyond(engine, rest)
-        engine.run(rest, np.inf, frozen=True)
-        return np.maximum(now, _beyond(engine, rest))
-    pin, side = what.split()
-    lanes, _ = engine.rest(int(side[-1]))
-    engine.press(lanes, mask)
-    engine.run(lanes, np.inf)
-    f = engine.guards(lanes)[:, _PINS[pin]]
-    return np.where(lanes.q == q, f if side.startswith("above") else -f, -np.abs(f))
-
-
-def _beyond(engine: Engine, lanes) -> Floats:  # type: ignore[no-untyped-def]
-    f = engine.guards(lanes)
-    low = np.maximum(np.minimum(f[:, THRESHOLD], f[:, TRIGGER]), -f[:, RESET])
-    return np.where(lanes.q == 1, low, np.minimum(-f[:, TRIGGER], f[:, RESET]))
 
 
 def _narrow(case: Case, losses: list[_Lost]) -> str:

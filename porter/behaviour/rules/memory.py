@@ -9,6 +9,7 @@ from porter.behaviour.measure import OSCILLATES, WindowKey, measure
 from porter.behaviour.rules.case import (
     Case,
     MemoryButton,
+    arrived,
     hanging,
     leaks,
     name_of,
@@ -36,12 +37,15 @@ from porter.behaviour.rules.words import (
 )
 from porter.circuit.engine import THRESHOLD, TRIGGER, Engine, Mask
 from porter.circuit.family import FAMILIES
+from porter.circuit.network import GND
 from porter.circuit.values import Floats, columns
 from porter.findings import Finding, Position
 from porter.spec.model import Spread
 
 #: Supplies that people have at hand.
 _SUPPLIES = (5.0, 6.0, 9.0, 12.0, 15.0)
+#: Instants after a press at which its effect is looked at, seconds.
+_INSTANTS = np.concatenate([[0.0], np.geomspace(1e-12, 1e4, 321), [np.inf]])
 _GUARDS = {TRIGGER: "trigger", THRESHOLD: "threshold"}
 
 
@@ -62,22 +66,21 @@ class Reach:
 def press_reach(case: Case, engine: Engine, q: int, mask: int) -> Reach:
     """Return how far a press from rest takes the input that would turn the output (first unit)."""
     guard = THRESHOLD if q else TRIGGER
-    pin = _GUARDS[guard]
-    node = case.pin(pin)
-    lanes, _ = engine.rest(q)
-    lanes = lanes.take(np.array([0]))
-    lanes.q[:], lanes.held[:] = q, mask
-    engine.resolve(lanes, frozen=True)
-    seen = []
-    for _ in range(2):
-        seen.append((float(engine.guards(lanes)[0, guard]), _pin_volts(engine, lanes, node)))
-        engine.run(lanes, np.inf, frozen=True)
-    beyond, at = max(seen) if q else min(seen)
-    return Reach(pin, at, at - beyond)
+    lanes, came = arrived(engine, q, mask)
+    if not came[0]:
+        lanes, _ = engine.rest(q)
+    lanes = lanes.take(np.zeros(len(_INSTANTS), int))
+    lanes.q[:], lanes.held[:], lanes.busy[:] = q, mask, False
+    engine.run(lanes, _INSTANTS, frozen=True)
+    beyond, at = engine.guards(lanes)[:, guard], engine.volts(lanes)
+    far = int(beyond.argmax() if q else beyond.argmin())
+    volts_ = volts_at(at[far], _node(case, guard), float(engine.supply[0]))
+    return Reach(_GUARDS[guard], volts_, volts_ - float(beyond[far]))
 
 
-def _pin_volts(engine: Engine, lanes, node: int | None) -> float:  # type: ignore[no-untyped-def]
-    return volts_at(engine.volts(lanes)[0], -1 if node is None else node, float(engine.supply[0]))
+def _node(case: Case, guard: int) -> int:
+    node = case.pin(_GUARDS[guard])
+    return GND if node is None else node
 
 
 def _blamed(case: Case) -> set[int]:
@@ -144,7 +147,7 @@ def _idle_reach(case: Case, engine: Engine, q: int, mask: int) -> Reach:
     """Where the input that would turn the output settles with the latch kept at *q*."""
     guard = THRESHOLD if q else TRIGGER
     lanes = settle(engine, q, mask)
-    at = _pin_volts(engine, lanes, case.pin(_GUARDS[guard]))
+    at = volts_at(engine.volts(lanes)[0], _node(case, guard), float(engine.supply[0]))
     return Reach(_GUARDS[guard], at, at - float(engine.guards(lanes)[0, guard]))
 
 
@@ -195,7 +198,11 @@ def capacitor_on_inputs(case: Case) -> Iterator[Finding]:
 
 
 def _flips(case: Case, q: int, m: MemoryButton) -> bool:
-    return bool(np.isfinite(case.evidence.nominal.windows[m.index, q, "shortest-press"][0]))
+    """True where the button turns output *q* from rest, and once more after it was turned there."""
+    windows = case.evidence.nominal.windows
+    first, again = windows[m.index, q, "shortest-press"][0], windows[m.index, q, "re-arm-after-hold"][0]
+    came = np.isfinite(windows[m.index, 1 - q, "shortest-press"][0])
+    return bool(np.isfinite(first) and (np.isfinite(again) or not came))
 
 
 # --- divider-uneven ---
