@@ -1,6 +1,7 @@
 """Writes a port in C99: fits 8-bit parts, and means the same with an ``int`` of 16 bits as with one of 32."""
 
 import re
+from typing import ClassVar
 
 from porter.emit.fold import fold
 from porter.emit.language import Job, banner, microseconds, why
@@ -18,6 +19,7 @@ from porter.emit.lower import (
     Filter,
     Flips,
     Mix,
+    Motion,
     Parts,
     ToggleParts,
     copies,
@@ -26,7 +28,7 @@ from porter.emit.lower import (
 from porter.emit.names import comment, string, unique
 from porter.emit.numbers import Number, wrap
 from porter.emit.trees import LATCH, Leaf, Syntax, Tree, branch, leaves, render
-from porter.port.model import Port
+from porter.port.model import Charge, Port
 from porter.vectors.model import Case, Suite
 
 SYNTAX = Syntax(("if (", ") {"), ("} else if (", ") {"), "} else {", "}", "/* as it is */")
@@ -37,7 +39,7 @@ class C99:
     """The C99 core, self-test and pin layer."""
 
     folder = "firmware/c"
-    files = {
+    files: ClassVar[dict[str, str]] = {
         "c99/latch.h.j2": "{name}.h",
         "c99/latch.c.j2": "{name}.c",
         "c99/selftest.c.j2": "{name}_selftest.c",
@@ -263,7 +265,8 @@ class Core:
         live = render(toggle.live, self._ask_down, lambda yes: acts if yes else [], SYNTAX)
         press = [*branch("c == 0u", live, [], SYNTAX), *self._toward(toggle)]
         whole = branch(pressed, press, branch("c > 0u", ["c--;"], [], SYNTAX), SYNTAX)
-        note = f"/* {comment(self.port.buttons[toggle.button])} turns the latch once the re-arm counter has run out. */"
+        name = comment(self.port.buttons[toggle.button])
+        note = f"/* {name} turns the latch once the re-arm counter has run out. */"
         return ["", note, *whole]
 
     def _either(self, pair: tuple[Number, Number]) -> str:
@@ -299,17 +302,22 @@ class Core:
         lines = ["", "/* Decide with the charge from before this tick. */", *decide] if decide else []
         mixed = any(motion.mixed for motion in machine.motions)
         for k, (x, motion) in enumerate(zip(names, machine.motions, strict=True)):
-            about = comment(self.port.machine.capacitors[k])  # type: ignore[union-attr]
-            y = f"y{k}" if mixed else x
-            if motion.mixed:
-                moved = render(motion.mixed, self._ask, lambda leaf: self._mixed(leaf, x, y, names), SYNTAX)
-                moved = [f"uint16_t {y};", *moved]
-            else:
-                moved = self._move(motion.ends, motion.amounts, x, y)
+            moved = self._motion(motion, x, f"y{k}" if mixed else x, names)
+            about = comment(self._capacitor(k))
             lines += ["", f"/* Move the copy of {about} by one tick. */", *moved] if moved else []
         if mixed:
             lines += ["", *(f"{x} = y{k};" for k, x in enumerate(names))]
         return lines
+
+    def _capacitor(self, k: int) -> str:
+        assert isinstance(self.port.machine, Charge)
+        return self.port.machine.capacitors[k]
+
+    def _motion(self, motion: Motion, x: str, y: str, names: tuple[str, ...]) -> list[str]:
+        if motion.mixed is None:
+            return self._move(motion.ends, motion.amounts, x, y)
+        moved = render(motion.mixed, self._ask, lambda leaf: self._mixed(leaf, x, y, names), SYNTAX)
+        return [f"uint16_t {y};", *moved]
 
     def _flip(self, flips: Flips, names: tuple[str, ...]) -> list[str]:
         low, high = self._any(flips.low, names), self._any(flips.high, names)
@@ -363,7 +371,7 @@ class Core:
         ]
 
     def _aim(self, end: End, x: str, name: str) -> list[str]:
-        """Return the lines that set the target; a jump goes there at once, and the motion finds nothing left."""
+        """Return the lines that set the target; a jump goes there at once, so that no distance is left."""
         if end.number is None:
             return [f"{name} = {x};"]
         return [*(self._jump(end, x) if end.whole else []), f"{name} = {self._target(end, x)};"]
@@ -379,7 +387,7 @@ class Core:
         return f"{test} ? {ref} : {x}" if test else ref
 
     def _part(self, amounts: Tree[Amount], by: str, k: str) -> tuple[list[str], str]:
-        """Return the lines that choose the shift or rate, and the line that takes that part of the distance."""
+        """Return the lines that choose the shift or rate, and the line that takes it of the distance."""
         used = set(leaves(amounts))
         kind = next(iter(used)).kind
         name = f"{kind}{k}"
@@ -394,7 +402,7 @@ class Core:
 
     def _shifted(self, by: str, shift: str, least: int) -> str:
         """Return the line for a rounded shift that can't leave 16 bits on the way."""
-        half = f"(uint16_t)({by} >> ({shift} - 1u))"
+        half = f"(uint16_t)({by} >> (uint8_t)({shift} - 1u))"
         if least > 1:
             return f"{by} = (uint16_t)((uint16_t)({half} + 1u) >> 1u);"
         return f"{by} = (uint16_t)((uint16_t)({by} >> {shift}) + ({half} & 1u));"
@@ -423,7 +431,7 @@ class Core:
 def _bits(
     words: tuple[str, ...], names: tuple[str, ...], first: int, edge: tuple[int, ...]
 ) -> list[dict[str, str]]:
-    """Return rows for buttons or outputs; the example boards' pins are *first* and on, and those of *edge*."""
+    """Return rows for buttons or outputs, with the example boards' pins: *first* and on, those of *edge*."""
     shorts = unique(names)
     return [
         {

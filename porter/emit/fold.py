@@ -1,4 +1,4 @@
-"""Breaks long lines of code where a reader would: outermost brackets first, after a comma or before an operator."""
+"""Breaks long lines of code where a reader would: outside in, after a comma or before an operator."""
 
 import re
 

@@ -1,7 +1,7 @@
 """What every language's writer shares: the header's sentences and the shape of a writer."""
 
 from dataclasses import dataclass
-from typing import Protocol
+from typing import ClassVar, Protocol
 
 from porter.emit.lower import Parts
 from porter.emit.names import comment, identifier
@@ -33,8 +33,8 @@ class Language(Protocol):
     """A language to write a port in: templates, and a context of finished strings for them."""
 
     #: Template file -> path of the artefact, with ``{name}`` for the port's name.
-    files: dict[str, str]
-    #: Text of the page's comment lines may not be longer than the language's own style allows.
+    files: ClassVar[dict[str, str]]
+    #: Where in the job folder the artefacts go.
     folder: str
 
     def context(self, job: Job) -> dict[str, object]:

@@ -77,7 +77,7 @@ def tighten(tests: All) -> All | None:
 
 @dataclass(frozen=True, slots=True)
 class Tests:
-    """One mode's tests: the latch flips where any of `force` holds, or any of `flips` and none of `blocks`."""
+    """One mode's tests: it flips where any of `force` holds, or any of `flips` and none of `blocks`."""
 
     flips: tuple[Compare, ...]
     force: tuple[Compare, ...]
@@ -96,7 +96,7 @@ class Tests:
 
 
 def flips(forward: Tests, back: Tests) -> Any:
-    """Return when the latch flips and stays: *forward* holds and *back*, the mode behind the flip, doesn't."""
+    """Return when the latch flips and stays: *forward* holds, and *back*, the mode after it, doesn't."""
     found = (tighten((*go, *stay)) for go, stay in product(forward.holds(), back.fails()))
     kept = list(dict.fromkeys(alternative for alternative in found if alternative is not None))
     return tuple(
@@ -382,7 +382,7 @@ def _motion(port: Port, k: int, numbers: Numbers) -> Motion:
 
 
 def _as_rate(move: Move) -> Move:
-    """Return a shift as the rate that rounds the same: ``(d + 2**(s-1)) >> s == (d * 2**(16-s) + 2**15) >> 16``."""
+    """Return a shift as a rate: ``(d + 2**(s-1)) >> s == (d * 2**(16-s) + 2**15) >> 16``, to the bit."""
     if move.kind != "shift" or move.shift == 0:
         return move
     return replace(move, kind="multiply", rate=1 << (16 - move.shift), shift=0)
@@ -446,7 +446,8 @@ def _mix(port: Port, k: int, q: int, held: int, move: Move, numbers: Numbers) ->
 def _keep_number(port: Port, k: int, j: int, q: int, held: int, keep: int, numbers: Numbers) -> Number:
     charge = port.machine
     assert isinstance(charge, Charge)
-    about = f"What a distance of {charge.capacitors[j]} leaves in {charge.capacitors[k]} after a tick, in 65536ths."
+    pair = f"{charge.capacitors[j]} leaves in {charge.capacitors[k]}"
+    about = f"What a distance of {pair} after a tick, in 65536ths."
     key = f"move.q{q}.h{held}.{k}.keep.{j}"
     return numbers.get(f"KEEP_{k}_{j}", numbers.place(q, held), abs(keep), key, about)
 

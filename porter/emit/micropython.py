@@ -4,6 +4,7 @@ A step takes no memory from the heap: attributes are small integers, and no prod
 """
 
 import re
+from typing import ClassVar
 
 from porter.emit.c99 import suite_rows
 from porter.emit.fold import fold
@@ -35,7 +36,7 @@ class MicroPython:
     """The MicroPython core, self-test and pin layer."""
 
     folder = "firmware/micropython"
-    files = {
+    files: ClassVar[dict[str, str]] = {
         "micropython/latch.py.j2": "{name}.py",
         "micropython/selftest.py.j2": "{name}_selftest.py",
         "micropython/main.py.j2": "main.py",
@@ -179,7 +180,8 @@ class Core:
             f"pace = {_either(toggle.pace)}",
             *branch("c < hold", ["c = min(c + pace, hold)"], ["c = max(c - pace, hold)"], SYNTAX),
         ]
-        note = f"# {comment(self.port.buttons[toggle.button])} turns the latch once the re-arm counter has run out."
+        name = comment(self.port.buttons[toggle.button])
+        note = f"# {name} turns the latch once the re-arm counter has run out."
         return [
             note,
             *branch(self._ask_down(toggle.button)[0], press, branch("c", ["c -= 1"], [], SYNTAX), SYNTAX),

@@ -6,16 +6,20 @@ import unicodedata
 
 # C99 (ISO/IEC 9899:1999, 6.4.1) and the macros of <stdbool.h>.
 _C_WORDS = frozenset(
-    ["auto", "break", "case", "char", "const", "continue", "default", "do", "double", "else", "enum", "extern", "float", "for", "goto", "if", "inline", "int", "long", "register", "restrict", "return", "short", "signed", "sizeof", "static", "struct", "switch", "typedef", "union", "unsigned", "void", "volatile", "while", "_Bool", "_Complex", "_Imaginary", "bool", "true", "false", "asm"]
+    """
+    auto break case char const continue default do double else enum extern float for goto if inline int long
+    register restrict return short signed sizeof static struct switch typedef union unsigned void volatile
+    while _Bool _Complex _Imaginary bool true false asm
+    """.split()  # noqa: SIM905 - reads as the standard lists them
 )
 # Files beside the core, and modules that MicroPython's pin layer imports.
-_TAKEN = frozenset(["main", "board", "boot", "machine", "micropython", "time", "utime", "sys", "usys", "os", "uos", "gc", "stdint", "stdbool"])
+_TAKEN = frozenset("main board boot machine micropython time utime sys usys os uos gc stdint stdbool".split())  # noqa: SIM905
 
 _ASCII = {
     "µ": "u",
     "μ": "u",
     "Ω": "ohm",
-    "Ω": "ohm",
+    "\u2126": "ohm",
     "±": "+-",
     "×": "x",
     "·": "*",

@@ -1,6 +1,6 @@
 """Ports made by hand, and strategies that make more: what the planner could hand to the emit room."""
 
-from itertools import product
+from itertools import pairwise, product
 
 import numpy as np
 from hypothesis import strategies as st
@@ -152,7 +152,7 @@ def _case(made: Port, held: np.ndarray, seed: int) -> Case:
 def _runs(values: np.ndarray) -> tuple[tuple[int, int], ...]:
     edges = np.flatnonzero(np.diff(values)) + 1
     starts = np.concatenate([[0], edges, [len(values)]])
-    return tuple((int(b - a), int(values[a])) for a, b in zip(starts[:-1], starts[1:], strict=True))
+    return tuple((int(b - a), int(values[a])) for a, b in pairwise(starts))
 
 
 # --- strategies ---

@@ -29,7 +29,8 @@ void {name}_start(void);
 void {name}_many(int n);
 __attribute__((export_name("{name}_state_at"))) {name}_t *{name}_state_at(void) {{ return {name}_states; }}
 __attribute__((export_name("{name}_held_at"))) uint8_t *{name}_held_at(void) {{ return {name}_held; }}
-__attribute__((export_name("{name}_answers_at"))) uint8_t *{name}_answers_at(void) {{ return {name}_answers; }}
+__attribute__((export_name("{name}_answers_at"))) uint8_t *{name}_answers_at(void)
+{{ return {name}_answers; }}
 __attribute__((export_name("{name}_rest_at"))) uint8_t *{name}_rest_at(void) {{ return {name}_rest; }}
 __attribute__((export_name("{name}_start"))) void {name}_start(void) {{ {name}_init({name}_states); }}
 __attribute__((export_name("{name}_many"))) void {name}_many(int n) {{

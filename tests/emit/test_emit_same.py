@@ -38,7 +38,7 @@ def cores(ports: list[Port], where, cache) -> list[tuple[Port, Core]]:
 
 
 def walk(port: Port, core: Core) -> int:
-    """Step port and core side by side through every state that both can reach; return how many pairs there are.
+    """Step port and core side by side through every pair of states they reach; return how many.
 
     Two machines that answer alike in all of these answer alike for every sequence of any length.
     """
@@ -105,7 +105,7 @@ def test_any_port_is_the_same_over_long_sequences(batch, tmp_path_factory, cache
 
 
 def test_any_state_comes_back(tmp_path, cache):
-    """From any bit pattern of the state a count core is back in a state it can reach, with the buttons open."""
+    """From any bit pattern a count core is back in a state that it can reach, with the buttons open."""
     made = [make() for make in HAND_MADE if not isinstance(make().machine, Charge)]
     for port, core in cores(made, tmp_path, cache):
         random = np.random.default_rng(5)

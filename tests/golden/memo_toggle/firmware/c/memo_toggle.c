@@ -83,7 +83,7 @@ uint8_t memo_toggle_step(memo_toggle_t *m, uint8_t held)
         end = MEMO_TOGGLE_END_LOW_OPEN;
     }
     uint16_t by = (x < end) ? (uint16_t)(end - x) : (uint16_t)(x - end);
-    by = (uint16_t)((uint16_t)((uint16_t)(by >> (shift - 1u)) + 1u) >> 1u);
+    by = (uint16_t)((uint16_t)((uint16_t)(by >> (uint8_t)(shift - 1u)) + 1u) >> 1u);
     x = (x < end) ? (uint16_t)(x + by) : (uint16_t)(x - by);
 
     m->x = x;
