@@ -13,7 +13,7 @@ from porter.port.memory import Memory, memory
 from porter.port.model import U16, Charge, Port, State
 from porter.port.plan import answers
 from porter.port.step import start as port_start
-from porter.port.step import step
+from porter.port.swift import stepper
 from porter.simulate import Schedule, held_mask, simulate
 from porter.spec.model import RAILS, Circuit
 from porter.trace import Changes, Trace, Wave
@@ -127,9 +127,9 @@ def _port_changes(
     at = np.array([t for t, _ in steps])
     masks = np.array([held_mask(circuit, names) for _, names in steps])
     held = masks[np.searchsorted(at, times + 1e-9 * port.tick_s, side="right") - 1]
-    bits = []
+    bits, step = [], stepper(port)
     for h in held:
-        state, out = step(port, state, np.array([h]))
+        state, out = step(state, np.array([h]))
         bits.append(int(out[0]))
     return _by_output(circuit, times.tolist(), bits)
 

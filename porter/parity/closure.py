@@ -25,7 +25,8 @@ from porter.parity.model import Closure
 from porter.parity.twin import circuit_decides, circuit_moves
 from porter.port.memory import Memory
 from porter.port.model import U16, Charge, Port, State
-from porter.port.step import decide, step
+from porter.port.step import move_copies
+from porter.port.swift import stepper
 
 _COPIES = U16 + 1
 
@@ -126,8 +127,8 @@ class _Table:
         for q in (0, 1):
             for h in self.masks:
                 state = State(np.full(_COPIES, q, np.uint8), self.X)
-                after, _ = step(port, state, h * full)
-                self.decided[q, h] = decide(self.machine, state.q, self.X, h * full)
+                after, _ = stepper(port)(state, h * full)
+                self.decided[q, h] = after.q
                 self.next_q[q, h], self.next_x[q, h] = after.q, after.regs[:, 0]
                 self.truth[q, h] = circuit_decides(mem, q, h, self.X).q
                 turns = np.flatnonzero(np.diff(self.truth[q, h]))
@@ -178,8 +179,6 @@ class _Table:
         return np.asarray((seen[q] & (self.decided[q, h] == q)) | (seen[1 - q] & (self.decided[1 - q, h] == q)))
 
     def _moved(self, q: int, h: int) -> Ints:
-        from porter.port.step import move_copies
-
         return move_copies(self.machine.modes[q][h].moves[0], 0, self.X)
 
     def factor(self, q: int, h: int) -> float:

@@ -13,7 +13,7 @@ from porter.parity.twin import circuit_decides, circuit_moves, port_decides
 from porter.port.charge import one_tick
 from porter.port.memory import Memory, settled_mode
 from porter.port.model import U16, Charge, Port, State
-from porter.port.step import start, step
+from porter.port.step import move_copies, start, step
 
 _CELLS = 1024  # intervals that a capacitor's range is cut in beside a counting port
 _GRID = 4096  # about how many states the several-capacitor walk looks at in each mode
@@ -273,8 +273,6 @@ def _grid(kept: int) -> Ints:
 
 def _local(mem: Memory, port: Port, grid: Ints, q: int, h: int) -> tuple[Floats, Mask]:
     """One tick of port against circuit with the latch at q; error in copies and flips inside the tick."""
-    from porter.port.step import move_copies
-
     assert isinstance(port.machine, Charge)
     lanes = circuit_moves(mem, q, h, grid, port.tick_s)
     moved = np.column_stack([move_copies(m, k, grid) for k, m in enumerate(port.machine.modes[q][h].moves)])

@@ -14,8 +14,9 @@ from numpy.typing import NDArray
 from porter.circuit.engine import Engine, Ints, Lanes, Mask
 from porter.circuit.values import Floats
 from porter.port.memory import Memory, memory
-from porter.port.model import Charge, Port, State
-from porter.port.step import decide, start, step
+from porter.port.model import Port, State
+from porter.port.step import start
+from porter.port.swift import decider, stepper
 from porter.spec.model import Circuit
 
 
@@ -45,7 +46,7 @@ class Twin:
         """Give all the held masks of one tick; returns both latches right after the boundary's decision."""
         self.engine.press(self.lanes, held)
         decided = self.lanes.q.copy()
-        self.state, _ = step(self.port, self.state, held)
+        self.state, _ = stepper(self.port)(self.state, held)
         flips = self.lanes.flips.copy()
         self.engine.run(self.lanes, self.port.tick_s)
         self.twice |= self.lanes.flips - flips > 1
@@ -72,7 +73,7 @@ class Twin:
 
     def port_tick(self, held: Ints) -> Ints:
         """Step the ports alone; returns their latches."""
-        self.state, _ = step(self.port, self.state, held)
+        self.state, _ = stepper(self.port)(self.state, held)
         return self.state.q.astype(np.int64)
 
     def take(self, rows: NDArray[np.integer] | Mask) -> "Twin":
@@ -83,9 +84,7 @@ class Twin:
 
 def port_decides(port: Port, state: State, held: Ints) -> Ints:
     """Return the port's latch after the decision of a tick, without moving."""
-    if isinstance(port.machine, Charge):
-        return decide(port.machine, state.q, state.regs, held).astype(np.int64)
-    return step(port, state, held)[0].q.astype(np.int64)
+    return decider(port)(state, held).astype(np.int64)
 
 
 def circuit_decides(mem: Memory, q: Ints | int, held: Ints | int, copies: Floats | Ints) -> Lanes:

@@ -6,7 +6,8 @@ import numpy as np
 
 from porter.circuit.engine import Ints
 from porter.port.model import Charge, Port, State
-from porter.port.step import idle, start, step
+from porter.port.step import start
+from porter.port.swift import stepper
 
 _LONGEST = 200_000  # ticks after which a port that still moves is taken as never settling
 _WINDOW = 20_000  # longest window looked for, ticks
@@ -41,9 +42,9 @@ def _rest(port: Port, q: int, copies: tuple[tuple[int, ...], tuple[int, ...]] | 
 
 def settle(port: Port, state: State, held: int) -> tuple[State, bool]:
     """Hold a mask until nothing changes; returns the state and whether it settled (one lane)."""
-    masks = np.array([held])
+    masks, step = np.array([held]), stepper(port)
     for tick in range(_LONGEST):
-        after, _ = step(port, state, masks)
+        after, _ = step(state, masks)
         if (after.q == state.q).all() and (after.regs == state.regs).all():
             return after, True
         state = after
@@ -54,9 +55,9 @@ def settle(port: Port, state: State, held: int) -> tuple[State, bool]:
 
 def _moves_on(port: Port, state: State, held: int) -> bool:
     """False where the latch turns again and again while nothing is pressed or let go."""
-    masks, turns = np.array([held]), 0
+    masks, turns, step = np.array([held]), 0, stepper(port)
     for _ in range(2000):
-        after, _ = step(port, state, masks)
+        after, _ = step(state, masks)
         turns += int(after.q[0] != state.q[0])
         state = after
     return turns < 4
@@ -73,13 +74,14 @@ def shortest_press(bench: Bench, button: int, q: int) -> int | None:
     state = bench.rest[q]
     if state is None:
         return None
-    masks = np.array([1 << button])
+    masks, step = np.array([1 << button]), stepper(bench.port)
     for ticks in range(1, _WINDOW):
-        if idle(bench.port, state, masks)[0] and ticks > 1:
-            return None
-        state, _ = step(bench.port, state, masks)
-        if state.q[0] != q:
+        after, _ = step(state, masks)
+        if after.q[0] != q:
             return ticks
+        if (after.regs == state.regs).all():
+            return None
+        state = after
     return None
 
 
@@ -91,7 +93,7 @@ def re_arm(bench: Bench, button: int, q: int, held: bool) -> int | None:
         return None
     state = rest
     for _ in range(press):
-        state, _ = step(port, state, np.array([1 << button]))
+        state, _ = stepper(port)(state, np.array([1 << button]))
     if held:
         state, _ = settle(port, state, 1 << button)
     if state.q[0] != q:
@@ -111,9 +113,9 @@ def _openings(port: Port, state: State) -> State:
     """States after 1, 2, 3 … open ticks until nothing moves."""
     q: list[np.ndarray] = []
     regs: list[np.ndarray] = []
-    none = np.array([0])
+    none, step = np.array([0]), stepper(port)
     for _ in range(_WINDOW):
-        after, _ = step(port, state, none)
+        after, _ = step(state, none)
         q.append(after.q)
         regs.append(after.regs)
         if (after.q == state.q).all() and (after.regs == state.regs).all():
@@ -125,16 +127,16 @@ def _openings(port: Port, state: State) -> State:
 def _press_acts(port: Port, opened: State, button: int, q: int) -> np.ndarray:
     """Whether holding the button from each of these states turns the latch from q within a settling time."""
     masks: Ints = np.full(len(opened.q), 1 << button, np.int64)
-    state, acts = opened, np.zeros(len(opened.q), bool)
+    state, acts, step = opened, np.zeros(len(opened.q), bool), stepper(port)
     for _ in range(4000):
-        after, _ = step(port, state, masks)
+        after, _ = step(state, masks)
         acts |= after.q != q
         still = (after.q == state.q) & (after.regs == state.regs).all(axis=1)
         state = after
         if (still | acts).all():
             break
     # A state that turns by itself at this very tick says nothing about the press.
-    alone, _ = step(port, opened, np.zeros(len(opened.q), np.int64))
+    alone, _ = step(opened, np.zeros(len(opened.q), np.int64))
     return acts & (opened.q == q) & (alone.q == q)
 
 

@@ -8,7 +8,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from porter.port.model import U16, Charge, Count, Port, State
-from porter.port.step import start, step
+from porter.port.step import start
+from porter.port.swift import stepper as swift
 from porter.vectors.mealy import rows, state_of
 
 Runs = tuple[tuple[int, int], ...]
@@ -16,8 +17,6 @@ Ints = NDArray[np.int64]
 
 #: The most ticks that a port is given to come to rest; longer is taken as "never".
 LONGEST_SETTLE = 1 << 16
-#: Held combinations up to which a one-capacitor port is stepped by look-up.
-MOST_TABLES = 16
 
 
 def merged(runs: Iterable[tuple[int, int]]) -> Runs:
@@ -62,27 +61,12 @@ class Stepper:
 
 @lru_cache(maxsize=2)
 def stepper(port: Port) -> Stepper:
-    """Return the reference step of *port*, as a table where it has one capacitor and few buttons."""
-    if isinstance(port.machine, Charge) and len(port.machine.start) == 1 and port.held_count <= MOST_TABLES:
-        return _tabled(port)
-    return Stepper(rows(start(port)), lambda now, masks: _plain(port, now, masks))
-
-
-def _plain(port: Port, now: Ints, masks: Ints) -> tuple[Ints, Ints]:
-    after, out = step(port, state_of(now), masks)
-    return rows(after), out.astype(np.int64)
-
-
-def _tabled(port: Port) -> Stepper:
-    """Step every one of the 2 x 65 536 states once with each mask; then a step is a look-up."""
-    q, X = np.divmod(np.arange(2 * (U16 + 1)), U16 + 1)
-    every = np.column_stack([q, X])
-    tables = [_plain(port, every, np.full(len(every), mask)) for mask in range(port.held_count)]
-    after, out = (np.stack([table[i] for table in tables]) for i in (0, 1))
+    """Return the reference step of *port* on rows."""
+    step = swift(port)
 
     def advance(now: Ints, masks: Ints) -> tuple[Ints, Ints]:
-        place = now[:, 0] * (U16 + 1) + now[:, 1]
-        return after[masks, place], out[masks, place]
+        after, out = step(state_of(now), masks)
+        return rows(after), out.astype(np.int64)
 
     return Stepper(rows(start(port)), advance)
 
