@@ -94,7 +94,7 @@ def first_flip(engine: Engine, lanes: Lanes, duration: Floats | float) -> Floats
     def listen(rows: Ints, times: Floats, _: Ints) -> None:
         when[rows] = np.minimum(when[rows], times - begin[rows])
 
-    engine.run(lanes, duration, listener=listen)
+    engine.run(lanes, duration, one_flip=True, listener=listen)
     return when
 
 

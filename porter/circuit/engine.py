@@ -20,7 +20,7 @@ Ints = NDArray[np.int64]
 Mask = NDArray[np.bool_]
 TRIGGER, THRESHOLD, RESET = 0, 1, 2
 #: Flips within one stretch of constant buttons after which a lane is said to oscillate.
-BUSY = 40
+BUSY = 16
 _EVENTS = 100_000  # a backstop: a run of constant buttons has far fewer events
 _ROUNDS = 64  # looks at one instant before it is said never to come to rest
 
@@ -156,6 +156,7 @@ class Engine:
         duration: Floats | float,
         *,
         frozen: bool = False,
+        one_flip: bool = False,
         watcher: Watcher | None = None,
         listener: Listener | None = None,
     ) -> None:
@@ -164,11 +165,13 @@ class Engine:
         Args:
             duration: seconds, scalar or shape (B,).
             frozen: let no comparator act; one-way branches still switch.
+            one_flip: leave a lane where it is right after its first flip.
             watcher, listener: told of every stretch and every flip.
         """
         left = np.broadcast_to(np.asarray(duration, float), len(lanes)).copy()
+        before = lanes.q.copy()
         self.resolve(lanes, frozen=frozen, listener=listener)
-        todo = np.flatnonzero(~lanes.busy)
+        todo = np.flatnonzero(~lanes.busy & ((lanes.q == before) | (not one_flip)))
         for _ in range(_EVENTS):
             if not len(todo):
                 return
@@ -178,8 +181,11 @@ class Engine:
                 return
             part = lanes.take(moved)
             self.resolve(part, frozen=frozen, listener=_offset(listener, moved))
+            go_on = ~part.busy & (left[moved] > 0)
+            if one_flip:
+                go_on &= part.q == lanes.q[moved]
             lanes.put(moved, part)
-            todo = moved[~part.busy & (left[moved] > 0)]
+            todo = moved[go_on]
         raise RuntimeError("the circuit's events do not come to an end; this is a fault in porter")
 
     def _by_mode(self, lanes: Lanes, rows: Ints) -> list[tuple[Mode, Ints]]:
