@@ -110,7 +110,8 @@ def _dominance(circuit: Circuit, nominal: Measures) -> str:
     sets = [i for i in range(count) if _command(nominal, 1 << i) == (1, 1)]
     resets = [i for i in range(count) if _command(nominal, 1 << i) == (0, 0)]
     both = {_command(nominal, 1 << s | 1 << r) for s in sets for r in resets}
-    return {((0, 0),): "reset-dominant", ((1, 1),): "set-dominant"}.get(tuple(both), "")  # type: ignore[call-overload, no-any-return]
+    names: dict[tuple[tuple[int, ...], ...], str] = {((0, 0),): "reset-dominant", ((1, 1),): "set-dominant"}
+    return names.get(tuple(both), "")
 
 
 def _release_rows(circuit: Circuit, engine: Engine) -> Iterator[ReleaseRow]:

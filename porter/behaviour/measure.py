@@ -119,7 +119,7 @@ def acts_on_release(engine: Engine, start: Lanes, mask: int, press_s: Floats) ->
     q = lanes.q.copy()
     engine.press(lanes, 0)
     flipped = lanes.q != q
-    return flipped | np.isfinite(first_flip(engine, lanes, np.inf))
+    return np.asarray(flipped | np.isfinite(first_flip(engine, lanes, np.inf)))
 
 
 def _shortest(engine: Engine, start: Lanes, ok: Mask, mask: int) -> Floats:
@@ -198,7 +198,7 @@ def press_acts(engine: Engine, lanes: Lanes, mask: int, gap_s: Floats) -> Mask:
     same = part.q == lanes.q
     engine.press(part, mask)
     flipped = part.q != lanes.q
-    return same & (flipped | np.isfinite(first_flip(engine, part, np.inf)))
+    return np.asarray(same & (flipped | np.isfinite(first_flip(engine, part, np.inf))))
 
 
 def least_gap(engine: Engine, lanes: Lanes, mask: int) -> Floats:
@@ -223,7 +223,7 @@ def least_gap(engine: Engine, lanes: Lanes, mask: int) -> Floats:
 def _is_edge(engine: Engine, lanes: Lanes, mask: int, gap: Floats) -> Mask:
     above = press_acts(engine, lanes, mask, gap * (1 + 1e-9) + 1e-15)
     below = press_acts(engine, lanes, mask, gap * (1 - 1e-6))
-    return above & (~below | (gap == 0))
+    return np.asarray(above & (~below | (gap == 0)))
 
 
 def _halve_gap(engine: Engine, lanes: Lanes, mask: int, far: Floats) -> Floats:

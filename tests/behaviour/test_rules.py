@@ -7,10 +7,10 @@ import re
 from dataclasses import dataclass
 
 import pytest
+from behaviour_circuits import IDEAL, apply, derive, latch, of_rule, rules_of, toggle
 
 from porter.behaviour.rules import RULES
 from porter.spec.read import read_text
-from tests.behaviour.circuits import IDEAL, apply, derive, latch, of_rule, rules_of, toggle
 
 
 @dataclass(frozen=True)
@@ -69,7 +69,10 @@ CASES = [
         "broken-by-a-press",  # a contact that opens takes the pull-up with it
         "floating-input",
         "error",
-        latch({"R1": "{resistor: 10k, between: [top, set]}"}, {"STOP": "{between: [vcc, top], normally: closed}"}),
+        latch(
+            {"R1": "{resistor: 10k, between: [top, set]}"},
+            {"STOP": "{between: [vcc, top], normally: closed}"},
+        ),
         latch(
             {"R1": "{resistor: 10k, between: [top, set]}", "R9": "{resistor: 100k, between: [vcc, set]}"},
             {"STOP": "{between: [vcc, top], normally: closed}"},
@@ -153,8 +156,12 @@ CASES = [
         "output-drawn-down",  # 400 ohm on 200 ohm: two thirds of the supply
         "output-overloaded",
         "warning",
-        latch({"RL": "{load: 398, between: [out, gnd]}", "R3": None, "D1": None}, family="cmos", supply="5 V"),
-        latch({"RL": "{load: 402, between: [out, gnd]}", "R3": None, "D1": None}, family="cmos", supply="5 V"),
+        latch(
+            {"RL": "{load: 398, between: [out, gnd]}", "R3": None, "D1": None}, family="cmos", supply="5 V"
+        ),
+        latch(
+            {"RL": "{load: 402, between: [out, gnd]}", "R3": None, "D1": None}, family="cmos", supply="5 V"
+        ),
         "out",
         r"3\.32\d V, below 3\.333 V",
     ),
@@ -289,13 +296,19 @@ CASES = [
         "hold-not-guaranteed",
         "warning",
         toggle(
-            {"RA": "{resistor: 10k ±4.2%, between: [vcc, mid]}", "RB": "{resistor: 10k ±4%, between: [mid, gnd]}",
-             "RF": "{resistor: 10M, between: [out, store]}"},
+            {
+                "RA": "{resistor: 10k ±4.2%, between: [vcc, mid]}",
+                "RB": "{resistor: 10k ±4%, between: [mid, gnd]}",
+                "RF": "{resistor: 10M, between: [out, store]}",
+            },
             values=spread("threshold_ratio", "0.52"),
         ),
         toggle(
-            {"RA": "{resistor: 10k ±3.9%, between: [vcc, mid]}", "RB": "{resistor: 10k ±3.9%, between: [mid, gnd]}",
-             "RF": "{resistor: 10M, between: [out, store]}"},
+            {
+                "RA": "{resistor: 10k ±3.9%, between: [vcc, mid]}",
+                "RB": "{resistor: 10k ±3.9%, between: [mid, gnd]}",
+                "RF": "{resistor: 10M, between: [out, store]}",
+            },
             values=spread("threshold_ratio", "0.52"),
         ),
         "10k ±4.2%",
@@ -443,7 +456,9 @@ def test_mend_carried_out_clears(case: Case) -> None:
 
 
 def test_findings_are_in_the_order_of_the_spec() -> None:
-    text = latch({"R1": None, "R3": "{resistor: 100, between: [out, lamp]}"}, more="intent:\n  - {power_on: low}\n")
+    text = latch(
+        {"R1": None, "R3": "{resistor: 100, between: [out, lamp]}"}, more="intent:\n  - {power_on: low}\n"
+    )
     positions = [f.position for f in derive(text).findings]
 
     assert positions == sorted(positions)

@@ -115,6 +115,12 @@ def volts_at(volts: Floats, node: int, supply: float) -> float:
     return supply if node == VCC else 0.0 if node == GND else float(volts[node])
 
 
+def deciding(evidence: Evidence) -> set[int]:
+    """Return the nodes of the trigger and threshold pins."""
+    pins, topo = evidence.circuit.timer.pins, evidence.engine.topo
+    return {topo.node(pins[pin]) for pin in ("trigger", "threshold") if pin in pins}
+
+
 def name_of(topo: Topology, node: int) -> str:
     """Return the name of a node or rail."""
     return {VCC: "vcc", GND: "gnd"}.get(node) or topo.nodes[node]
@@ -139,7 +145,7 @@ def arrived(engine: Engine, q: int, mask: int) -> tuple[Lanes, Mask]:
 
 
 def toggles(engine: Engine, mask: int) -> Mask:
-    """Return which units rest both ways and are turned both ways by holds of *mask*, again and again, shape (U,)."""
+    """Return which units rest both ways and are turned both ways by holds of *mask*, time and again."""
     good = np.ones(len(engine.rows), bool)
     for q in (0, 1):
         lanes, ok = arrived(engine, q, mask)
@@ -160,7 +166,9 @@ def leaks(circuit: Circuit) -> list[str]:
     return found + [f"buttons.{b.name}.leak" for b in circuit.buttons if b.leak is not None]
 
 
-def without_leak(case_cols: Columns, circuit: Circuit, rows: Floats, columns: Sequence[str], share: float) -> Floats:
+def without_leak(
+    case_cols: Columns, circuit: Circuit, rows: Floats, columns: Sequence[str], share: float
+) -> Floats:
     """Return rows in which the named leakages let only a *share* of their current through."""
     rows = rows.copy()
     for name in columns:
@@ -222,7 +230,7 @@ def _lasting(evidence: Evidence) -> tuple[tuple[int, int], ...]:
 
 def _memory_buttons(evidence: Evidence, situations: dict[tuple[int, int], Situation]) -> list[MemoryButton]:
     topo, supply = evidence.engine.topo, evidence.circuit.supply.nominal
-    inputs = {topo.node(n) for pin, n in evidence.circuit.timer.pins.items() if pin in ("trigger", "threshold")}
+    inputs = deciding(evidence)
     stores = {node for a, b, _, _ in topo.caps for node in (a, b) if node >= 0}
     swing = np.abs(situations[1, 0].volts - situations[0, 0].volts)
     found = []
@@ -257,7 +265,9 @@ def _turns(evidence: Evidence, m: MemoryButton) -> bool:
     return at_first and all(np.isfinite(nominal.windows[m.index, q, "re-arm-after-hold"][0]) for q in (0, 1))
 
 
-def _cured(evidence: Evidence, failing: Sequence[MemoryButton], rows: Floats | None) -> tuple[MemoryButton, ...]:
+def _cured(
+    evidence: Evidence, failing: Sequence[MemoryButton], rows: Floats | None
+) -> tuple[MemoryButton, ...]:
     if not failing or rows is None:
         return ()
     engine = Engine(evidence.circuit, rows, evidence.engine.columns)
@@ -274,7 +284,7 @@ def _leakless(evidence: Evidence) -> Floats | None:
 def hanging(evidence: Evidence, m: MemoryButton) -> list[str]:
     """Return the capacitors with an end on a trigger or threshold node, but the memory's own."""
     topo = evidence.engine.topo
-    inputs = {topo.node(n) for pin, n in evidence.circuit.timer.pins.items() if pin in ("trigger", "threshold")}
+    inputs = deciding(evidence)
     near = {m.entry, *inputs} - {m.store, GND, VCC}
     return [name for a, b, _, name in topo.caps if {a, b} & near and m.store not in (a, b)]
 

@@ -21,7 +21,7 @@ from porter.behaviour.rules.words import (
 from porter.circuit.engine import Engine, Mask
 from porter.circuit.family import FAMILIES
 from porter.circuit.values import Floats
-from porter.findings import Finding
+from porter.findings import Finding, Severity
 
 #: Twice the 50 mA rating of small tactile switches (Omron B3F; sealed gold contacts reach 100 mA).
 CONTACT_MOST_A = 0.1
@@ -58,14 +58,21 @@ def _contacts(case: Case, situation: Situation) -> Iterator[tuple[int, float]]:
 def _short(case: Case, index: int, current: float, situation: Situation) -> Finding:
     button = case.circuit.buttons[index]
     message = (
-        f"{held_words(case.circuit, situation.held)}, output {level(situation.q)}: {figure(current, 'A')} through the contact "
-        f"of {button.name} from rail to rail is more than {figure(CONTACT_MOST_A, 'A')} (a small push-button's rating)"
+        f"{held_words(case.circuit, situation.held)}, output {level(situation.q)}: {figure(current, 'A')} "
+        f"from rail to rail through the contact of {button.name} is more than {figure(CONTACT_MOST_A, 'A')} "
+        f"(a small push-button's rating)"
     )
     ohm = at_least(case.circuit.supply.most / CONTACT_FINE_A)
     node = new_name(case.circuit, f"{button.name.lower()}_k")
-    resistor = add_part(new_name(case.circuit, f"R{button.name}"), "resistor", plain(ohm), button.nodes[0], node)
+    resistor = add_part(
+        new_name(case.circuit, f"R{button.name}"), "resistor", plain(ohm), button.nodes[0], node
+    )
     return Finding(
-        "supply-short", "error", button.position, message, f"{move(button.name, node, button.nodes[1])} and {resistor}"
+        "supply-short",
+        "error",
+        button.position,
+        message,
+        f"{move(button.name, node, button.nodes[1])} and {resistor}",
     )
 
 
@@ -78,8 +85,8 @@ def output_overloaded(case: Case) -> Iterator[Finding]:
     current, key = max((abs(_output_current(case, case.situations[k])), k) for k in case.lasting)
     if current > rated * _SLACK:
         message = (
-            f"{held_words(case.circuit, key[1])}, output {level(key[0])}: {figure(current, 'A')} at the output "
-            f"is more than {figure(rated, 'A')}, the {case.circuit.timer.family} family's rating"
+            f"{held_words(case.circuit, key[1])}, output {level(key[0])}: {figure(current, 'A')} at the "
+            f"output is more than {figure(rated, 'A')}, the {case.circuit.timer.family} family's rating"
         )
         yield Finding("output-overloaded", "error", case.place("output"), message, _lighter(case))
     elif FAMILIES[case.circuit.timer.family].output == "resistive":
@@ -87,7 +94,13 @@ def output_overloaded(case: Case) -> Iterator[Finding]:
 
 
 def _output_current(case: Case, situation: Situation) -> float:
-    return float(sum(i for b, i in zip(case.topo.branches, situation.currents, strict=True) if b.name.startswith("output ")))
+    return float(
+        sum(
+            i
+            for b, i in zip(case.topo.branches, situation.currents, strict=True)
+            if b.name.startswith("output ")
+        )
+    )
 
 
 def _fallen(case: Case) -> Iterator[Finding]:
@@ -150,18 +163,25 @@ def timer_out_of_range(case: Case) -> Iterator[Finding]:
     if not low <= supply.nominal <= high:
         value, error = supply.nominal, True
     else:
-        value, error = next((v for v in (supply.least, supply.most) if not low <= v <= high), supply.nominal), False
+        value, error = (
+            next((v for v in (supply.least, supply.most) if not low <= v <= high), supply.nominal),
+            False,
+        )
     if low <= value <= high:
         return
     relation = f"below {volts(low)}, the least" if value < low else f"above {volts(high)}, the most"
     which = "" if error else "least " if value == supply.least else "most "
-    message = f"the {which}supply of {volts(value)} is {relation} that the {family.name} family is specified for"
+    message = (
+        f"the {which}supply of {volts(value)} is {relation} that the {family.name} family is specified for"
+    )
     nominal = min(max(supply.nominal, low), high)
     scale = nominal / supply.nominal
     least, most = max(supply.least * scale, low), min(supply.most * scale, high)
     written = f"{plain(nominal)} V" if least == most else three(nominal, least, most, "V")
-    others = [f.name for f in FAMILIES.values() if f.supply_v[0] <= supply.least and supply.most <= f.supply_v[1]]
+    others = [
+        f.name for f in FAMILIES.values() if f.supply_v[0] <= supply.least and supply.most <= f.supply_v[1]
+    ]
     instead = f", or fit a `{others[0]}` timer" if others else ""
-    severity = "error" if error else "warning"
+    severity: Severity = "error" if error else "warning"
     mend = f"write `supply: {written}`{instead}"
     yield Finding("timer-out-of-range", severity, case.circuit.supply_position, message, mend)

@@ -6,7 +6,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from porter.behaviour.corner import Population
-from porter.behaviour.measure import MarginKey, margin_of
+from porter.behaviour.measure import MarginKey, WindowKey, margin_of
 from porter.behaviour.rules.case import Case
 from porter.behaviour.rules.memory import oscillating_masks
 from porter.behaviour.rules.words import figure, held_words, level, plain, three, volts
@@ -75,7 +75,9 @@ def _lost(case: Case, key: MarginKey) -> _Lost | None:
             column, at_most = _cause(group, values)
             nominal = float(case.evidence.nominal.margins[key][0])
             row = group.rows[worst : worst + 1]
-            return _Lost(key, nominal, float(values[worst]), row, column, at_most, by_parts, float(drawn.min()))
+            return _Lost(
+                key, nominal, float(values[worst]), row, column, at_most, by_parts, float(drawn.min())
+            )
     return None
 
 
@@ -105,10 +107,13 @@ def _unsure(case: Case, losses: list[_Lost]) -> Finding:
     if first.by_parts:
         whose = "part tolerances alone do it"
     else:
-        whose = f"part tolerances alone leave {volts(first.parts_worst)}; the timer's published spread does it"
+        whose = (
+            f"part tolerances alone leave {volts(first.parts_worst)}; the timer's published spread does it"
+        )
     message = (
-        f"{_where(case, first.key)}: {volts(first.nominal)} to spare in the typical unit, {volts(first.worst)} < 0 V "
-        f"in the worst allowed one; {whose}, above all {_said(name)} at its {end}, {figure(value, _unit(case, name))}"
+        f"{_where(case, first.key)}: {volts(first.nominal)} to spare in the typical unit, "
+        f"{volts(first.worst)} < 0 V in the worst allowed one; {whose}, above all {_said(name)} "
+        f"at its {end}, {figure(value, _unit(case, name))}"
     )
     if len(losses) > 1:
         message += f" (and {len(losses) - 1} more margin{'s' if len(losses) > 2 else ''} by the same cause)"
@@ -121,7 +126,8 @@ def _where(case: Case, key: MarginKey) -> str:
         names = held_words(case.circuit, mask).removesuffix(" held")
         return f"pressing {names} with the output {level(q)} must turn it {level(1 - q)}"
     pin, side = what.split()
-    return f"{held_words(case.circuit, mask)}, output {level(q)}: the {pin} input must stay {side[:-1]} its level"
+    when = f"{held_words(case.circuit, mask)}, output {level(q)}"
+    return f"{when}: the {pin} input must stay {side[:-1]} its level"
 
 
 def _said(name: str) -> str:
@@ -169,7 +175,10 @@ def _by_effect(group: Population, losses: list[_Lost]) -> list[int]:
     values = np.minimum.reduce([group.measures.margins[lost.key] for lost in losses])
     swings = []
     for column in group.moving:
-        high, low = group.rows[:, column] > group.rows[0, column], group.rows[:, column] < group.rows[0, column]
+        high, low = (
+            group.rows[:, column] > group.rows[0, column],
+            group.rows[:, column] < group.rows[0, column],
+        )
         swing = abs(float(values[high].mean() - values[low].mean())) if high.any() and low.any() else 0.0
         swings.append((-swing, column))
     first = losses[0].column
@@ -215,28 +224,26 @@ def bounce_outlasts_window(case: Case) -> Iterator[Finding]:
 
 
 def _bounce(case: Case, index: int, button: Button, bounce: float) -> Iterator[Finding]:
-    keys = [(index, q, "stray-gap") for q in (0, 1)]
-    nominal, key = min((float(case.evidence.nominal.windows[k][0]), k) for k in keys)  # type: ignore[index]
-    least = min(float(g.measures.windows[k].min()) for k in keys for g in _groups(case))  # type: ignore[index]
+    keys: list[WindowKey] = [(index, q, "stray-gap") for q in (0, 1)]
+    nominal, key = min((float(case.evidence.nominal.windows[k][0]), k) for k in keys)
+    groups = (case.evidence.drawn, case.evidence.published)
+    least = min(float(g.measures.windows[k].min()) for k in keys for g in groups)
     if bounce <= least:
         return
     error = bounce > nominal
     window = nominal if error else least
     unit = "" if error else " in some allowed unit"
     message = (
-        f"{button.name} may bounce for {figure(bounce, 's')}, longer than the {figure(window, 's')} (stray gap "
-        f"before the output turns {level(1 - key[1])}) after which an opening{unit} counts as a second press"
+        f"{button.name} may bounce for {figure(bounce, 's')}, longer than the {figure(window, 's')} "
+        f"(stray gap before the output turns {level(1 - key[1])}) after which an opening{unit} counts as a second press"
     )
     safe = least if least > 0 else nominal
     if safe > 0:
-        mend = f"fit a `{button.name}` with `bounce: {_rounded_down(safe)}s` at most, or enlarge the memory capacitor"
+        fit = f"fit a `{button.name}` with `bounce: {_rounded_down(safe)}s` at most"
+        mend = f"{fit}, or enlarge the memory capacitor"
     else:
         mend = f"filter {button.name}: any opening counts as a second press"
     yield Finding("bounce-outlasts-window", "error" if error else "warning", button.position, message, mend)
-
-
-def _groups(case: Case) -> tuple[Population, Population]:
-    return case.evidence.drawn, case.evidence.published
 
 
 def _rounded_down(seconds: float) -> str:

@@ -65,7 +65,9 @@ def _unmet(case: Case, line: Intent, seen: list[tuple[int, str]]) -> Finding:
     when = held_words(case.circuit, _mask(case, line))
     if line.kind == "release":
         when = f"{when}, then {', '.join(line.buttons)} released in this order"
-    does = " and ".join(f"{_verb(s)} from {level(q)}" for q, s in seen) or "has no settled state to start from"
+    does = (
+        " and ".join(f"{_verb(s)} from {level(q)}" for q, s in seen) or "has no settled state to start from"
+    )
     message = f"{when}: the output {does}; it is meant to be {line.output}"
     outputs = {s for _, s in seen}
     if len(outputs) == 1 and (only := outputs.pop()) != _SEEN[OSCILLATES]:
@@ -84,11 +86,15 @@ def _power_on(case: Case, line: Intent) -> Iterator[Finding]:
     if power_on.output == line.output:
         return
     if power_on.output != "undetermined":
-        message = f"after power-on the output is {power_on.output}: {power_on.why}; it is meant to be {line.output}"
+        message = (
+            f"after power-on the output is {power_on.output}: {power_on.why}; it is meant to be {line.output}"
+        )
         mend = f"write `power_on: {power_on.output}` here if that is meant, or change the circuit"
         yield Finding("intent-not-met", "error", line.position, message, mend)
     elif case.circuit.port.power_on == line.output:
-        message = f"the circuit leaves its power-on output undetermined; the port comes up {line.output}, as meant"
+        message = (
+            f"the circuit leaves its power-on output undetermined; the port comes up {line.output}, as meant"
+        )
         mend = "nothing to mend in the port; in the circuit, let a capacitor on reset force it"
         yield Finding("intent-not-met", "note", line.position, message, mend)
     else:

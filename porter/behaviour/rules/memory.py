@@ -117,7 +117,9 @@ def _differences(case: Case, other, k: int) -> list[tuple[str, int, int]]:  # ty
     nominal = case.evidence.nominal
     found = [("rest", q, 0) for q in (0, 1) if other.rests[q][k] != nominal.rests[q][0]]
     for (button, q, kind), seconds in nominal.windows.items():
-        if kind == "shortest-press" and np.isfinite(seconds[0]) != np.isfinite(other.windows[button, q, kind][k]):
+        if kind == "shortest-press" and np.isfinite(seconds[0]) != np.isfinite(
+            other.windows[button, q, kind][k]
+        ):
             found.append(("press", q, 1 << button))
     for (q, mask), output in nominal.held.items():
         if OSCILLATES in (output[0], other.held[q, mask][k]) and output[0] != other.held[q, mask][k]:
@@ -134,12 +136,16 @@ def _leak(case: Case, column: str, lost: tuple[str, int, int]) -> Finding:
     else:
         with_leak, without = (_idle_reach(case, e, q, mask) for e in engines)
     message = (
-        f"{held_words(case.circuit, mask)}, output {level(q)}: leakage of {name} takes {with_leak.words}, where "
-        f"{volts(without.volts)} would stand without it; the level between them is {volts(with_leak.level)}"
+        f"{held_words(case.circuit, mask)}, output {level(q)}: leakage of {name} takes "
+        f"{with_leak.words}, where {volts(without.volts)} would stand without it; "
+        f"the level between them is {volts(with_leak.level)}"
     )
-    place = case.circuit.positions.get(f"{kind}.{name}") or case.circuit.timer.position
     part = case.part(name)
-    place = part.position if part is not None else next(b.position for b in case.circuit.buttons if b.name == name)
+    place = (
+        part.position
+        if part is not None
+        else next(b.position for b in case.circuit.buttons if b.name == name)
+    )
     return Finding("leak-too-high", "error", place, message, _tighter(case, kind, name, column))
 
 
@@ -164,8 +170,10 @@ def _tighter(case: Case, kind: str, name: str, column: str) -> str:
     value = float(_reduced(case, [column], share)[0, case.cols.index(column)])
     unit = "A" if share * float(case.cols.nominal[case.cols.index(column)]) == value else ""
     word = "most" if unit else "least"
-    return f"fit a `{name}` with `leak: {plain(value)}{unit}` at {word}" if kind == "parts" else (
-        f"fit a `{name}` with `leak: {plain(value)}` at least"
+    return (
+        f"fit a `{name}` with `leak: {plain(value)}{unit}` at {word}"
+        if kind == "parts"
+        else (f"fit a `{name}` with `leak: {plain(value)}` at least")
     )
 
 
@@ -173,7 +181,11 @@ def _same(clean, tried, k: int) -> bool:  # type: ignore[no-untyped-def]
     rests = all(clean.rests[q][0] == tried.rests[q][k] for q in (0, 1))
     held = all(clean.held[key][0] == tried.held[key][k] for key in clean.held)
     keys: list[WindowKey] = [key for key in clean.windows if key[2] == "shortest-press"]
-    return rests and held and all(np.isfinite(clean.windows[w][0]) == np.isfinite(tried.windows[w][k]) for w in keys)
+    return (
+        rests
+        and held
+        and all(np.isfinite(clean.windows[w][0]) == np.isfinite(tried.windows[w][k]) for w in keys)
+    )
 
 
 # --- capacitor-on-inputs ---
@@ -189,7 +201,8 @@ def capacitor_on_inputs(case: Case) -> Iterator[Finding]:
         reach = press_reach(case, case.evidence.engine, q, m.mask)
         message = (
             f"pressing {case.circuit.buttons[m.index].name} shares the memory's charge with {name} "
-            f"({figure(part.value.nominal, 'F')}) and takes {reach.words}, not {'above' if q else 'below'} {volts(reach.level)}"
+            f"({figure(part.value.nominal, 'F')}) and takes {reach.words}, "
+            f"not {'above' if q else 'below'} {volts(reach.level)}"
         )
         tried = candidates(case, [name], up=False)
         best = first_good(case, tried, lambda engine, m=m: toggles(engine, m.mask))  # type: ignore[misc]
@@ -259,7 +272,11 @@ def high_level_too_low(case: Case) -> Iterator[Finding]:
     """A charged (or emptied) memory that does not take the pressed input past its level."""
     for m in case.failing:
         for q in (1, 0):
-            if m.index not in _blamed(case) and all(r[0] for r in case.evidence.nominal.rests) and not _flips(case, q, m):
+            if (
+                m.index not in _blamed(case)
+                and all(r[0] for r in case.evidence.nominal.rests)
+                and not _flips(case, q, m)
+            ):
                 yield _too_low(case, m, q)
 
 
@@ -271,7 +288,7 @@ def _too_low(case: Case, m: MemoryButton, q: int) -> Finding:
     name = case.circuit.buttons[m.index].name
     message = (
         f"the {level(q)} output of {volts(output)} charges {store}; pressing {name} takes {reach.words}, "
-        f"not {'above' if q else 'below'} its level {volts(reach.level)}: {name} never turns the output {level(1 - q)}"
+        f"not {'above' if q else 'below'} its level {volts(reach.level)}: {name} can't turn it {level(1 - q)}"
     )
     return Finding("high-level-too-low", "error", _button_place(case, m), message, _higher(case, m))
 
@@ -351,24 +368,23 @@ def _shaky_units(case: Case, mask: int) -> Floats:
 def _feedback(case: Case, mask: int, nominal: bool, shaky: Floats) -> Finding:
     row = case.evidence.engine.rows if nominal else shaky[:1]
     engine = case.with_rows(row)
-    high, low = _held_reach(case, engine, 1, mask), _held_reach(case, engine, 0, mask)
+    high, low = _idle_reach(case, engine, 1, mask), _idle_reach(case, engine, 0, mask)
     period = _period(engine, mask)
-    who = "the circuit" if nominal else "some allowed unit"
+    who = f"{'the circuit' if nominal else 'some allowed unit'} oscillates"
+    who += f" with a period of {period}" if period else ""
     message = (
-        f"{held_words(case.circuit, mask)}: {who} oscillates{f' with a period of {period}' if period else ''}; "
-        f"it would take {high.words} with the output high ({_relation(high)} {volts(high.level)}) "
+        f"{held_words(case.circuit, mask)}: {who}; it would take {high.words} "
+        f"with the output high ({_relation(high)} {volts(high.level)}) "
         f"and {low.words} with it low ({_relation(low)} {volts(low.level)})"
     )
     place = next(b.position for i, b in enumerate(case.circuit.buttons) if mask >> i & 1)
-    return Finding("feedback-too-strong", "error" if nominal else "warning", place, message, _weaker(case, mask, shaky))
+    return Finding(
+        "feedback-too-strong", "error" if nominal else "warning", place, message, _weaker(case, mask, shaky)
+    )
 
 
 def _relation(reach: Reach) -> str:
     return "above" if reach.volts > reach.level else "below"
-
-
-def _held_reach(case: Case, engine: Engine, q: int, mask: int) -> Reach:
-    return _idle_reach(case, engine, q, mask)
 
 
 def _period(engine: Engine, mask: int) -> str:
@@ -392,7 +408,9 @@ def _weaker(case: Case, mask: int, shaky: Floats) -> str:
         return ~_busy(engine, mask)
 
     tried = candidates(case, resistors(case))
-    fine = [c for k, c in enumerate(tried) if good(case.with_rows(applied(case, case.evidence.engine.rows, c)))[0]]
+    fine = [
+        c for k, c in enumerate(tried) if good(case.with_rows(applied(case, case.evidence.engine.rows, c)))[0]
+    ]
     units = np.concatenate([shaky[:: max(1, len(shaky) // 40)], some_units(case)])
     for candidate in fine[:24]:
         if calm(case.with_rows(applied(case, units, candidate))).all():
@@ -408,5 +426,3 @@ def _busy(engine: Engine, mask: int) -> Mask:
         engine.run(lanes, np.inf)
         busy |= lanes.busy
     return busy
-
-

@@ -13,7 +13,6 @@ from porter.circuit.network import VCC
 from porter.circuit.values import Floats
 
 _SAMPLE = 300  # units on which a candidate is tried beyond the nominal one
-_TRIES = 8
 
 
 @dataclass(frozen=True, slots=True)
@@ -54,19 +53,13 @@ def applied(case: Case, rows: Floats, candidate: Candidate) -> Floats:
     return rows
 
 
-def first_good(
-    case: Case, tried: Sequence[Candidate], good: Callable[[Engine], Mask], others: Floats | None = None
-) -> Candidate | None:
-    """Return the smallest change with which the nominal unit is good, of these the first good for *others* too."""
+def first_good(case: Case, tried: Sequence[Candidate], good: Callable[[Engine], Mask]) -> Candidate | None:
+    """Return the smallest change with which the nominal unit is good, None where none helps."""
     if not tried:
         return None
     rows = np.concatenate([applied(case, case.evidence.engine.rows, c) for c in tried])
-    fine = [tried[k] for k in np.flatnonzero(good(case.with_rows(rows)))]
-    for candidate in fine[:: max(1, len(fine) // _TRIES)] if others is not None else []:
-        assert others is not None
-        if good(case.with_rows(applied(case, others, candidate))).all():
-            return candidate
-    return fine[0] if fine else None
+    fine = np.flatnonzero(good(case.with_rows(rows)))
+    return tried[int(fine[0])] if len(fine) else None
 
 
 def some_units(case: Case) -> Floats:

@@ -61,8 +61,8 @@ def _judged(case: Case, held: int, node: int) -> Iterator[Finding]:
     current = _figure(engine, "reset_current")[0] * (1 - at / float(engine.supply[0]))
     unit = "" if error else "in an allowed unit "
     message = (
-        f"{held_words(case.circuit, held)}: {unit}the reset pin comes down to {volts(at)}, not below its level "
-        f"{volts(limit)} (an absolute voltage; {figure(float(current), 'A')} flows out of the pin)"
+        f"{held_words(case.circuit, held)}: {unit}the reset pin comes down to {volts(at)}, not below its "
+        f"level {volts(limit)} (an absolute voltage; {figure(float(current), 'A')} flows out of the pin)"
     )
     index = next(i for i in range(len(case.circuit.buttons)) if held >> i & 1)
     place = case.circuit.buttons[index].position
@@ -71,7 +71,7 @@ def _judged(case: Case, held: int, node: int) -> Iterator[Finding]:
 
 
 def _lower(case: Case, held: int, node: int, worst: Floats) -> str:
-    """Find the smallest change of a resistor or a contact that brings the worst unit (or the nominal one) down."""
+    """Find the smallest change of a resistor or contact that brings the worst unit down (or the nominal)."""
     tried = candidates(case, resistors(case))
     contacts = [
         (b.name, v, v / b.resistance.nominal)
@@ -103,7 +103,9 @@ def pull_up_too_weak(case: Case) -> Iterator[Finding]:
     node = case.pin("reset")
     if node is None or node < 0:
         return
-    current, limit = (float(case.cols.most[case.cols.index(f"timer.{k}")]) for k in ("reset_high_current", "reset_level"))
+    current, limit = (
+        float(case.cols.most[case.cols.index(f"timer.{k}")]) for k in ("reset_high_current", "reset_level")
+    )
     found = _thevenin(case, node, case.cols.nominal[None, :])
     if found is None:
         return
@@ -111,10 +113,17 @@ def pull_up_too_weak(case: Case) -> Iterator[Finding]:
     if open_ <= limit or open_ - current * ohm >= limit * (1 - 1e-9):
         return
     message = (
-        f"{volts(open_)} - {figure(current, 'A')} × {figure(ohm, 'ohm')} = {volts(open_ - current * ohm)} at the reset pin "
-        f"is less than {volts(limit)}: with the published current into it (most) the pull-up may not release the timer"
+        f"{volts(open_)} - {figure(current, 'A')} × {figure(ohm, 'ohm')} = {volts(open_ - current * ohm)} at "
+        f"the reset pin is less than {volts(limit)}: with the published current into it (most) the pull-up "
+        f"may not release the timer"
     )
-    yield Finding("reset-pull-up-too-weak", "warning", case.place("reset"), message, _stronger(case, node, current, limit))
+    yield Finding(
+        "reset-pull-up-too-weak",
+        "warning",
+        case.place("reset"),
+        message,
+        _stronger(case, node, current, limit),
+    )
 
 
 def _stronger(case: Case, node: int, current: float, limit: float) -> str:
@@ -165,5 +174,3 @@ def _connected(start: int, branches: list[Branch]) -> set[int]:
             seen.add(node)
             todo += [b.b for b in branches if b.a == node] + [b.a for b in branches if b.b == node]
     return seen
-
-

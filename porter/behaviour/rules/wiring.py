@@ -77,7 +77,8 @@ def _floats(case: Case, pin: str, node: int, q: int, held: int) -> Finding:
     name = name_of(case.topo, node)
     shared = [p for p in _IDLE if case.pin(p) == node]
     when = f"{held_words(case.circuit, held)}, output {level(q)}"
-    message = f"the {' and '.join(shared)} input on `{name}` has 0 conducting paths to a rail ({when}), and 1 is needed"
+    inputs = " and ".join(shared)
+    message = f"the {inputs} input on `{name}` has 0 conducting paths to a rail ({when}), and 1 is needed"
     first = add_part(new_name(case.circuit, "RP"), "resistor", "10k", _IDLE[pin], name)
     if {"trigger", "threshold"} <= set(shared):
         second = add_part(new_name(case.circuit, "RQ"), "resistor", "10k", name, "gnd")
@@ -144,15 +145,19 @@ def _led(case: Case, part: Part, current: float, where: tuple[int, int], bare: b
         message = f"{carries} is more than {limit}"
     else:
         message = (
-            f"0 Ω in series with {part.name}: only the chip's own output limits it to {figure(current, 'A')}, "
-            f"and that is no figure to lean on"
+            f"0 Ω in series with {part.name}: only the chip's own output limits it to "
+            f"{figure(current, 'A')}, and that is no figure to lean on"
         )
     message += "; there is no resistor in its path" if bare and current > LED_MOST_A else ""
     ohm = at_least(max(case.circuit.supply.most - part.value.least, 0.1) / LED_FINE_A)
     node = new_name(case.circuit, f"{part.name.lower()}_a")
     resistor = add_part(new_name(case.circuit, f"R{part.name}"), "resistor", plain(ohm), part.nodes[0], node)
     return Finding(
-        "led-without-resistor", "error", part.position, message, f"{move(part.name, node, part.nodes[1])} and {resistor}"
+        "led-without-resistor",
+        "error",
+        part.position,
+        message,
+        f"{move(part.name, node, part.nodes[1])} and {resistor}",
     )
 
 
@@ -172,20 +177,25 @@ def relay_without_diode(case: Case) -> Iterator[Finding]:
 
 def _largest_drop(case: Case, part: Part) -> float:
     a, b = (case.topo.node(n) for n in part.nodes)
-    drops = [volts_at(s.volts, a, case.supply) - volts_at(s.volts, b, case.supply) for s in case.situations.values()]
+    drops = [
+        volts_at(s.volts, a, case.supply) - volts_at(s.volts, b, case.supply)
+        for s in case.situations.values()
+    ]
     return max(drops, key=abs)
 
 
 def _coil(case: Case, part: Part, drop: float, positive: str, negative: str, across: list[Part]) -> Finding:
-    # With a diode the wrong way round the settled drop is the diode's own, so say the current by the supply.
+    # A diode the wrong way round leaves its own voltage on the coil: say the current by the supply then.
     current = part.current.nominal if part.current else (case.supply if across else drop) / part.value.nominal
     message = (
         f"{figure(current, 'A')} in the coil {part.name} must fall to 0 A the instant it is switched off: "
         f"no diode carries it on, and the voltage rises until something gives way"
     )
     if across:
-        # The diode shorts the coil, so its sign is not to be trusted: the rails' side is.
-        message = f"{across[0].name} across the coil {part.name} points the wrong way: it carries the coil's supply, not its kick"
+        message = (
+            f"{across[0].name} across the coil {part.name} points the wrong way: it shorts the coil's supply "
+            f"and leaves its {figure(current, 'A')} nowhere to go"
+        )
         mend = move(across[0].name, *across[0].nodes[::-1])
     else:
         mend = add_part(new_name(case.circuit, f"D{part.name}"), "diode", "0.7 V", negative, positive)
@@ -210,6 +220,6 @@ def no_decoupling(case: Case) -> Iterator[Finding]:
         f"a {case.circuit.timer.family} timer: {why}"
     )
     mend = add_part(new_name(case.circuit, "CD"), "capacitor", "100n", "vcc", "gnd")
-    yield Finding("no-decoupling", "warning" if bipolar else "note", case.circuit.timer.position, message, mend)
-
-
+    yield Finding(
+        "no-decoupling", "warning" if bipolar else "note", case.circuit.timer.position, message, mend
+    )

@@ -11,7 +11,7 @@ _E12 = (1.0, 1.2, 1.5, 1.8, 2.2, 2.7, 3.3, 3.9, 4.7, 5.6, 6.8, 8.2)
 _LEVELS = ("low", "high")
 
 
-class _Figure(Quantity):  # type: ignore[misc]
+class _Figure(Quantity):
     """Numbers with the rules' own preferences, so that nobody else's change."""
 
 

@@ -40,7 +40,9 @@ TOGGLE_PINS = "{trigger: mid, threshold: mid, reset: vcc, output: out}"
 
 
 def _section(name: str, entries: Mapping[str, str | None]) -> str:
-    return f"{name}:\n" + "".join(f"  {key}: {value}\n" for key, value in entries.items() if value is not None)
+    return f"{name}:\n" + "".join(
+        f"  {key}: {value}\n" for key, value in entries.items() if value is not None
+    )
 
 
 def spec(
@@ -69,7 +71,13 @@ def latch(
 ) -> str:
     """Return a two-button latch (reset beats set) with parts and buttons replaced, None = left out."""
     return spec(
-        {**LATCH_PARTS, **(parts or {})}, {**LATCH_BUTTONS, **(buttons or {})}, pins, supply, family, values, more
+        {**LATCH_PARTS, **(parts or {})},
+        {**LATCH_BUTTONS, **(buttons or {})},
+        pins,
+        supply,
+        family,
+        values,
+        more,
     )
 
 
@@ -84,7 +92,13 @@ def toggle(
 ) -> str:
     """Return a one-button toggle with parts and buttons replaced, None = left out."""
     return spec(
-        {**TOGGLE_PARTS, **(parts or {})}, {**TOGGLE_BUTTONS, **(buttons or {})}, pins, supply, family, values, more
+        {**TOGGLE_PARTS, **(parts or {})},
+        {**TOGGLE_BUTTONS, **(buttons or {})},
+        pins,
+        supply,
+        family,
+        values,
+        more,
     )
 
 
@@ -108,7 +122,7 @@ def rules_of(findings: Iterable[Finding], severity: str = "error") -> set[str]:
 
 
 def apply(text: str, mend: str, line: int = 0) -> str:
-    """Return a spec's text with a mend carried out to the letter; raises where it says nothing to carry out."""
+    """Return a spec's text with a mend carried out to the letter; raises where it names nothing to do."""
     tree = yaml.load(text, yaml.BaseLoader)
     done = [step(tree, match, text, line) for pattern, step in _STEPS for match in re.finditer(pattern, mend)]
     if not done:
