@@ -27,7 +27,7 @@ from porter.emit.lower import (
 )
 from porter.emit.names import comment, string, unique
 from porter.emit.numbers import Number, wrap
-from porter.emit.trees import LATCH, Leaf, Syntax, Tree, branch, leaves, render
+from porter.emit.trees import LATCH, Leaf, Syntax, branch, leaves, render
 from porter.port.model import Charge, Port
 from porter.vectors.model import Case, Suite
 
@@ -65,6 +65,8 @@ class Core:
         port, parts = self.port, self.parts
         step, init, idle = self._step(), self._init(), self._idle()
         words = set(re.findall(r"\w+", "\n".join([*step, *init, *idle])))
+        if words & {f"{self.name}_kept", f"{self.name}_rate"}:  # they stand on it
+            words.add(f"{self.name}_part")
         return {
             "name": self.name,
             "prefix": self.prefix,
@@ -75,7 +77,7 @@ class Core:
             "outputs": _bits(self.outputs, port.outputs, len(port.buttons), (3, 2, 1, 4, 5, 6, 7, 8)),
             "members": [self._member(cell) for cell in parts.cells],
             "numbers": [self._define(number) for number in parts.numbers if self._ref(number) in words],
-            "helpers": [h for h in ("clamp", "kept", "shift", "rate") if f"{self.name}_{h}" in words],
+            "helpers": [h for h in ("clamp", "part", "kept", "shift", "rate") if f"{self.name}_{h}" in words],
             "init": fold(init, 4),
             "step": fold(step, 4),
             "idle": fold(idle, 4),
@@ -134,7 +136,7 @@ class Core:
         machine = self.parts.machine
         body = self._charge(machine) if isinstance(machine, ChargeParts) else self._count(machine)
         opened = [line for cell in self.parts.cells for line in _unpack(cell)]
-        closed = [self._pack(cell) for cell in self.parts.cells]
+        closed = [self._pack(cell) for cell in self.parts.cells if not early(cell, machine)]
         lines = [*opened, *body, "", *closed, "", *self._answer()]
         return lines if any(re.search(r"\bheld\b", line) for line in lines) else ["(void)held;", "", *lines]
 
@@ -300,6 +302,8 @@ class Core:
         names = copies(machine)
         decide = render(machine.decide, self._ask, lambda f: self._flip(f, names), SYNTAX)
         lines = ["", "/* Decide with the charge from before this tick. */", *decide] if decide else []
+        # The latch is settled here; storing it now frees a register for the motion.
+        lines += ["", *(self._pack(cell) for cell in self.parts.cells if early(cell, machine))]
         mixed = any(motion.mixed for motion in machine.motions)
         for k, (x, motion) in enumerate(zip(names, machine.motions, strict=True)):
             moved = self._motion(motion, x, f"y{k}" if mixed else x, names)
@@ -315,7 +319,7 @@ class Core:
 
     def _motion(self, motion: Motion, x: str, y: str, names: tuple[str, ...]) -> list[str]:
         if motion.mixed is None:
-            return self._move(motion.ends, motion.amounts, x, y)
+            return self._move(motion, x, y)
         moved = render(motion.mixed, self._ask, lambda leaf: self._mixed(leaf, x, y, names), SYNTAX)
         return [f"uint16_t {y};", *moved]
 
@@ -353,28 +357,53 @@ class Core:
         ]
         return f"({' + '.join(terms) or 'INT32_C(0)'}) {test.operator} {self._ref(test.limit)}"
 
-    def _move(self, ends: Tree[End], amounts: Tree[Amount], x: str, y: str) -> list[str]:
+    def _move(self, motion: Motion, x: str, y: str) -> list[str]:
         opened = [] if x == y else [f"uint16_t {y} = {x};"]
-        if not leaves(amounts):  # only jumps and rests
-            return opened + render(ends, self._ask, lambda e: self._jump(e, y), SYNTAX)
-        end, by = f"end{x[1:]}", f"by{x[1:]}"
-        target = render(ends, self._ask, lambda e: self._aim(e, y, end), SYNTAX)
-        declared, part = self._part(amounts, by, x[1:])
+        used = amounts_of(motion)
+        if not used:  # only jumps and rests
+            return opened + render(motion.aims, self._ask, lambda aim: self._jump(aim.end, y), SYNTAX)
+        end, kind = f"end{x[1:]}", used[0].kind
+        part = f"{kind}{x[1:]}"
+        declared = [f"uint16_t {end};"]
+        if len(used) > 1:
+            declared.append(f"uint{8 if kind == 'shift' else 16}_t {part};")
+        aims = render(motion.aims, self._ask, lambda aim: self._aim(aim, y, end, part), SYNTAX)
+        apart = render(motion.amounts, self._ask, lambda amount: self._choose(amount, part), SYNTAX)
+        if len(used) == 1:
+            apart, part = [], self._ref(used[0].number)
+        go = self._go_rate if kind == "rate" else self._go_shift
+        return [*opened, *declared, *aims, *apart, *go(y, end, part, min(a.number.value for a in used))]
+
+    def _choose(self, amount: Amount | None, part: str) -> list[str]:
+        return [f"{part} = {self._ref(amount.number)};"] if amount else []
+
+    def _go_rate(self, x: str, end: str, rate: str, _least: int) -> list[str]:
+        # Two calls take fewer registers across the multiplication than one with the sign kept.
+        up, down = (
+            f"{self.name}_part((uint16_t)({far}), {rate})" for far in (f"{end} - {x}", f"{x} - {end}")
+        )
+        return branch(
+            f"{x} < {end}", [f"{x} = (uint16_t)({x} + {up});"], [f"{x} = (uint16_t)({x} - {down});"], SYNTAX
+        )
+
+    def _go_shift(self, x: str, end: str, shift: str, least: int) -> list[str]:
+        """Return the lines for a rounded shift, in a form that can't leave 16 bits on the way."""
+        by = f"by{x[1:]}"
+        half = f"(uint16_t)({by} >> (uint8_t)({shift} - 1u))"
+        rounded = f"(uint16_t)({by} >> {shift}) + ({half} & 1u)"
+        if least > 1:
+            rounded = f"(uint16_t)({half} + 1u) >> 1u"
         return [
-            *opened,
-            f"uint16_t {end};",
-            *declared,
-            *target,
-            f"uint16_t {by} = ({y} < {end}) ? (uint16_t)({end} - {y}) : (uint16_t)({y} - {end});",
-            part,
-            f"{y} = ({y} < {end}) ? (uint16_t)({y} + {by}) : (uint16_t)({y} - {by});",
+            f"uint16_t {by} = ({x} < {end}) ? (uint16_t)({end} - {x}) : (uint16_t)({x} - {end});",
+            f"{by} = (uint16_t)({rounded});",
+            f"{x} = ({x} < {end}) ? (uint16_t)({x} + {by}) : (uint16_t)({x} - {by});",
         ]
 
-    def _aim(self, end: End, x: str, name: str) -> list[str]:
+    def _aim(self, aim: Alone, x: str, name: str, part: str) -> list[str]:
         """Return the lines that set the target; a jump goes there at once, so that no distance is left."""
-        if end.number is None:
-            return [f"{name} = {x};"]
-        return [*(self._jump(end, x) if end.whole else []), f"{name} = {self._target(end, x)};"]
+        end = aim.end
+        jump = self._jump(end, x) if end.whole else []
+        return [*jump, f"{name} = {self._target(end, x)};", *self._choose(aim.amount, part)]
 
     def _jump(self, end: End, x: str) -> list[str]:
         return [] if end.number is None else [f"{x} = {self._target(end, x)};"]
@@ -385,27 +414,6 @@ class Core:
         ref = self._ref(end.number)
         test = {"up": f"({x} < {ref})", "down": f"({x} > {ref})"}.get(end.only)
         return f"{test} ? {ref} : {x}" if test else ref
-
-    def _part(self, amounts: Tree[Amount], by: str, k: str) -> tuple[list[str], str]:
-        """Return the lines that choose the shift or rate, and the line that takes it of the distance."""
-        used = set(leaves(amounts))
-        kind = next(iter(used)).kind
-        name = f"{kind}{k}"
-        if len(used) == 1:
-            chosen, name = [], self._ref(next(iter(used)).number)
-        else:
-            tree = render(amounts, self._ask, lambda a: [f"{name} = {self._ref(a.number)};"], SYNTAX)
-            chosen = [f"uint{8 if kind == 'shift' else 16}_t {name};", *tree]
-        if kind == "rate":
-            return chosen, f"{by} = (uint16_t)((((uint32_t){by} * {name}) + 32768u) >> 16u);"
-        return chosen, self._shifted(by, name, min(amount.number.value for amount in used))
-
-    def _shifted(self, by: str, shift: str, least: int) -> str:
-        """Return the line for a rounded shift that can't leave 16 bits on the way."""
-        half = f"(uint16_t)({by} >> (uint8_t)({shift} - 1u))"
-        if least > 1:
-            return f"{by} = (uint16_t)((uint16_t)({half} + 1u) >> 1u);"
-        return f"{by} = (uint16_t)((uint16_t)({by} >> {shift}) + ({half} & 1u));"
 
     def _mixed(self, leaf: Alone | Mix, x: str, y: str, names: tuple[str, ...]) -> list[str]:
         if isinstance(leaf, Mix):
@@ -444,6 +452,19 @@ def _bits(
         }
         for i, (w, n) in enumerate(zip(words, names, strict=True))
     ]
+
+
+def early(cell: Cell, machine: ChargeParts | CountParts) -> bool:
+    """Whether a cell is settled before the copies move."""
+    return isinstance(machine, ChargeParts) and not set(copies(machine)) & {
+        field.name for field in cell.fields
+    }
+
+
+def amounts_of(motion: Motion) -> list[Amount]:
+    """Return the different amounts of a motion, wherever they are said."""
+    said = [aim.amount for aim in leaves(motion.aims) if aim.amount] + leaves(motion.amounts)
+    return list(dict.fromkeys(said))
 
 
 def _type(most: int) -> str:

@@ -3,12 +3,13 @@
 Every language writes the same parts, so that a merge or a bound is worked out once, here.
 """
 
+from collections.abc import Callable
 from dataclasses import dataclass, replace
 from itertools import product
 from typing import Literal
 
 from porter.emit.numbers import Number, Numbers
-from porter.emit.trees import LATCH, Leaf, Tree, grow
+from porter.emit.trees import LATCH, Leaf, Tree, grow, leaves
 from porter.port.model import U16, Charge, ChargeMode, Count, Move, Port, Test
 
 # --- decisions ---
@@ -138,7 +139,7 @@ class Amount:
 
 @dataclass(frozen=True, slots=True)
 class Alone:
-    """A copy's motion in one mode of a port where other modes mix capacitors."""
+    """A copy's motion in one mode: where to, and how far in one tick (None: not said here)."""
 
     end: End
     amount: Amount | None
@@ -155,12 +156,12 @@ class Mix:
 
 @dataclass(frozen=True, slots=True)
 class Motion:
-    """One copy's motion: where to (`ends`) and how far (`amounts`).
+    """One copy's motion: where to (`aims`) and how far (`amounts`, where the aims don't say it).
 
     Where any mode mixes capacitors, `mixed` says it all instead and the other two are empty.
     """
 
-    ends: Tree[End]
+    aims: Tree[Alone]
     amounts: Tree[Amount]
     mixed: Tree[Alone | Mix] | None = None
 
@@ -378,7 +379,20 @@ def _motion(port: Port, k: int, numbers: Numbers) -> Motion:
         modes = [(q, h, _as_rate(move)) for q, h, move in modes]
     ends = [_end(port, k, q, h, move, numbers) for q, h, move in modes]
     amounts = [_amount(port, k, q, h, move, numbers) for q, h, move in modes]
-    return Motion(grow(ends, asks), grow(amounts, asks))
+    return _joined(ends, amounts, asks)
+
+
+def _joined(ends: list[End], amounts: list[Amount | None], asks: tuple[int, ...]) -> Motion:
+    """Return one tree for ends and amounts where it is no larger than the ends' own, else one for each."""
+    apart = grow([Alone(end, None) for end in ends], asks)
+    used = list(dict.fromkeys(amount for amount in amounts if amount))
+    if len(used) > 1:
+        # A copy that stays or jumps is at its end before the amount is taken: any will do.
+        pairs = zip(ends, amounts, strict=True)
+        both = grow([Alone(end, amount or used[0]) for end, amount in pairs], asks)
+        if len(leaves(both)) <= len(leaves(apart)):
+            return Motion(both, Leaf(None))
+    return Motion(apart, grow(amounts, asks))
 
 
 def _as_rate(move: Move) -> Move:
@@ -411,7 +425,16 @@ def _end_number(port: Port, k: int, q: int, held: int, end: int, numbers: Number
     charge = port.machine
     assert isinstance(charge, Charge)
     about = f"Where the copy of {charge.capacitors[k]} goes in the end in this mode."
-    return numbers.get(_of("END", k, charge), numbers.place(q, held), end, key, about)
+    where = _where(port, numbers, q, held, lambda mode: mode.moves[k].end)
+    return numbers.get(_of("END", k, charge), where, end, key, about)
+
+
+def _where(port: Port, numbers: Numbers, q: int, held: int, pick: Callable[[ChargeMode], int]) -> str:
+    """Return a mode's word for a name, without the latch's side where both sides have the same number."""
+    charge = port.machine
+    assert isinstance(charge, Charge)
+    same = pick(charge.modes[0][held]) == pick(charge.modes[1][held])
+    return numbers.held(held) if same else numbers.place(q, held)
 
 
 def _amount(port: Port, k: int, q: int, held: int, move: Move, numbers: Numbers) -> Amount | None:
@@ -430,7 +453,8 @@ def _pace_number(port: Port, k: int, q: int, held: int, role: str, value: int, n
     unit = "as a power of two" if role == "SHIFT" else "in 65536ths"
     about = f"Part of its distance that the copy of {charge.capacitors[k]} goes in a tick, {unit}."
     key = f"move.q{q}.h{held}.{k}.{role.lower()}"
-    return numbers.get(_of(role, k, charge), numbers.place(q, held), value, key, about)
+    where = _where(port, numbers, q, held, lambda mode: getattr(mode.moves[k], role.lower()))
+    return numbers.get(_of(role, k, charge), where, value, key, about)
 
 
 def _mix(port: Port, k: int, q: int, held: int, move: Move, numbers: Numbers) -> Mix:
@@ -517,10 +541,14 @@ def _toggle(port: Port, numbers: Numbers) -> ToggleParts | None:
     )
 
 
+_SIDES = {"low": "LOW", "high": "HIGH", "either": ""}
+
+
 def _pair(numbers: Numbers, role: str, values: tuple[int, int], about: str) -> tuple[Number, Number]:
+    words = ("either", "either") if values[0] == values[1] else ("low", "high")
     found = [
-        numbers.get(role, word.upper(), values[q], f"toggle.{role.lower()}.{q}", about.format(word))
-        for q, word in enumerate(("low", "high"))
+        numbers.get(role, _SIDES[word], values[q], f"toggle.{role.lower()}.{q}", about.format(word))
+        for q, word in enumerate(words)
     ]
     return found[0], found[1]
 

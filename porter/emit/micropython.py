@@ -6,12 +6,13 @@ A step takes no memory from the heap: attributes are small integers, and no prod
 import re
 from typing import ClassVar
 
-from porter.emit.c99 import suite_rows
+from porter.emit.c99 import amounts_of, suite_rows
 from porter.emit.fold import fold
 from porter.emit.language import Job, banner, microseconds, why
 from porter.emit.lower import (
     All,
     Alone,
+    Amount,
     Any,
     ChargeParts,
     Compare,
@@ -27,7 +28,7 @@ from porter.emit.lower import (
 )
 from porter.emit.names import camel, comment, string, unique
 from porter.emit.numbers import Number
-from porter.emit.trees import LATCH, Syntax, branch, leaves, render
+from porter.emit.trees import LATCH, Syntax, branch, render
 
 SYNTAX = Syntax(("if ", ":"), ("elif ", ":"), "else:", "", "")
 
@@ -212,17 +213,16 @@ class Core:
         if motion.mixed:
             return render(motion.mixed, self._ask, lambda leaf: self._mixed(leaf, x, y, names), SYNTAX)
         opened = [] if x == y else [f"{y} = {x}"]
-        if not leaves(motion.amounts):  # only jumps and rests
-            return opened + render(motion.ends, self._ask, lambda e: _jump(e, y), SYNTAX)
-        target = render(motion.ends, self._ask, lambda e: _aim(e, y), SYNTAX)
-        name = leaves(motion.amounts)[0].kind
-        chosen = render(motion.amounts, self._ask, lambda a: [f"{name} = {_ref(a.number)}"], SYNTAX)
+        used = amounts_of(motion)
+        if not used:  # only jumps and rests
+            return opened + render(motion.aims, self._ask, lambda aim: _jump(aim.end, y), SYNTAX)
+        part = _ref(used[0].number) if len(used) == 1 else str(used[0].kind)
         return [
             *opened,
-            *target,
-            *chosen,
+            *render(motion.aims, self._ask, lambda aim: _aim(aim, y), SYNTAX),
+            *render(motion.amounts, self._ask, lambda a: _choose(a) if len(used) > 1 else [], SYNTAX),
             f"by = end - {y} if {y} < end else {y} - end",
-            _part(name, name),
+            _part(used[0].kind, part),
             f"{y} = {y} + by if {y} < end else {y} - by",
         ]
 
@@ -237,7 +237,7 @@ class Core:
         if leaf.amount is None:
             return [f"{y} = {_target(leaf.end, x)}"]
         return [
-            *_aim(leaf.end, x),
+            *_aim(Alone(leaf.end, None), x),
             f"by = end - {x} if {x} < end else {x} - end",
             _part(leaf.amount.kind, _ref(leaf.amount.number)),
             f"{y} = {x} + by if {x} < end else {x} - by",
@@ -268,9 +268,14 @@ def _jump(end: End, x: str) -> list[str]:
     return [] if end.number is None else [f"{x} = {_target(end, x)}"]
 
 
-def _aim(end: End, x: str) -> list[str]:
-    """Return the lines that set the target; a jump goes there at once, and the motion finds nothing left."""
-    return [*(_jump(end, x) if end.whole else []), f"end = {_target(end, x)}"]
+def _aim(aim: Alone, x: str) -> list[str]:
+    """Return the lines that set the target; a jump goes there at once, so that no distance is left."""
+    jump = _jump(aim.end, x) if aim.end.whole else []
+    return [*jump, f"end = {_target(aim.end, x)}", *_choose(aim.amount)]
+
+
+def _choose(amount: Amount | None) -> list[str]:
+    return [f"{amount.kind} = {_ref(amount.number)}"] if amount else []
 
 
 def _part(kind: str, number: str) -> str:

@@ -90,8 +90,17 @@ def render(
         return [] if tree.value is None else act(tree.value)
     yes, no = (render(side, ask, act, syntax) for side in (tree.yes, tree.no))
     positive, negative = ask(tree.ask)
-    if yes == no:
-        return yes
+    shared = _shared_end(yes, no, syntax)
+    if shared:
+        yes, no = yes[: len(yes) - len(shared)], no[: len(no) - len(shared)]
+    if not yes and not no:
+        return shared
+    return [*_choice(tree, positive, negative, yes, no, syntax), *shared]
+
+
+def _choice(
+    tree: Node[V], positive: str, negative: str, yes: list[str], no: list[str], syntax: Syntax
+) -> list[str]:
     if not yes:
         return branch(negative, no, [], syntax)
     if not no:
@@ -99,6 +108,16 @@ def render(
     if _bare(tree.no) and not _bare(tree.yes):
         return branch(negative, no, yes, syntax)
     return branch(positive, yes, no, syntax)
+
+
+def _shared_end(yes: list[str], no: list[str], syntax: Syntax) -> list[str]:
+    """Return the plain statements with which both sides end."""
+    count = 0
+    for a, b in zip(reversed(yes), reversed(no), strict=False):
+        if a != b or a.startswith((syntax.indent, syntax.first[0], "}", "el")):
+            break
+        count += 1
+    return yes[len(yes) - count :]
 
 
 def _bare(tree: Tree[V]) -> bool:

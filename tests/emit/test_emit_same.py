@@ -97,11 +97,11 @@ PORTS = st.one_of(count_ports(), charge_ports(1), charge_ports(3))
 
 
 @MANY
-@given(batch=st.lists(PORTS, min_size=24, max_size=24).map(Batch))
+@given(batch=st.lists(PORTS, min_size=16, max_size=16).map(Batch))
 def test_any_port_is_the_same_over_long_sequences(batch, tmp_path_factory, cache):
     """C equals the reference for random ports of both styles with every kind of move."""
     for port, core in cores(batch, tmp_path_factory.mktemp("any"), cache):
-        follow(port, core, 200)
+        follow(port, core, 120)
 
 
 def test_any_state_comes_back(tmp_path, cache):

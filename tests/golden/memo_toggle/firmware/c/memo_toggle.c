@@ -35,9 +35,9 @@
  */
 #define MEMO_TOGGLE_END_HIGH_PUSH 17000u
 /* Part of its distance that the copy of mem goes in a tick, as a power of two. */
-#define MEMO_TOGGLE_SHIFT_LOW_OPEN 8u
+#define MEMO_TOGGLE_SHIFT_OPEN 8u
 /* Part of its distance that the copy of mem goes in a tick, as a power of two. */
-#define MEMO_TOGGLE_SHIFT_LOW_PUSH 3u
+#define MEMO_TOGGLE_SHIFT_PUSH 3u
 
 void memo_toggle_init(memo_toggle_t *m)
 {
@@ -63,31 +63,31 @@ uint8_t memo_toggle_step(memo_toggle_t *m, uint8_t held)
         }
     }
 
+    m->bits = (uint8_t)(q | (uint8_t)(held << 1u));
+
     /* Move the copy of mem by one tick. */
     uint16_t end;
     uint8_t shift;
-    if ((held & MEMO_TOGGLE_BUTTON_PUSH) != 0u) {
-        shift = MEMO_TOGGLE_SHIFT_LOW_PUSH;
-    } else {
-        shift = MEMO_TOGGLE_SHIFT_LOW_OPEN;
-    }
     if ((held & MEMO_TOGGLE_BUTTON_PUSH) != 0u) {
         if (q != 0u) {
             end = MEMO_TOGGLE_END_HIGH_PUSH;
         } else {
             end = MEMO_TOGGLE_END_LOW_PUSH;
         }
-    } else if (q != 0u) {
-        end = MEMO_TOGGLE_END_HIGH_OPEN;
+        shift = MEMO_TOGGLE_SHIFT_PUSH;
     } else {
-        end = MEMO_TOGGLE_END_LOW_OPEN;
+        if (q != 0u) {
+            end = MEMO_TOGGLE_END_HIGH_OPEN;
+        } else {
+            end = MEMO_TOGGLE_END_LOW_OPEN;
+        }
+        shift = MEMO_TOGGLE_SHIFT_OPEN;
     }
     uint16_t by = (x < end) ? (uint16_t)(end - x) : (uint16_t)(x - end);
     by = (uint16_t)((uint16_t)((uint16_t)(by >> (uint8_t)(shift - 1u)) + 1u) >> 1u);
     x = (x < end) ? (uint16_t)(x + by) : (uint16_t)(x - by);
 
     m->x = x;
-    m->bits = (uint8_t)(q | (uint8_t)(held << 1u));
 
     return q;
 }

@@ -50,10 +50,10 @@ _END_HIGH_OPEN = const(300)
 _END_HIGH_PUSH = const(17000)
 
 # Part of its distance that the copy of mem goes in a tick, as a power of two.
-_SHIFT_LOW_OPEN = const(8)
+_SHIFT_OPEN = const(8)
 
 # Part of its distance that the copy of mem goes in a tick, as a power of two.
-_SHIFT_LOW_PUSH = const(3)
+_SHIFT_PUSH = const(3)
 
 
 class MemoToggle:
@@ -84,14 +84,13 @@ class MemoToggle:
                 end = _END_HIGH_PUSH
             else:
                 end = _END_LOW_PUSH
-        elif q:
-            end = _END_HIGH_OPEN
+            shift = _SHIFT_PUSH
         else:
-            end = _END_LOW_OPEN
-        if held & _BUTTON_PUSH:
-            shift = _SHIFT_LOW_PUSH
-        else:
-            shift = _SHIFT_LOW_OPEN
+            if q:
+                end = _END_HIGH_OPEN
+            else:
+                end = _END_LOW_OPEN
+            shift = _SHIFT_OPEN
         by = end - x if x < end else x - end
         by = (by + (1 << shift >> 1)) >> shift
         x = x + by if x < end else x - by
