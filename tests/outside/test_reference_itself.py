@@ -124,7 +124,7 @@ def test_priority_is_reset_then_trigger_then_threshold() -> None:
 
 
 def test_a_latch_that_fights_itself_is_restless() -> None:
-    """The output tied to the trigger through an inverter's worth of nothing: low asks for high, high for low."""
+    """Output, trigger and threshold on one node: low asks for high, high for low."""
     chip = Chip("cmos", {"trigger": "x", "threshold": "x", "output": "x"}, IDEAL)
     with pytest.raises(Restless):
         run_exact(Net(5.0, chip), [(0, ())], 1.0)

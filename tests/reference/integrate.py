@@ -129,7 +129,10 @@ def _first_negative(
     flow: Callable[[NDArray[np.int64]], Floats],
     dips: list[float],
 ) -> int | None:
-    dip = np.flatnonzero((column[1:-1] < column[:-2]) & (column[1:-1] <= column[2:]) & (column[1:-1] > 0)) + 1
+    inner, before, behind = column[1:-1], column[:-2], column[2:]
+    # Rounding makes shallow dips on a level stretch; they matter only close to the level.
+    real = (np.minimum(before, behind) - inner > 1e-13) | (inner < 1e-6)
+    dip = np.flatnonzero((inner < before) & (inner <= behind) & (inner > 0) & real) + 1
     negative = np.flatnonzero(column[1:] < 0) + 1
     end = negative[0] if len(negative) else len(grid)
     for k in dip[dip < end]:
@@ -245,20 +248,20 @@ class _Exact:
         if not rows:
             return None
         ladder = self.ladder(mode)
-        stacked = np.array(rows)
+        stacked = np.array(rows) / self.supply
         # A deadband above the rounding noise, so that a level just crossed isn't crossed again.
-        stacked[:, -1] += 1e-14 * self.supply
+        stacked[:, -1] += 1e-14
         found = first_crossing(stacked, lambda ticks: ladder.after(x, ticks), last)
         if found is None:
             return None
         tick, row, dips = found
         for name, value in zip(names, dips, strict=True):
             if name is not None:
-                self.out.near(value / self.supply)
+                self.out.near(value)
         # How steep the crossing is, in supplies per its own time: flat crossings are ill-posed.
         slope = float(stacked[row][:-1] @ self._rate(mode, ladder.after(x, np.array([tick]))[0]))
         if names[row] is not None:
-            self.out.near(1e-3 * slope * tick * self.step / self.supply)
+            self.out.near(1e-3 * slope * tick * self.step)
         return tick, names[row]
 
     def _rate(self, mode: Mode, x: Floats) -> Floats:
