@@ -360,6 +360,15 @@ CASES = [
         r"comes down to 703\.\d mV, not below its level 700 mV",
     ),
     Case(
+        "pull-down-too-weak",  # 12 V x r / (r + 12 V / 0.4 mA) = 0.7 V at 1.858 kohm
+        "reset-not-low-enough",
+        "error",
+        latch({"R2": "{resistor: 1.87k, between: [gnd, clear]}"}, {"CLEAR": "{between: [clear, vcc]}"}),
+        latch({"R2": "{resistor: 1.85k, between: [gnd, clear]}"}, {"CLEAR": "{between: [clear, vcc]}"}),
+        "clear",
+        r"no button held: the reset pin comes down to 704\.\d mV, not below its level 700 mV",
+    ),
+    Case(
         "weak-pull-up",  # (5 - 1.0) V / 0.4 mA = 10 kohm; the advice of TI SLFS023H
         "reset-pull-up-too-weak",
         "warning",

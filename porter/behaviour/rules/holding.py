@@ -235,7 +235,8 @@ def _bounce(case: Case, index: int, button: Button, bounce: float) -> Iterator[F
     unit = "" if error else " in some allowed unit"
     message = (
         f"{button.name} may bounce for {figure(bounce, 's')}, longer than the {figure(window, 's')} "
-        f"(stray gap before the output turns {level(1 - key[1])}) after which an opening{unit} counts as a second press"
+        f"(stray gap before the output turns {level(1 - key[1])}) "
+        f"after which an opening{unit} counts as a second press"
     )
     safe = least if least > 0 else nominal
     if safe > 0:

@@ -20,7 +20,7 @@ from porter.circuit.network import Branch
 from porter.circuit.values import Floats
 from porter.findings import Finding
 
-#: A press that takes the reset pin below this part of its idle voltage is meant to reset.
+#: What takes the reset pin below this part of its highest voltage is meant to reset.
 _MEANT = 0.5
 
 
@@ -28,14 +28,18 @@ _MEANT = 0.5
 
 
 def not_low_enough(case: Case) -> Iterator[Finding]:
-    """A press that is meant to reset, and leaves the pin above its level."""
+    """A combination that is meant to reset, and leaves the pin above its level.
+
+    Meant: it takes the pin below half of the highest voltage that any other gives it.
+    """
     node = case.pin("reset")
     if node is None or node < 0:
         return
-    idle = case.volts(1, 0, node)
+    masks = sorted(range(1 << len(case.circuit.buttons)), key=lambda k: (k.bit_count(), k))
+    highest = max(case.volts(1, held, node) for held in masks)
     told: list[int] = []
-    for held in sorted(range(1, 1 << len(case.circuit.buttons)), key=lambda k: (k.bit_count(), k)):
-        if any(held & t == t for t in told) or case.volts(1, held, node) >= _MEANT * idle:
+    for held in masks:
+        if any(held & t == t for t in told) or case.volts(1, held, node) >= _MEANT * highest:
             continue
         told.append(held)
         yield from _judged(case, held, node)
@@ -64,8 +68,8 @@ def _judged(case: Case, held: int, node: int) -> Iterator[Finding]:
         f"{held_words(case.circuit, held)}: {unit}the reset pin comes down to {volts(at)}, not below its "
         f"level {volts(limit)} (an absolute voltage; {figure(float(current), 'A')} flows out of the pin)"
     )
-    index = next(i for i in range(len(case.circuit.buttons)) if held >> i & 1)
-    place = case.circuit.buttons[index].position
+    pressed = [b.position for i, b in enumerate(case.circuit.buttons) if held >> i & 1]
+    place = pressed[0] if pressed else case.place("reset")
     mend = _lower(case, held, node, worst)
     yield Finding("reset-not-low-enough", "error" if error else "warning", place, message, mend)
 
