@@ -88,14 +88,14 @@ def _one_cap(open_moves, held_moves, name, low=40000, high=20000):
 def toggle_shift():
     """The one-button circuit with decays that are powers of two."""
     opened = (Move("shift", 65000, 8), Move("shift", 300, 8))
-    held = (Move("shift", 45000, 3), Move("shift", 17000, 3))
+    held = (Move("shift", 36000, 3), Move("shift", 26000, 3))
     return _one_cap(opened, held, "memo_toggle")
 
 
 def toggle_multiply():
     """The one-button circuit with any decays."""
     opened = (Move("multiply", 65000, rate=170), Move("multiply", 300, rate=170))
-    held = (Move("multiply", 45000, rate=9000), Move("multiply", 17000, rate=9000))
+    held = (Move("multiply", 36000, rate=9000), Move("multiply", 26000, rate=9000))
     return _one_cap(opened, held, "rate_toggle")
 
 

@@ -113,6 +113,57 @@ def test_avr_image_links(tmp_path):
     )
 
 
+@pytest.fixture(scope="module")
+def pins(tmp_path_factory):
+    """The program that runs an image in an ATtiny85 emulator (libsimavr) and moves its pins."""
+    program = tmp_path_factory.mktemp("pins") / "pins"
+    source = Path(__file__).with_name("pins.c")
+    libraries = ["-lsimavr", "-lsimavrparts", "-lelf"]
+    must(["cc", "-O1", str(source), "-o", str(program), *libraries], program.parent)
+    return program
+
+
+def drive(port: Port, pins: Path, where: Path, *moves: str) -> list[tuple[int, int, int]]:
+    """Build an image and move its pins; return changes as (microseconds, pin, level; -1 = not driven)."""
+    write(port, where)
+    must([*AVR, f"{port.name}.c", "board.c", "-o", "image.elf"], where)
+    printed = must([str(pins), "image.elf", *moves], where)
+    assert printed.endswith("END\n"), printed
+    return [tuple(map(int, line.split())) for line in printed.splitlines() if re.match(r"\d+ ", line)]
+
+
+def test_two_button_image_on_pins(pins, tmp_path):
+    """On an emulated part: low from the start, then each press acts within a tick, also after 3 s asleep."""
+    moves = [
+        "0:0=1",
+        "0:1=1",
+        "20000:0=0",
+        "40000:0=1",
+        "60000:1=0",
+        "80000:1=1",
+        "3000000:0=0",
+        "3020000:0=1",
+        "3040000:0=1",
+    ]
+    changes = drive(two_button(), pins, tmp_path, *moves)
+    assert [change[1:] for change in changes] == [(2, 0), (2, 1), (2, 0), (2, 1)]
+    late = [change[0] - due for change, due in zip(changes, (0, 20_000, 60_000, 3_000_000), strict=True)]
+    assert all(0 <= delay <= 1_200 for delay in late), late
+
+
+def test_held_button_wins_at_boot_on_pins(pins, tmp_path):
+    """A button held when the supply comes acts at once: the first driven level is already high."""
+    changes = drive(two_button(), pins, tmp_path, "0:0=0", "0:1=1", "30000:0=1", "60000:0=1")
+    assert [change[1:] for change in changes] == [(2, 1)]
+
+
+def test_toggle_image_on_pins(pins, tmp_path):
+    """The charge style on pins: each press turns the lamp once the copy has recovered."""
+    moves = ["0:0=1", "2000000:0=0", "2100000:0=1", "4000000:0=0", "4100000:0=1", "4200000:0=1"]
+    changes = drive(toggle_shift(), pins, tmp_path, *moves)
+    assert [change[1:] for change in changes] == [(1, 0), (1, 1), (1, 0)]
+
+
 def test_m0_pin_layer_compiles(tmp_path):
     """The pin layer for the nRF51 compiles clean."""
     write(two_button(), tmp_path)

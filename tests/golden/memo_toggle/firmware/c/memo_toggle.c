@@ -26,14 +26,14 @@
 /* Where the copy of mem goes in the end in this mode. */
 #define MEMO_TOGGLE_END_LOW_OPEN 65000u
 /* Where the copy of mem goes in the end in this mode. */
-#define MEMO_TOGGLE_END_LOW_PUSH 45000u
+#define MEMO_TOGGLE_END_LOW_PUSH 36000u
 /* Where the copy of mem goes in the end in this mode. */
 #define MEMO_TOGGLE_END_HIGH_OPEN 300u
 /* Held level
  * = 12 V * 10k/(10k + 5k)
  * from memo_toggle.yaml:6
  */
-#define MEMO_TOGGLE_END_HIGH_PUSH 17000u
+#define MEMO_TOGGLE_END_HIGH_PUSH 26000u
 /* Part of its distance that the copy of mem goes in a tick, as a power of two. */
 #define MEMO_TOGGLE_SHIFT_OPEN 8u
 /* Part of its distance that the copy of mem goes in a tick, as a power of two. */

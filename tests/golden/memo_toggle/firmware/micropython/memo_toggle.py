@@ -39,7 +39,7 @@ _LIMIT_HIGH_PUSH = const(20000)
 _END_LOW_OPEN = const(65000)
 
 # Where the copy of mem goes in the end in this mode.
-_END_LOW_PUSH = const(45000)
+_END_LOW_PUSH = const(36000)
 
 # Where the copy of mem goes in the end in this mode.
 _END_HIGH_OPEN = const(300)
@@ -47,7 +47,7 @@ _END_HIGH_OPEN = const(300)
 # Held level
 # = 12 V * 10k/(10k + 5k)
 # from memo_toggle.yaml:6
-_END_HIGH_PUSH = const(17000)
+_END_HIGH_PUSH = const(26000)
 
 # Part of its distance that the copy of mem goes in a tick, as a power of two.
 _SHIFT_OPEN = const(8)

@@ -13,10 +13,10 @@
 
 /* Ticks that PUSH must be seen held in a row to count as down. */
 #define STAIR_TOGGLE_PRESS_PUSH 5u
-/* Open ticks from a press that acted to the next that acts, latch low. */
-#define STAIR_TOGGLE_TAP_LOW 110u
-/* The same after a press held until settled, latch low. */
-#define STAIR_TOGGLE_HOLD_LOW 40u
+/* Open ticks from a press that acted to the next that acts, latch either. */
+#define STAIR_TOGGLE_TAP 110u
+/* The same after a press held until settled, latch either. */
+#define STAIR_TOGGLE_HOLD 40u
 
 void stair_toggle_init(stair_toggle_t *m)
 {
@@ -43,11 +43,11 @@ uint8_t stair_toggle_step(stair_toggle_t *m, uint8_t held)
     if (n_push >= STAIR_TOGGLE_PRESS_PUSH) {
         if (c == 0u) {
             q ^= 1u;
-            c = STAIR_TOGGLE_TAP_LOW;
+            c = STAIR_TOGGLE_TAP;
         }
-        if (c < STAIR_TOGGLE_HOLD_LOW) {
+        if (c < STAIR_TOGGLE_HOLD) {
             c++;
-        } else if (c > STAIR_TOGGLE_HOLD_LOW) {
+        } else if (c > STAIR_TOGGLE_HOLD) {
             c--;
         } else {
             /* as it is */

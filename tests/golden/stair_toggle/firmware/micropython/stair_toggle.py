@@ -28,14 +28,14 @@ _PRESS_PUSH = const(5)
 # Ticks that PUSH must be seen open in a row to count as up.
 _RELEASE_PUSH = const(1)
 
-# Open ticks from a press that acted to the next that acts, latch low.
-_TAP_LOW = const(110)
+# Open ticks from a press that acted to the next that acts, latch either.
+_TAP = const(110)
 
-# The same after a press held until settled, latch low.
-_HOLD_LOW = const(40)
+# The same after a press held until settled, latch either.
+_HOLD = const(40)
 
-# Most that the re-arm counter goes toward HOLD in a held tick, latch low.
-_PACE_LOW = const(1)
+# Most that the re-arm counter goes toward HOLD in a held tick, latch either.
+_PACE = const(1)
 
 
 class StairToggle:
@@ -68,9 +68,9 @@ class StairToggle:
         if n_push >= _PRESS_PUSH:
             if not c:
                 q ^= 1
-                c = _TAP_LOW
-            hold = _HOLD_LOW
-            pace = _PACE_LOW
+                c = _TAP
+            hold = _HOLD
+            pace = _PACE
             if c < hold:
                 c = min(c + pace, hold)
             else:
