@@ -31,7 +31,10 @@ buttons:
 RAILS = (
     "high_drop: 0, low_level: 0, high_resistance: 1, low_resistance: 1, "
     "trigger_current: 0, threshold_current: 0"
-)def toggle(
+)
+
+
+def toggle(
     family: str, supply: float, feed: str = "1M", tolerance: str = "", values: str = RAILS
 ) -> Behaviour:
     text = TOGGLE.format(family=family, supply=supply, feed=feed, tolerance=tolerance, values=values)
