@@ -5,10 +5,13 @@ top, so that ``porter --help`` does not wait for numpy; everything else loads wh
 """
 
 import difflib
+import io
 import os
+import shutil
+import signal
 import sys
 import traceback
-from collections.abc import Iterator, Sequence
+from collections.abc import Callable, Iterable, Iterator, Sequence
 from contextlib import contextmanager
 from pathlib import Path
 from typing import TYPE_CHECKING, Any, NoReturn
@@ -18,6 +21,8 @@ import click
 import porter
 
 if TYPE_CHECKING:
+    from rich.console import Console
+
     from porter.behaviour.model import Behaviour
     from porter.findings import Finding
     from porter.job import Job, Progress
@@ -40,8 +45,17 @@ def main(args: Sequence[str] | None = None) -> NoReturn:
     Args:
         args: the arguments, None = those of the process.
     """
+    signal.signal(signal.SIGTERM, _terminated)
     _encode_anything()
-    sys.exit(_status(args))
+    status = _status(sys.argv[1:] if args is None else list(args))
+    with _nobody_reading():
+        sys.stdout.flush()
+    sys.exit(status)
+
+
+def _terminated(*_: object) -> NoReturn:
+    """Leave by an exception, so that whatever is half made goes."""
+    sys.exit(128 + signal.SIGTERM)
 
 
 def _encode_anything() -> None:
@@ -51,13 +65,24 @@ def _encode_anything() -> None:
             reconfigure(errors="replace")
 
 
-def _status(args: Sequence[str] | None) -> int:
+@contextmanager
+def _nobody_reading() -> Iterator[None]:
+    """Let the reader of stdout leave early (``porter … | head``) without changing the answer."""
+    try:
+        yield
+    except BrokenPipeError:
+        with Path(os.devnull).open("wb") as nowhere:
+            os.dup2(nowhere.fileno(), sys.stdout.fileno())
+
+
+def _status(args: list[str]) -> int:
     from porter.findings import PorterError, SpecError
 
     try:
-        status = cli.main(args=None if args is None else list(args), prog_name="porter", standalone_mode=False)
-        sys.stdout.flush()
-        return status if isinstance(status, int) else FINE
+        with cli.make_context("porter", args) as context:
+            return int(cli.invoke(context))
+    except click.exceptions.Exit as leaving:  # --help and --version
+        return leaving.exit_code
     except click.ClickException as error:
         error.show()
         return error.exit_code
@@ -70,9 +95,6 @@ def _status(args: Sequence[str] | None) -> int:
     except PorterError as error:
         click.echo(f"porter: error: {error}", err=True)
         return error.exit_code
-    except BrokenPipeError:  # such as `porter ... | head`: nobody reads on
-        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
-        return FINE
     except Exception as error:
         return _own_fault(error)
 
@@ -160,7 +182,7 @@ def check(spec: str, as_json: bool) -> int:
 @click.option("--why", is_flag=True, help="Add where each time and margin comes from.")
 @_as_json
 def derive(spec: str, why: bool, as_json: bool) -> int:
-    """Derive what the circuit does: outputs, priorities, windows, margins."""
+    """Derive what the circuit does, and when."""
     circuit, behaviour = _judged(spec)
     if as_json:
         from porter.job import model_json
@@ -170,23 +192,27 @@ def derive(spec: str, why: bool, as_json: bool) -> int:
     from porter.show import people
 
     _diagnose(circuit, behaviour.findings, spec)
-    people.show_behaviour(_console(), behaviour, why)
+    _tables(lambda out: people.show_behaviour(out, behaviour, why))
     return _answer(behaviour.findings)
 
 
 @cli.command()
 @_spec
 @click.option(
-    "--save", type=_folder, metavar="FILE.csv", help="Write the counterexample, for `porter trace`, if there is one."
+    "--save",
+    type=_folder,
+    metavar="FILE.csv",
+    help="Write the counterexample, if there is one, for `porter trace`.",
 )
 @_as_json
 def prove(spec: str, save: Path | None, as_json: bool) -> int:
-    """Prove that the port does what the circuit does, or show where it doesn't."""
+    """Prove that the port does the same, or show where not."""
     from porter.job import errors, merged, parity_json, prove_port
+    from porter.port.plan import plan
 
     with _progress() as say:
         circuit, behaviour = _judged(spec, say)
-        port = porter.plan(circuit, behaviour)
+        port = plan(circuit, behaviour)
         parity, acceptance = prove_port(circuit, port, behaviour, say)
     found = merged(errors(behaviour.findings), acceptance)
     if save is not None:
@@ -198,17 +224,27 @@ def prove(spec: str, save: Path | None, as_json: bool) -> int:
     else:
         from porter.show import people
 
-        people.show_parity(_console(), parity)
+        _tables(lambda out: people.show_parity(out, parity))
     return _answer(found, parity)
 
 
 @cli.command()
 @_spec
 @click.argument("presses", required=False, type=click.Path())
-@click.option("--press", "written", multiple=True, metavar="NAME@AT[+LENGTH]", help="A press, such as SET@0.1+50ms; repeat it for more.")
+@click.option(
+    "--press",
+    "written",
+    multiple=True,
+    metavar="NAME@AT[+LENGTH]",
+    help="A press, such as SET@0.1+50ms; repeat it for more.",
+)
 @click.option("--case", metavar="NAME", help="Which case of a file of test vectors.")
-@click.option("--start", type=click.Choice(["low", "high", "power-on"]), help="At rest with the output low or high, or power-on. Default: at rest as the port starts; power-on for test vectors.")
-@click.option("--until", metavar="SECONDS", help="End of the run. Default: the last press or release and 1 s.")
+@click.option(
+    "--start",
+    type=click.Choice(["low", "high", "power-on"]),
+    help="At rest with that output, or power-on. Default: at rest as the port starts; power-on for vectors.",
+)
+@click.option("--until", metavar="TIME", help="End of the run. Default: 1 s after the last change.")
 @click.option("--csv", "as_csv", is_flag=True, help="Print every change as CSV.")
 @_as_json
 def trace(
@@ -221,17 +257,18 @@ def trace(
     as_csv: bool,
     as_json: bool,
 ) -> int:
-    """Run circuit and port through the same presses, side by side.
+    """Run circuit and port through the same presses.
 
     PRESSES is a CSV file with the header time_s,button,action (press or release); one with
     time_s and a column of 0 and 1 for each button; or a case of the test vectors.
     """
+    from porter.port.plan import plan
     from porter.show import lanes, play
 
     if (presses is None) == (not written):
         raise click.UsageError("name a file of presses or give --press, one of the two")
     circuit, behaviour = _judged(spec)
-    port = porter.plan(circuit, behaviour)
+    port = plan(circuit, behaviour)
     tape = play.read_file(presses, circuit, port, case) if presses else play.read_words(written, circuit)
     run = play.play(circuit, port, tape, start, until)
     if as_json:
@@ -239,7 +276,7 @@ def trace(
     elif as_csv:
         _print(play.as_csv(run))
     else:
-        lanes.show_trace(_console(), run.trace, port.tick_s)
+        _tables(lambda out: lanes.show_trace(out, run.trace, port.tick_s))
     return FINE
 
 
@@ -249,35 +286,43 @@ def trace(
 @click.option("--language", type=click.Choice(["c", "micropython"]), help="Only this language.")
 def emit(spec: str, folder: Path, language: str | None) -> int:
     """Write the firmware alone, with its self-tests."""
-    job = _build(spec, folder)
+    job = _build(spec, folder, "firmware")
     wanted = f"firmware/{language or ''}"
-    _write_part(job, folder, wanted)
+    files = {p.partition("/")[2]: t for p, t in job.files.items() if p.startswith(wanted)}
+    _write_files("firmware", files, folder, job.circuit, job.port)
     return _answer((*job.behaviour.findings, *job.acceptance), job.parity)
 
 
 @cli.command()
 @_spec
 @click.option("-o", "folder", type=_folder, metavar="DIR", help="Folder to write.")
-@click.option("--format", "form", type=click.Choice(["csv", "json", "vcd"]), help="Only this format; to stdout without -o.")
+@click.option(
+    "--format",
+    "form",
+    type=click.Choice(["csv", "json", "vcd"]),
+    help="Only this format; to stdout without -o.",
+)
 def vectors(spec: str, folder: Path | None, form: str | None) -> int:
     """Write the test vectors alone."""
     from porter import job as jobs
+    from porter.port.plan import plan
+    from porter.vectors import build_vectors
 
     if folder is None and form is None:
         raise click.UsageError("give -o DIR for a folder of files, or --format for one format on stdout")
     if folder is not None:
-        jobs.check_folder(folder)
+        jobs.check_folder(folder, "vectors", Path(spec).name)
     with _progress() as say:
         circuit, behaviour = _judged(spec, say)
-        port = porter.plan(circuit, behaviour)
+        port = plan(circuit, behaviour)
         say("building the test vectors")
-        files = jobs.vector_files(porter.build_vectors(behaviour, port))
+        files = jobs.vector_files(build_vectors(behaviour, port))
     wanted = {p.partition("/")[2]: t for p, t in files.items() if p.endswith(form or "")}
     _diagnose(circuit, jobs.errors(behaviour.findings), spec)
     if folder is None:
         _print("".join(wanted.values()))
     else:
-        _write_files(wanted, folder, circuit, port)
+        _write_files("vectors", wanted, folder, circuit, port)
     return _answer(behaviour.findings)
 
 
@@ -286,11 +331,13 @@ def vectors(spec: str, folder: Path | None, form: str | None) -> int:
 @click.option("-o", "folder", type=_folder, required=True, metavar="DIR", help="Folder to write.")
 @_as_json
 def port(spec: str, folder: Path, as_json: bool) -> int:
-    """Do the whole job into one folder: report, proof, firmware, test vectors."""
+    """Do the whole job into one folder.
+
+    Report, proof, firmware in C and MicroPython, and test vectors."""
     from porter.job import write_job
     from porter.show import machine
 
-    job = _build(spec, folder)
+    job = _build(spec, folder, "job")
     write_job(job, folder)
     if as_json:
         _print(machine.dump(machine.ported(job, str(folder))))
@@ -301,7 +348,9 @@ def port(spec: str, folder: Path, as_json: bool) -> int:
 
 @cli.command()
 @click.argument("name", required=False)
-@click.option("-o", "file", type=_folder, metavar="FILE", help="File to write; - for stdout. Default: NAME.yaml here.")
+@click.option(
+    "-o", "file", type=_folder, metavar="FILE", help="File to write; - for stdout. Default: NAME.yaml here."
+)
 def start(name: str | None, file: Path | None) -> int:
     """Copy a shipped spec to begin from; without NAME, list them."""
     from porter.show import shipped
@@ -340,20 +389,22 @@ def schema() -> int:
 def _judged(spec: str, say: "Progress | None" = None) -> "tuple[Circuit, Behaviour]":
     """Read and derive; the circuit's positions carry the bare file name from here on."""
     from porter.job import judge, portable
+    from porter.spec.read import read
 
-    circuit = porter.read(spec)
+    circuit = read(spec)
     if say is not None:
         say("solving the circuit")
     circuit = portable(circuit)
     return circuit, judge(circuit)
 
 
-def _build(spec: str, folder: Path) -> "Job":
+def _build(spec: str, folder: Path, kind: str) -> "Job":
     """Build the whole job, with the folder looked at before the work; its diagnostics are shown."""
-    from porter.job import build_job, check_folder, errors, merged
+    from porter.job import build_job, check_folder, merged
+    from porter.spec.read import read
 
-    check_folder(folder)
-    circuit = porter.read(spec)
+    check_folder(folder, kind, Path(spec).name)
+    circuit = read(spec)
     with _progress() as say:
         job = build_job(circuit, progress=say)
     _diagnose(job.circuit, merged(job.behaviour.findings, job.acceptance), spec)
@@ -361,20 +412,15 @@ def _build(spec: str, folder: Path) -> "Job":
     return job
 
 
-def _write_part(job: "Job", folder: Path, wanted: str) -> None:
-    files = {p.partition("/")[2]: t for p, t in job.files.items() if p.startswith(wanted)}
-    _write_files(files, folder, job.circuit, job.port)
-
-
-def _write_files(files: dict[str, str], folder: Path, circuit: "Circuit", planned: "Port") -> None:
+def _write_files(kind: str, files: dict[str, str], folder: Path, circuit: "Circuit", planned: "Port") -> None:
     from porter.job import MANIFEST, manifest, write_folder
 
-    whole = {**files, MANIFEST: manifest(circuit.file, planned.spec_sha256, files)}
-    write_folder(whole, folder)
+    whole = {**files, MANIFEST: manifest(kind, circuit.file, planned.spec_sha256, files)}
+    write_folder(whole, folder, kind, circuit.file)
     _print(_wrote(folder, whole))
 
 
-def _wrote(folder: Path, files: Sequence[str] | dict[str, str]) -> str:
+def _wrote(folder: Path, files: Iterable[str]) -> str:
     return f"wrote {folder}:\n" + "".join(f"  {path}\n" for path in sorted(files))
 
 
@@ -439,11 +485,9 @@ def _save_counterexample(parity: "Parity", planned: "Port", file: Path, spec: st
 
 
 def _print(text: str) -> None:
-    """Print a result as UTF-8, with its line ends as they are where it is not for a terminal."""
-    if sys.stdout.isatty():
-        click.echo(text, nl=False)
-    else:
-        click.echo(text.encode(), nl=False)
+    """Print a result: to a terminal as it can, else as UTF-8 with its line ends as they are."""
+    with _nobody_reading():
+        click.echo(text if sys.stdout.isatty() else text.encode(), nl=False, color=True)
 
 
 def _colourful(stream: Any) -> bool:
@@ -451,10 +495,14 @@ def _colourful(stream: Any) -> bool:
     return not os.environ.get("NO_COLOR") and os.environ.get("TERM") != "dumb" and bool(stream.isatty())
 
 
-def _console() -> Any:
-    from porter.show.people import console
+def _tables(show: "Callable[[Console], None]") -> None:
+    """Print what *show* puts on a console; a terminal has its own width, a file a fixed one."""
+    from porter.show.people import FILE_WIDTH, console
 
-    return console(sys.stdout, _colourful(sys.stdout))
+    width = shutil.get_terminal_size().columns if sys.stdout.isatty() else FILE_WIDTH
+    text = io.StringIO()
+    show(console(text, width, _colourful(sys.stdout)))
+    _print(text.getvalue())
 
 
 @contextmanager

@@ -10,7 +10,6 @@ nobody has touched since: ``manifest.json`` holds the hash of each file.
 import dataclasses
 import hashlib
 import json
-import os
 import shutil
 import tempfile
 from collections.abc import Callable, Iterator, Mapping, Sequence
@@ -27,6 +26,7 @@ from porter.spec.model import Circuit
 from porter.vectors.model import Suite
 
 MANIFEST = "manifest.json"
+_ELSEWHERE = "give another folder with -o"
 #: Called with the name of each stage as it begins.
 Progress = Callable[[str], None]
 
@@ -83,6 +83,7 @@ def build_job(circuit: Circuit, *, progress: Progress | None = None) -> Job:
         PorterError: the circuit can't be ported; nothing is raised for a faulty one.
     """
     from porter.emit import emit
+    from porter.port.plan import plan
     from porter.vectors import build_vectors
 
     say = progress or _quiet
@@ -90,7 +91,7 @@ def build_job(circuit: Circuit, *, progress: Progress | None = None) -> Job:
     say("solving the circuit")
     behaviour = judge(circuit)
     say("planning the port")
-    port = porter.plan(circuit, behaviour)
+    port = plan(circuit, behaviour)
     parity, acceptance = prove_port(circuit, port, behaviour, say)
     say("building the test vectors")
     suite = build_vectors(behaviour, port)
@@ -104,7 +105,7 @@ def build_job(circuit: Circuit, *, progress: Progress | None = None) -> Job:
     say("drawing the report")
     shown = dataclasses.replace(behaviour, findings=merged(behaviour.findings, acceptance))
     files["report.html"] = _report(circuit, shown, port, parity, suite, files)
-    files[MANIFEST] = manifest(circuit.file, port.spec_sha256, files)
+    files[MANIFEST] = manifest("job", circuit.file, port.spec_sha256, files)
     return Job(circuit, behaviour, port, parity, acceptance, suite, dict(sorted(files.items())))
 
 
@@ -126,7 +127,9 @@ def portable(circuit: Circuit) -> Circuit:
 
 def judge(circuit: Circuit) -> Behaviour:
     """Derive the behaviour; the reader's warnings join its findings."""
-    behaviour: Behaviour = porter.derive(circuit)
+    from porter.behaviour.derive import derive
+
+    behaviour = derive(circuit)
     return dataclasses.replace(behaviour, findings=merged(circuit.warnings, behaviour.findings))
 
 
@@ -135,9 +138,10 @@ def prove_port(
 ) -> tuple[Parity, tuple[Finding, ...]]:
     """Prove a port; returns the proof and what is wrong with the spec's acceptances."""
     from porter.parity.acceptance import acceptance_findings
+    from porter.parity.prove import prove
 
     progress("proving parity")
-    parity: Parity = porter.prove(circuit, port, behaviour)
+    parity = prove(circuit, port, behaviour)
     return parity, acceptance_findings(circuit, parity)
 
 
@@ -196,11 +200,16 @@ def _versions() -> dict[str, str]:
 # --- the manifest ---
 
 
-def manifest(spec_file: str, spec_sha256: str, files: Mapping[str, str]) -> str:
-    """Return the text of ``manifest.json``: the spec, what made it, and the SHA-256 of every other file."""
+def manifest(kind: str, spec_file: str, spec_sha256: str, files: Mapping[str, str]) -> str:
+    """Return the text of ``manifest.json``: the spec, what made it, and the SHA-256 of every other file.
+
+    Args:
+        kind: ``job`` for everything, ``firmware`` or ``vectors`` for that part alone.
+    """
     return _sealed(
         {
             "format": 1,
+            "kind": kind,
             "inputs": {spec_file: spec_sha256},
             "versions": _versions(),
             "files": {path: _digest(text.encode()) for path, text in files.items()},
@@ -221,17 +230,25 @@ def _digest(data: bytes) -> str:
     return hashlib.sha256(data).hexdigest()
 
 
-def _hashes(folder: Path) -> Mapping[str, str] | None:
-    """Return the hashes of a folder's manifest, None where it has none as porter writes it."""
+@dataclass(frozen=True, slots=True)
+class _Written:
+    """What a folder's manifest says: kind and spec of the job, hash by path."""
+
+    kind: str
+    spec_file: str
+    hashes: Mapping[str, str]
+
+
+def _written(folder: Path) -> _Written | None:
+    """Return what a folder's manifest says, None where it has none as porter writes it."""
     try:
         text = (folder / MANIFEST).read_bytes().decode()
         content = json.loads(text)
         content.pop("seal")
-        files = content["files"]
-        whole = _sealed(content) == text
+        said = _Written(content["kind"], ", ".join(content["inputs"]), dict(content["files"]))
+        return said if _sealed(content) == text else None
     except (OSError, ValueError, KeyError, TypeError, AttributeError):
         return None
-    return files if whole and isinstance(files, dict) else None
 
 
 # --- the folder ---
@@ -239,61 +256,83 @@ def _hashes(folder: Path) -> Mapping[str, str] | None:
 
 def write_job(job: Job, folder: str | Path) -> None:
     """Write a job's files; see `write_folder`."""
-    write_folder(job.files, folder)
+    write_folder(job.files, folder, "job", job.circuit.file)
 
 
-def write_folder(files: Mapping[str, str], folder: str | Path) -> None:
+def write_folder(files: Mapping[str, str], folder: str | Path, kind: str, spec_file: str) -> None:
     """Write files into a folder, all of them or none.
 
     Args:
         files: text by path, ``manifest.json`` among them.
-        folder: made with its parents; it may exist if it is empty, or if porter wrote it and
-            nothing in it has changed.
+        folder: made with its parents; it may exist if it is empty, or if porter wrote it for
+            the same spec and nothing in it has changed.
+        kind, spec_file: as in the manifest.
 
     Raises:
         FolderError: something else is there, or the system refuses; nothing has been changed.
     """
     folder = Path(folder)
-    check_folder(folder)
+    check_folder(folder, kind, spec_file)
     try:
         with _parents(folder), _beside(folder) as made:
             for path, text in files.items():
                 _write(made / path, text)
-            check_folder(folder)  # again: proving took a while
+            check_folder(folder, kind, spec_file)  # again: whoever was quick is safe too
             _into_place(made, folder)
     except OSError as error:
         raise FolderError(f"can't write `{folder}`: {error.strerror or error}") from error
 
 
-def check_folder(folder: str | Path) -> None:
-    """Make sure that a folder may be written over.
+def check_folder(folder: str | Path, kind: str, spec_file: str) -> None:
+    """Make sure that a folder may be written over by a job of this kind and spec.
 
     Raises:
-        FolderError: it holds what porter didn't write, or wrote and somebody changed; each such file is named.
+        FolderError: it holds what porter didn't write or somebody changed since; each such file is named.
     """
     folder = Path(folder)
-    elsewhere = "give another folder with -o"
     if folder.is_symlink():
         raise FolderError(
-            f"`{folder}` is a link to `{folder.readlink()}`: name that folder itself, or {elsewhere}"
+            f"`{folder}` is a link to `{folder.readlink()}`: name that folder itself, or {_ELSEWHERE}"
         )
     if folder.exists() and not folder.is_dir():
-        raise FolderError(f"`{folder}` is a file: {elsewhere}")
+        raise FolderError(f"`{folder}` is a file: {_ELSEWHERE}")
     if folder.is_dir():
-        _check_place(folder, elsewhere)
-        strange = tuple(_strangers(folder))
-        if strange:
-            raise FolderError(
-                f"`{folder}` is not written over, since it holds what porter did not write, or wrote and "
-                f"somebody changed since:\n{_listed(strange)}\n  mend: move these, or {elsewhere}"
-            )
+        _check_place(folder)
+        _check_contents(folder)
+        _check_owner(folder, kind, spec_file)
 
 
-def _check_place(folder: Path, elsewhere: str) -> None:
+def _check_contents(folder: Path) -> None:
+    strange = tuple(_strangers(folder))
+    if strange:
+        raise FolderError(
+            f"`{folder}` is not written over, since it holds what porter did not write, or wrote and "
+            f"somebody changed since:\n{_listed(strange)}\n  mend: {_pins(strange)}move these, or {_ELSEWHERE}"
+        )
+
+
+def _pins(strange: Sequence[str]) -> str:
+    """Say where a filled-in pin layer belongs, where one is in the way."""
+    names = [Path(line.split(" (")[0]).name for line in strange]
+    mine = next((name for name in ("board.c", "main.py") if name in names), None)
+    return f"keep your own {mine} outside of this folder, which is remade as a whole; " if mine else ""
+
+
+def _check_owner(folder: Path, kind: str, spec_file: str) -> None:
+    """Refuse to put one job in the place of another: its report may be somebody's evidence."""
+    said = _written(folder)
+    if said is not None and (said.kind, said.spec_file) != (kind, spec_file):
+        raise FolderError(
+            f"`{folder}` holds another piece of work, the {said.kind} folder of {said.spec_file}: "
+            f"move it, or {_ELSEWHERE}"
+        )
+
+
+def _check_place(folder: Path) -> None:
     """Refuse the folder that the call is made in: taking it away would leave the shell nowhere."""
     here, place = Path.cwd(), folder.resolve()
     if place == here or place in here.parents:
-        raise FolderError(f"`{folder}` is the folder that you are in, or holds it: {elsewhere}")
+        raise FolderError(f"`{folder}` is the folder that you are in, or holds it: {_ELSEWHERE}")
 
 
 def _listed(lines: Sequence[str], most: int = 20) -> str:
@@ -303,7 +342,8 @@ def _listed(lines: Sequence[str], most: int = 20) -> str:
 
 def _strangers(folder: Path) -> Iterator[str]:
     """Yield what is in a folder that porter didn't write, or that has changed since, with why."""
-    hashes = _hashes(folder)
+    said = _written(folder)
+    hashes = None if said is None else said.hashes
     for path in sorted(folder.rglob("*")):
         name = path.relative_to(folder).as_posix()
         if path.is_dir() and not path.is_symlink():
@@ -362,7 +402,7 @@ def _into_place(made: Path, folder: Path) -> None:
     if folder.is_dir():
         folder.rename(old)
     try:
-        os.rename(made, folder)
+        made.rename(folder)
     except BaseException:
         if old.is_dir():
             old.rename(folder)

@@ -37,7 +37,7 @@ def _not_needed(acceptance: Acceptance, row: LedgerRow) -> Finding:
         "accept-not-needed",
         "error" if row.verdict == "same" else "note",
         acceptance.position,
-        f"`{row.row}` is {row.verdict} (circuit: {row.circuit}; port: {row.port}): there is nothing to accept",
+        f"`{row.row}` is {row.verdict}, nothing to accept (circuit: {row.circuit}; port: {row.port})",
         f"take the line for `{row.row}` out",
     )
 
