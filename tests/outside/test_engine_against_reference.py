@@ -196,7 +196,7 @@ def test_an_output_that_ends_up_carrying_nothing() -> None:
 CHECKS = [HealthCheck.too_slow, HealthCheck.filter_too_much, HealthCheck.data_too_large]
 
 
-@settings(max_examples=60, deadline=None, derandomize=True, suppress_health_check=CHECKS)
+@settings(max_examples=30, deadline=None, derandomize=True, suppress_health_check=CHECKS)
 @given(case=cases())
 def test_random_networks(case: Case) -> None:
     compare(case)
