@@ -1,0 +1,1 @@
+"""Runs emitted firmware on real instruction sets: in CPU emulators, and compiled for this machine."""
