@@ -13,7 +13,7 @@ from importlib import import_module
 _HOMES = {
     "read": "porter.spec.read",
     "derive": "porter.behaviour.derive",
-    "simulate": "porter.simulate",
+    "simulate": "porter.single_run",
     "plan": "porter.port.plan",
     "prove": "porter.parity.prove",
     "build_vectors": "porter.vectors",

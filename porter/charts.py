@@ -14,7 +14,7 @@ from porter.port.model import U16, Charge, Port, State
 from porter.port.plan import answers
 from porter.port.step import start as port_start
 from porter.port.swift import stepper
-from porter.simulate import Schedule, held_mask, simulate
+from porter.single_run import Schedule, held_mask, simulate
 from porter.spec.model import RAILS, Circuit
 from porter.trace import Changes, Trace, Wave
 

@@ -1,4 +1,11 @@
-"""Writes a port as source files: a core, a self-test and an example pin layer in each language."""
+"""Writes a port as source files: a core, a self-test and an example pin layer in each language.
+
+The room and the function it is for share a name, so the room can be called: ``porter.emit(port,
+suite)`` works whether or not a module in here was imported before.
+"""
+
+import sys
+from types import ModuleType
 
 from porter.emit.c99 import C99
 from porter.emit.language import Job, Language
@@ -36,5 +43,12 @@ def _write(language: Language, job: Job) -> dict[str, str]:
         for template, path in language.files.items()
     }
 
+
+class _Room(ModuleType):
+    def __call__(self, port: Port, suite: Suite, *, statement: str = "") -> dict[str, str]:
+        return emit(port, suite, statement=statement)
+
+
+sys.modules[__name__].__class__ = _Room
 
 __all__ = ["LANGUAGES", "Job", "Language", "emit"]

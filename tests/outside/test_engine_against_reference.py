@@ -16,7 +16,7 @@ import pytest
 from hypothesis import HealthCheck, assume, given, settings
 from hypothesis import strategies as st
 
-from porter.simulate import simulate
+from porter.single_run import simulate
 from porter.spec.read import read_text
 from tests.reference.integrate import Restless, Run, run_exact
 from tests.reference.network import IDEAL, Chip, Contact, Net

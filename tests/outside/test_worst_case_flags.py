@@ -8,7 +8,7 @@ import pytest
 
 from porter.behaviour.derive import derive
 from porter.behaviour.model import Behaviour
-from porter.simulate import simulate
+from porter.single_run import simulate
 from porter.spec.read import read_text
 
 TOGGLE = """\
