@@ -25,7 +25,7 @@ from porter.findings import Finding, Severity
 
 #: Twice the 50 mA rating of small tactile switches (Omron B3F; sealed gold contacts reach 100 mA).
 CONTACT_MOST_A = 0.1
-CONTACT_FINE_A = 0.02
+CONTACT_FINE_A = 0.05
 #: A high output that falls by more than this part of the supply is no logic level any more.
 FALL_MOST = 1 / 3
 _SLACK = 1 + 1e-9
@@ -62,18 +62,14 @@ def _short(case: Case, index: int, current: float, situation: Situation) -> Find
         f"from rail to rail through the contact of {button.name} is more than {figure(CONTACT_MOST_A, 'A')} "
         f"(a small push-button's rating)"
     )
+    # A resistor toward the supply spoils no press that pulls an input to ground.
+    pressed = [b for i, b in enumerate(case.circuit.buttons) if situation.held >> i & 1 and "vcc" in b.nodes]
+    tamed = pressed[0] if pressed else button
     ohm = at_least(case.circuit.supply.most / CONTACT_FINE_A)
-    node = new_name(case.circuit, f"{button.name.lower()}_k")
-    resistor = add_part(
-        new_name(case.circuit, f"R{button.name}"), "resistor", plain(ohm), button.nodes[0], node
-    )
-    return Finding(
-        "supply-short",
-        "error",
-        button.position,
-        message,
-        f"{move(button.name, node, button.nodes[1])} and {resistor}",
-    )
+    node, name = new_name(case.circuit, f"{tamed.name.lower()}_k"), new_name(case.circuit, f"R{tamed.name}")
+    resistor = add_part(name, "resistor", plain(ohm), tamed.nodes[0], node)
+    mend = f"{move(tamed.name, node, tamed.nodes[1])} and {resistor}"
+    return Finding("supply-short", "error", button.position, message, mend)
 
 
 # --- output-overloaded ---

@@ -9,7 +9,8 @@ from porter.behaviour.corner import Population
 from porter.behaviour.measure import MarginKey, WindowKey, margin_of
 from porter.behaviour.rules.case import Case
 from porter.behaviour.rules.memory import oscillating_masks
-from porter.behaviour.rules.words import figure, held_words, level, plain, three, volts
+from porter.behaviour.rules.reset import troubled
+from porter.behaviour.rules.words import figure, held_words, level, plain, three, two_digits, volts
 from porter.circuit.family import KEYS
 from porter.circuit.values import Floats
 from porter.findings import Finding, Position
@@ -42,10 +43,14 @@ class _Lost:
 
 def hold_not_guaranteed(case: Case) -> Iterator[Finding]:
     """A margin that the nominal unit has and some allowed unit has not; one finding a cause."""
-    busy = oscillating_masks(case)
+    busy, resets = oscillating_masks(case), troubled(case)
     margins = case.evidence.nominal.margins
-    keys = [key for key, nominal in margins.items() if nominal[0] >= 0 and key[0] not in busy]
-    lost = [found for key in keys if (found := _lost(case, key)) is not None]
+    lost = [
+        found
+        for key, nominal in margins.items()
+        if nominal[0] >= 0 and key[0] not in busy and not _told_of(resets, key)
+        if (found := _lost(case, key)) is not None
+    ]
     causes: dict[tuple[int, bool, bool], list[_Lost]] = {}
     for one in lost:
         if not _follows(case, one.key):
@@ -55,6 +60,11 @@ def hold_not_guaranteed(case: Case) -> Iterator[Finding]:
             causes.get(one.cause, next(iter(causes.values()))).append(one)
     for losses in causes.values():
         yield _unsure(case, sorted(losses, key=_rank))
+
+
+def _told_of(resets: set[int], key: MarginKey) -> bool:
+    """True where reset-not-low-enough says it already."""
+    return any(key[0] & held == held for held in resets) and (key[2] == "press" or key[2].startswith("reset"))
 
 
 def _follows(case: Case, key: MarginKey) -> bool:
@@ -133,7 +143,7 @@ def _where(case: Case, key: MarginKey) -> str:
 def _said(name: str) -> str:
     kind, _, rest = name.partition(".")
     if kind == "timer":
-        return f"the {KEYS[rest][1]}"
+        return f"the {KEYS[rest][1].partition(',')[0]}"
     return "the supply" if kind == "supply" else f"`{rest}`"
 
 
@@ -240,13 +250,10 @@ def _bounce(case: Case, index: int, button: Button, bounce: float) -> Iterator[F
     )
     safe = least if least > 0 else nominal
     if safe > 0:
-        fit = f"fit a `{button.name}` with `bounce: {_rounded_down(safe)}s` at most"
+        fit = (
+            f"fit a `{button.name}` with `bounce: {plain(two_digits(safe * (1 - 1e-9), up=False))}s` at most"
+        )
         mend = f"{fit}, or enlarge the memory capacitor"
     else:
         mend = f"filter {button.name}: any opening counts as a second press"
     yield Finding("bounce-outlasts-window", "error" if error else "warning", button.position, message, mend)
-
-
-def _rounded_down(seconds: float) -> str:
-    step = 10 ** (np.floor(np.log10(seconds)) - 1)
-    return plain(float(np.floor(seconds / step * (1 - 1e-9)) * step), 3)

@@ -19,6 +19,7 @@ from porter.behaviour.rules.case import (
     without_leak,
 )
 from porter.behaviour.rules.mending import (
+    all_good,
     applied,
     candidates,
     first_good,
@@ -32,6 +33,7 @@ from porter.behaviour.rules.words import (
     level,
     plain,
     series,
+    two_digits,
     volts,
     with_tolerance,
 )
@@ -40,7 +42,7 @@ from porter.circuit.family import FAMILIES
 from porter.circuit.network import GND
 from porter.circuit.values import Floats, columns
 from porter.findings import Finding, Position
-from porter.spec.model import Spread
+from porter.spec.model import Part, Spread
 
 #: Supplies that people have at hand.
 _SUPPLIES = (5.0, 6.0, 9.0, 12.0, 15.0)
@@ -128,7 +130,7 @@ def _differences(case: Case, other, k: int) -> list[tuple[str, int, int]]:  # ty
 
 
 def _leak(case: Case, column: str, lost: tuple[str, int, int]) -> Finding:
-    kind, name, _ = column.split(".")
+    _, name, _ = column.split(".")
     what, q, mask = lost
     engines = [case.evidence.engine, case.with_rows(_reduced(case, leaks(case.circuit), 1e-6))]
     if what == "press":
@@ -146,7 +148,7 @@ def _leak(case: Case, column: str, lost: tuple[str, int, int]) -> Finding:
         if part is not None
         else next(b.position for b in case.circuit.buttons if b.name == name)
     )
-    return Finding("leak-too-high", "error", place, message, _tighter(case, kind, name, column))
+    return Finding("leak-too-high", "error", place, message, _tighter(case, name, column))
 
 
 def _idle_reach(case: Case, engine: Engine, q: int, mask: int) -> Reach:
@@ -157,7 +159,7 @@ def _idle_reach(case: Case, engine: Engine, q: int, mask: int) -> Reach:
     return Reach(_GUARDS[guard], at, at - float(engine.guards(lanes)[0, guard]))
 
 
-def _tighter(case: Case, kind: str, name: str, column: str) -> str:
+def _tighter(case: Case, name: str, column: str) -> str:
     """Find a leakage small enough, in E12 steps; one step further than just enough."""
     clean = measure(case.with_rows(_reduced(case, leaks(case.circuit), 1e-6)))
     shares = [1.0 / v for v in series(1.0, True, 1e6)]
@@ -167,14 +169,12 @@ def _tighter(case: Case, kind: str, name: str, column: str) -> str:
     if not fine:
         return f"fit a `{name}` that leaks less, and parts that do too"
     share = fine[min(1, len(fine) - 1)]
-    value = float(_reduced(case, [column], share)[0, case.cols.index(column)])
-    unit = "A" if share * float(case.cols.nominal[case.cols.index(column)]) == value else ""
-    word = "most" if unit else "least"
-    return (
-        f"fit a `{name}` with `leak: {plain(value)}{unit}` at {word}"
-        if kind == "parts"
-        else (f"fit a `{name}` with `leak: {plain(value)}` at least")
-    )
+    old = float(case.cols.nominal[case.cols.index(column)])
+    new = float(_reduced(case, [column], share)[0, case.cols.index(column)])
+    part = case.part(name)
+    if new < old and part is not None and part.leak is not None:
+        return f"fit a `{name}` with `leak: {plain(two_digits(new, up=False))}A` at most"
+    return f"fit a `{name}` with `leak: {plain(two_digits(new, up=True))}` at least"
 
 
 def _same(clean, tried, k: int) -> bool:  # type: ignore[no-untyped-def]
@@ -277,11 +277,13 @@ def high_level_too_low(case: Case) -> Iterator[Finding]:
                 and all(r[0] for r in case.evidence.nominal.rests)
                 and not _flips(case, q, m)
             ):
-                yield _too_low(case, m, q)
+                yield from _too_low(case, m, q)
 
 
-def _too_low(case: Case, m: MemoryButton, q: int) -> Finding:
+def _too_low(case: Case, m: MemoryButton, q: int) -> Iterator[Finding]:
     reach = press_reach(case, case.evidence.engine, q, m.mask)
+    if (reach.volts > reach.level) if q else (reach.volts < reach.level):
+        return  # it gets there: something else is the matter
     out = case.pin("output")
     output = case.volts(q, 0, -1 if out is None else out)
     store = f"`{name_of(case.topo, m.store)}` to {volts(case.volts(q, 0, m.store))}"
@@ -290,7 +292,7 @@ def _too_low(case: Case, m: MemoryButton, q: int) -> Finding:
         f"the {level(q)} output of {volts(output)} charges {store}; pressing {name} takes {reach.words}, "
         f"not {'above' if q else 'below'} its level {volts(reach.level)}: {name} can't turn it {level(1 - q)}"
     )
-    return Finding("high-level-too-low", "error", _button_place(case, m), message, _higher(case, m))
+    yield Finding("high-level-too-low", "error", _button_place(case, m), message, _higher(case, m))
 
 
 def _higher(case: Case, m: MemoryButton) -> str:
@@ -404,18 +406,20 @@ def _weaker(case: Case, mask: int, shaky: Floats) -> str:
     def good(engine: Engine) -> Mask:
         return toggles(engine, 1 << turner) & ~_busy(engine, mask)
 
-    def calm(engine: Engine) -> Mask:
-        return ~_busy(engine, mask)
-
-    tried = candidates(case, resistors(case))
-    fine = [
-        c for k, c in enumerate(tried) if good(case.with_rows(applied(case, case.evidence.engine.rows, c)))[0]
-    ]
-    units = np.concatenate([shaky[:: max(1, len(shaky) // 40)], some_units(case)])
-    for candidate in fine[:24]:
-        if calm(case.with_rows(applied(case, units, candidate))).all():
+    near = [p.name for p in case.circuit.parts if p.kind == "resistor" and _feeds(case, p)]
+    tried = [c for names in (near, resistors(case)) for c in candidates(case, names)]
+    fine = all_good(case, tried, good)
+    units = np.concatenate([shaky[:: max(1, len(shaky) // 20)], some_units(case)])
+    for candidate in fine[:8]:
+        if not _busy(case.with_rows(applied(case, units, candidate)), mask).any():
             return wording(case, candidate)
     return wording(case, fine[0]) if fine else "feed the memory through a larger resistor"
+
+
+def _feeds(case: Case, part: Part) -> bool:
+    """True for a resistor at a memory capacitor."""
+    stores = {name_of(case.topo, m.store) for m in case.memory}
+    return bool(stores & set(part.nodes))
 
 
 def _busy(engine: Engine, mask: int) -> Mask:

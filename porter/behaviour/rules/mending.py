@@ -12,7 +12,7 @@ from porter.circuit.engine import Engine, Mask
 from porter.circuit.network import VCC
 from porter.circuit.values import Floats
 
-_SAMPLE = 300  # units on which a candidate is tried beyond the nominal one
+_SAMPLE = 60  # units on which a candidate is tried beyond the nominal one
 
 
 @dataclass(frozen=True, slots=True)
@@ -54,12 +54,18 @@ def applied(case: Case, rows: Floats, candidate: Candidate) -> Floats:
 
 
 def first_good(case: Case, tried: Sequence[Candidate], good: Callable[[Engine], Mask]) -> Candidate | None:
-    """Return the smallest change with which the nominal unit is good, None where none helps."""
+    """Return the first candidate with which the nominal unit is good, None where none helps."""
+    return next(iter(all_good(case, tried, good)), None)
+
+
+def all_good(case: Case, tried: Sequence[Candidate], good: Callable[[Engine], Mask]) -> list[Candidate]:
+    """Return the candidates that make the nominal unit good, with a tenth of the change to spare."""
     if not tried:
-        return None
-    rows = np.concatenate([applied(case, case.evidence.engine.rows, c) for c in tried])
-    fine = np.flatnonzero(good(case.with_rows(rows)))
-    return tried[int(fine[0])] if len(fine) else None
+        return []
+    softer = [Candidate(c.name, c.value, c.ratio**0.9) for c in tried]
+    rows = np.concatenate([applied(case, case.evidence.engine.rows, c) for c in (*tried, *softer)])
+    fine = good(case.with_rows(rows)).reshape(2, len(tried)).all(axis=0)
+    return [tried[int(k)] for k in np.flatnonzero(fine)]
 
 
 def some_units(case: Case) -> Floats:

@@ -33,16 +33,29 @@ def not_low_enough(case: Case) -> Iterator[Finding]:
     Meant: it takes the pin below half of the highest voltage that any other gives it.
     """
     node = case.pin("reset")
+    for held in _meant(case):
+        assert node is not None
+        yield from _judged(case, held, node)
+
+
+def troubled(case: Case) -> set[int]:
+    """Return the held masks that the rule has something to say of."""
+    node = case.pin("reset")
+    return {held for held in _meant(case) if node is not None and any(_judged(case, held, node, mend=False))}
+
+
+def _meant(case: Case) -> list[int]:
+    """Return the least held masks that are meant to reset."""
+    node = case.pin("reset")
     if node is None or node < 0:
-        return
+        return []
     masks = sorted(range(1 << len(case.circuit.buttons)), key=lambda k: (k.bit_count(), k))
     highest = max(case.volts(1, held, node) for held in masks)
-    told: list[int] = []
+    found: list[int] = []
     for held in masks:
-        if any(held & t == t for t in told) or case.volts(1, held, node) >= _MEANT * highest:
-            continue
-        told.append(held)
-        yield from _judged(case, held, node)
+        if not any(held & t == t for t in found) and case.volts(1, held, node) < _MEANT * highest:
+            found.append(held)
+    return found
 
 
 def _beyond(engine: Engine, held: int, node: int) -> Floats:
@@ -54,7 +67,7 @@ def _figure(engine: Engine, key: str) -> Floats:
     return np.asarray(engine.rows[:, engine.columns.index(f"timer.{key}")])
 
 
-def _judged(case: Case, held: int, node: int) -> Iterator[Finding]:
+def _judged(case: Case, held: int, node: int, mend: bool = True) -> Iterator[Finding]:
     nominal = case.evidence.engine
     worst = worst_row(case, lambda engine: _beyond(engine, held, node))
     error = bool(_beyond(nominal, held, node)[0] >= 0)
@@ -70,8 +83,8 @@ def _judged(case: Case, held: int, node: int) -> Iterator[Finding]:
     )
     pressed = [b.position for i, b in enumerate(case.circuit.buttons) if held >> i & 1]
     place = pressed[0] if pressed else case.place("reset")
-    mend = _lower(case, held, node, worst)
-    yield Finding("reset-not-low-enough", "error" if error else "warning", place, message, mend)
+    how = _lower(case, held, node, worst) if mend else ""
+    yield Finding("reset-not-low-enough", "error" if error else "warning", place, message, how)
 
 
 def _lower(case: Case, held: int, node: int, worst: Floats) -> str:

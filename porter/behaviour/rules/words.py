@@ -57,8 +57,7 @@ def three(nominal: float, least: float, most: float, unit: str = "") -> str:
     named = (("nominal", nominal), ("least", least), ("most", most))
     if unit == "1":
         return "{" + ", ".join(f"{name}: {v:.6g}" for name, v in named) + "}"
-    tail = f" {unit}" if unit else ""
-    return "{" + ", ".join(f"{name}: {plain(v)}{tail}" for name, v in named) + "}"
+    return "{" + ", ".join(f"{name}: {plain(v)}{unit}" for name, v in named) + "}"
 
 
 def series(value: float, up: bool, factor: float = 100.0) -> list[float]:
@@ -73,6 +72,13 @@ def series(value: float, up: bool, factor: float = 100.0) -> list[float]:
 def at_least(value: float) -> float:
     """Return the next E12 value that is not smaller."""
     return series(value * 0.998, True)[0]
+
+
+def two_digits(value: float, up: bool) -> float:
+    """Round a positive value up (or down) to two digits."""
+    step = 10.0 ** (math.floor(math.log10(value)) - 1)
+    count = math.ceil(value / step * (1 - 1e-9)) if up else math.floor(value / step * (1 + 1e-9))
+    return count * step
 
 
 def new_name(circuit: Circuit, stem: str) -> str:
