@@ -302,8 +302,8 @@ class Core:
         names = copies(machine)
         decide = render(machine.decide, self._ask, lambda f: self._flip(f, names), SYNTAX)
         lines = ["", "/* Decide with the charge from before this tick. */", *decide] if decide else []
-        # The latch is settled here; storing it now frees a register for the motion.
-        lines += ["", *(self._pack(cell) for cell in self.parts.cells if early(cell, machine))]
+        stored = [self._pack(cell) for cell in self.parts.cells if early(cell, machine)]
+        lines += ["", *stored] if stored else []
         mixed = any(motion.mixed for motion in machine.motions)
         for k, (x, motion) in enumerate(zip(names, machine.motions, strict=True)):
             moved = self._motion(motion, x, f"y{k}" if mixed else x, names)
@@ -350,8 +350,8 @@ class Core:
         return f"({joined})" if nested else joined
 
     def _compare(self, test: Compare, names: tuple[str, ...]) -> str:
-        if len(test.coeff) == 1:
-            return f"{names[0]} {test.operator} {self._ref(test.limit)}"
+        if test.alone is not None:
+            return f"{names[test.alone]} {test.operator} {self._ref(test.limit)}"
         terms = [
             f"({self._ref(w)} * (int32_t){x})" for x, w in zip(names, test.weights, strict=True) if w.value
         ]
@@ -455,10 +455,10 @@ def _bits(
 
 
 def early(cell: Cell, machine: ChargeParts | CountParts) -> bool:
-    """Whether a cell is settled before the copies move."""
-    return isinstance(machine, ChargeParts) and not set(copies(machine)) & {
-        field.name for field in cell.fields
-    }
+    """Whether a cell is stored before the copies move, to free its registers for a multiplication."""
+    if isinstance(machine, CountParts) or set(copies(machine)) & {field.name for field in cell.fields}:
+        return False
+    return any(amount.kind == "rate" for motion in machine.motions for amount in amounts_of(motion))
 
 
 def amounts_of(motion: Motion) -> list[Amount]:

@@ -27,6 +27,11 @@ class Compare:
     weights: tuple[Number, ...] = ()  # the coefficients by name, where there are several
 
     @property
+    def alone(self) -> int | None:
+        """The index of the one copy that is compared, None for a sum of several."""
+        return self.coeff.index(1) if not self.weights else None
+
+    @property
     def least(self) -> int | None:
         """The least sum that holds, None where only a most is set."""
         return {">=": self.limit.value, ">": self.limit.value + 1}.get(self.operator)
@@ -343,7 +348,11 @@ def _compare(port: Port, test: Test, q: int, held: int, key: str, numbers: Numbe
     if max(-_bounds(test.coeff)[0], _bounds(test.coeff)[1]) > 2**31 - 1:
         raise ValueError(f"{port.name}: the sum of {key} leaves 32 bits")
     place = numbers.place(q, held)
-    limit = numbers.get(_role(test, key), place, test.limit, f"{key}.limit", _about_test(test, q, key))
+    if len([c for c in test.coeff if c]) == 1:
+        return _compare_one(charge, test, q, place, key, numbers)
+    limit = numbers.get(
+        f"SUM_{_LIMITS[key.split('.')[0]]}", place, test.limit, f"{key}.limit", _about_test(test, q, key)
+    )
     weights = tuple(
         numbers.get(
             "WEIGHT",
@@ -353,14 +362,20 @@ def _compare(port: Port, test: Test, q: int, held: int, key: str, numbers: Numbe
             f"Weight of the copy of {charge.capacitors[k]} in the sum that decides.",
         )
         for k, c in enumerate(test.coeff)
-        if len(test.coeff) > 1
     )
     return Compare(test.coeff, ">=" if test.ge else "<=", limit, weights)
 
 
-def _role(test: Test, key: str) -> str:
-    role = _LIMITS[key.split(".")[0]]
-    return f"SUM_{role}" if len(test.coeff) > 1 else role
+def _compare_one(charge: Charge, test: Test, q: int, place: str, key: str, numbers: Numbers) -> Compare:
+    """Return a test on one copy with its weight divided out, which turns it round where that is negative."""
+    k, weight = next((k, c) for k, c in enumerate(test.coeff) if c)
+    ge = test.ge == (weight > 0)
+    # X >= l / w means X >= the next whole number up, X <= l / w the next one down.
+    limit = -(-test.limit // weight) if ge else test.limit // weight
+    unit = tuple(int(j == k) for j in range(len(test.coeff)))
+    about = _about_test(Test(unit, ge, limit), q, key)
+    role = _of(_LIMITS[key.split(".")[0]], k, charge)
+    return Compare(unit, ">=" if ge else "<=", numbers.get(role, place, limit, f"{key}.limit", about))
 
 
 def _about_test(test: Test, q: int, key: str) -> str:

@@ -311,8 +311,8 @@ def _all(all_of: All, names: tuple[str, ...]) -> str:
 
 def _compare(test: Compare, names: tuple[str, ...]) -> str:
     """Return a comparison; sums of several copies in two halves, which fit small integers."""
-    if len(test.coeff) == 1:
-        return f"{names[0]} {test.operator} {_ref(test.limit)}"
+    if test.alone is not None:
+        return f"{names[test.alone]} {test.operator} {_ref(test.limit)}"
     used = [(x, _ref(w)) for x, w in zip(names, test.weights, strict=True) if w.value]
     high = " + ".join(f"{w} * ({x} >> 8)" for x, w in used) or "0"
     low = " + ".join(f"{w} * ({x} & 255)" for x, w in used) or "0"

@@ -1,7 +1,8 @@
 """The named numbers of a port: each with its meaning, working and source, once for each value and role."""
 
+import re
 import textwrap
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 
 from porter.emit.names import comment, unique
 from porter.port.model import Constant, Port
@@ -22,6 +23,7 @@ class Numbers:
 
     port: Port
     rows: dict[tuple[str, int], Number] = field(default_factory=dict)
+    keys: dict[tuple[str, int], list[str]] = field(default_factory=dict)
 
     def get(self, role: str, where: str, value: int, key: str, fallback: str) -> Number:
         """Return the number for *value* in *role*, named after the place where it is first used.
@@ -31,6 +33,8 @@ class Numbers:
             key: of the port's constant; `fallback`: the description where the port has none.
         """
         known = self.rows.get((role, value))
+        keys = self.keys.setdefault((role, value), [])
+        keys += [key] if key not in keys else []
         if known is None:
             name = self._free(f"{role}_{where}" if where else role)
             known = Number(name, value, self._about(key, fallback))
@@ -39,7 +43,7 @@ class Numbers:
 
     def all(self) -> tuple[Number, ...]:
         """Return every number asked for, in the order of first use."""
-        return tuple(self.rows.values())
+        return tuple(replace(row, about=(*row.about, *self._shared(at))) for at, row in self.rows.items())
 
     def held(self, held: int) -> str:
         """Return a word for a held mask: ``OPEN``, ``SET`` or ``SET_CLEAR``."""
@@ -55,8 +59,20 @@ class Numbers:
         choices = [name, *(f"{name}_{n}" for n in range(2, len(taken) + 3))]
         return next(choice for choice in choices if choice not in taken)
 
+    def _shared(self, at: tuple[str, int]) -> list[str]:
+        """Return a line on the other modes that use a number."""
+        modes = [re.search(r"\.q(\d)\.h(\d+)\.", key) for key in self.keys[at]]
+        places = dict.fromkeys((int(m[1]), int(m[2])) for m in modes if m)
+        words = [f"{('low', 'high')[q]} with {self._names(h)}" for q, h in list(places)[1:]]
+        return wrap(f"also for: {', '.join(words)}") if words else []
+
+    def _names(self, held: int) -> str:
+        return " and ".join(b for i, b in enumerate(self.port.buttons) if held >> i & 1) or "none held"
+
     def _about(self, key: str, fallback: str) -> tuple[str, ...]:
-        row = next((c for c in self.port.constants if c.key == key), None)
+        # The first test of a mode may go without its number.
+        keys = (key, key.replace(".0.limit", ".limit"))
+        row = next((c for c in self.port.constants if c.key in keys), None)
         return describe(row) if row else tuple(wrap(fallback))
 
 

@@ -225,7 +225,13 @@ def _test(caps: int) -> st.SearchStrategy[Test]:
         return st.builds(Test, st.just((1,)), st.booleans(), COPY)
     most = 32767 // caps
     coeff = st.tuples(*[st.integers(-most, most)] * caps)
-    return st.builds(Test, coeff, st.booleans(), st.integers(-(10**8), 10**8))
+    one = st.builds(
+        lambda k, c: tuple(c * (j == k) for j in range(caps)),
+        st.integers(0, caps - 1),
+        st.integers(-most, most),
+    )
+    many = st.builds(Test, coeff, st.booleans(), st.integers(-(10**8), 10**8))
+    return st.one_of(many, st.builds(Test, one, st.booleans(), st.integers(-70000, 70000)))
 
 
 @st.composite

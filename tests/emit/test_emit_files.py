@@ -24,7 +24,7 @@ STATEMENT = "Same as the circuit for every sequence of any length."
 
 def files(port: Port, **kwargs) -> dict[str, str]:
     """Emit with a short suite."""
-    return emit(port, suite(port, 120), statement=STATEMENT, **kwargs)
+    return emit(port, suite(port, 1500), statement=STATEMENT, **kwargs)
 
 
 def test_paths_are_the_contract():

@@ -34,9 +34,13 @@
  * from memo_toggle.yaml:6
  */
 #define MEMO_TOGGLE_END_HIGH_PUSH 26000u
-/* Part of its distance that the copy of mem goes in a tick, as a power of two. */
+/* Part of its distance that the copy of mem goes in a tick, as a power of two.
+ * also for: high with none held
+ */
 #define MEMO_TOGGLE_SHIFT_OPEN 8u
-/* Part of its distance that the copy of mem goes in a tick, as a power of two. */
+/* Part of its distance that the copy of mem goes in a tick, as a power of two.
+ * also for: high with PUSH
+ */
 #define MEMO_TOGGLE_SHIFT_PUSH 3u
 
 void memo_toggle_init(memo_toggle_t *m)
@@ -63,8 +67,6 @@ uint8_t memo_toggle_step(memo_toggle_t *m, uint8_t held)
         }
     }
 
-    m->bits = (uint8_t)(q | (uint8_t)(held << 1u));
-
     /* Move the copy of mem by one tick. */
     uint16_t end;
     uint8_t shift;
@@ -88,6 +90,7 @@ uint8_t memo_toggle_step(memo_toggle_t *m, uint8_t held)
     x = (x < end) ? (uint16_t)(x + by) : (uint16_t)(x - by);
 
     m->x = x;
+    m->bits = (uint8_t)(q | (uint8_t)(held << 1u));
 
     return q;
 }

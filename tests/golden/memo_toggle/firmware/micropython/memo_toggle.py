@@ -50,9 +50,11 @@ _END_HIGH_OPEN = const(300)
 _END_HIGH_PUSH = const(26000)
 
 # Part of its distance that the copy of mem goes in a tick, as a power of two.
+# also for: high with none held
 _SHIFT_OPEN = const(8)
 
 # Part of its distance that the copy of mem goes in a tick, as a power of two.
+# also for: high with PUSH
 _SHIFT_PUSH = const(3)
 
 
