@@ -1,5 +1,6 @@
 """Ports made by hand, and strategies that make more: what the planner could hand to the emit room."""
 
+from functools import cache
 from itertools import pairwise, product
 
 import numpy as np
@@ -131,6 +132,7 @@ def stimulus(made: Port, ticks: int, seed: int) -> np.ndarray:
     return held
 
 
+@cache
 def suite(made: Port, ticks: int = 600, cases: int = 2) -> Suite:
     """Return a suite whose answers are the reference's."""
     return Suite(

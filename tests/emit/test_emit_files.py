@@ -6,6 +6,7 @@ import subprocess
 import sys
 from dataclasses import replace
 from pathlib import Path
+from types import SimpleNamespace
 
 import pytest
 from emit_ports import HAND_MADE, suite, toggle_count, toggle_shift, toggle_sides, two_button, two_caps
@@ -101,6 +102,82 @@ def test_micropython_runs_the_selftest():
     test = test.replace(f"from {port.name} import", "# from").replace('"__main__"', "__name__")
     printed = micropython(f"{core}\n{test}")
     assert "all 2 cases passed" in printed
+
+
+class EnoughError(Exception):
+    """Ends the endless loop of the pin layer."""
+
+
+class Bench:
+    """Stands in for MicroPython's ``machine`` and ``time``: a clock near its wrap, pins by number."""
+
+    wrap = 1 << 30
+
+    def __init__(self, levels):
+        self.now, self.levels, self.seen = self.wrap - 5_000, levels, []
+
+    def modules(self):
+        """Return the two modules."""
+        bench = self
+
+        class Pin:
+            IN, OUT, PULL_UP, PULL_DOWN = "in", "out", "up", "down"
+
+            def __init__(self, number, mode, _pull=None, value=None):
+                self.number = number
+                if mode == "out":
+                    bench.seen.append((number, value))
+
+            def value(self, level=None):
+                if level is not None:
+                    bench.seen.append((self.number, level))
+                return bench.levels(bench.ticks())
+
+        class Dog:
+            def __init__(self, timeout):
+                pass
+
+            def feed(self):
+                if bench.ticks() > 20:
+                    raise EnoughError
+
+        machine = SimpleNamespace(Pin=Pin, WDT=Dog)
+        time = SimpleNamespace(
+            ticks_us=lambda: self.now % self.wrap,
+            ticks_add=lambda a, b: (a + b) % self.wrap,
+            ticks_diff=lambda a, b: (a - b + self.wrap // 2) % self.wrap - self.wrap // 2,
+            sleep_us=self._sleep,
+        )
+        return {"machine": machine, "time": time}
+
+    def ticks(self):
+        """Return the milliseconds since the start."""
+        return (self.now - self.wrap + 5_000) // 1000
+
+    def _sleep(self, us):
+        assert 0 < us <= 1000
+        self.now += us
+
+
+def test_pin_layer_follows_the_button_through_the_clocks_wrap(tmp_path, monkeypatch):
+    """The MicroPython loop steps once a tick, drives the first level at once, and survives the wrap."""
+    port = two_button()
+    for path, text in files(port).items():
+        if "micropython" in path:
+            (tmp_path / Path(path).name).write_text(text)
+    # Both buttons' pins read alike here, and reset wins; so a made-up part has one button only.
+    layer = (tmp_path / "main.py").read_text().replace("    (3, 0),  # CLEAR\n", "")
+    bench = Bench(lambda tick: 0 if tick >= 8 else 1)
+    for name, module in bench.modules().items():
+        monkeypatch.setitem(sys.modules, name, module)
+    monkeypatch.syspath_prepend(str(tmp_path))
+    space = {"__name__": "pins"}
+    exec(compile(layer, "main.py", "exec"), space)
+    monkeypatch.delitem(sys.modules, port.name)
+    with pytest.raises(EnoughError):
+        space["main"]()
+    levels = [level for _, level in bench.seen]
+    assert levels[:8] == [0] * 8 and levels[8:] == [1] * (len(levels) - 8)
 
 
 def test_an_empty_suite_proves_nothing(tmp_path):
