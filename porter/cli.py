@@ -467,7 +467,8 @@ def _say_open(parity: "Parity") -> None:
     rows = open_rows(parity)
     if not rows:
         return
-    lines = [f"porter: {len(rows)} ledger row{'s' if len(rows) > 1 else ''} differ and are not accepted:"]
+    they = "row differs and is" if len(rows) == 1 else "rows differ and are"
+    lines = [f"porter: {len(rows)} ledger {they} not accepted:"]
     lines += [f"  {row.row}: circuit: {row.circuit}; port: {row.port}" for row in rows]
     lines += ["  to take one on purpose, add it to the spec with your reason:"]
     lines += ["  accept:", f'    - {{row: {rows[0].row}, because: "why this is all right here"}}']

@@ -307,7 +307,8 @@ def _check_contents(folder: Path) -> None:
     if strange:
         raise FolderError(
             f"`{folder}` is not written over, since it holds what porter did not write, or wrote and "
-            f"somebody changed since:\n{_listed(strange)}\n  mend: {_pins(strange)}move these, or {_ELSEWHERE}"
+            f"somebody changed since:\n{_listed(strange)}\n"
+            f"  mend: {_pins(strange)}move these, or {_ELSEWHERE}"
         )
 
 

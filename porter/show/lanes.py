@@ -41,7 +41,7 @@ def show_trace(out: Console, trace: Trace, tick_s: float) -> None:
         show_table(out, "Edges of the outputs", heads, rows)
     else:
         out.print(Text("No output changes."))
-    out.print(Text(compare(trace, tick_s).replace(NBSP, " ")))
+    out.print(Text(compare(trace, tick_s).replace(NBSP, " ").replace(", hatched.", ".")))
 
 
 def chart(trace: Trace, width: int) -> list[str]:
