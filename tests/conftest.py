@@ -1,7 +1,9 @@
-"""What all tests share: golden files and the flag that rewrites them.
+"""What all tests share: golden files with the flag that rewrites them, and how hypothesis behaves.
 
 ``pytest --update-golden`` rewrites; where CI is set the flag is refused, so that a
 build can't approve its own output.
+
+Set ``PORTER_SHRINK`` to let hypothesis look for the smallest failing example.
 """
 
 import os
@@ -9,6 +11,18 @@ from collections.abc import Callable
 from pathlib import Path
 
 import pytest
+from hypothesis import Phase, settings
+
+# Every run tries the same examples, so that a failure is there again the next time. Shrinking one
+# can take minutes where an example is a whole proof, so it is done on request.
+settings.register_profile(
+    "porter",
+    deadline=None,
+    derandomize=True,
+    print_blob=True,
+    phases=[phase for phase in Phase if phase is not Phase.shrink or os.environ.get("PORTER_SHRINK")],
+)
+settings.load_profile("porter")
 
 
 def pytest_addoption(parser: pytest.Parser) -> None:
