@@ -13,7 +13,10 @@ import pytest
 
 import porter
 from porter import cli
+from porter.behaviour.model import Behaviour
+from porter.job import judge
 from porter.resources import folder
+from porter.spec.model import Circuit
 
 #: A two-button latch without memory: quick to solve and to prove.
 SIGN = str(folder("specs") / "door_sign.yaml")
@@ -30,12 +33,22 @@ class Ended:
 
 
 Call = Callable[..., Ended]
+_judged: dict[tuple[str, str], Behaviour] = {}
+
+
+def judge_once(circuit: Circuit) -> Behaviour:
+    """Derive each spec once in all these tests; the same text behaves the same."""
+    key = circuit.file, circuit.source
+    if key not in _judged:
+        _judged[key] = judge(circuit)
+    return _judged[key]
 
 
 @pytest.fixture
 def call(capsys: pytest.CaptureFixture[str], monkeypatch: pytest.MonkeyPatch) -> Call:
     """Return a function that makes a call in this process."""
     monkeypatch.setattr(cli.signal, "signal", lambda *_: None)  # the test runner has its own
+    monkeypatch.setattr("porter.job.judge", judge_once)
 
     def made(*args: object) -> Ended:
         with pytest.raises(SystemExit) as left:
