@@ -51,8 +51,8 @@ def first_fall(f0: Floats, d: Floats, rate: Floats, until: Floats) -> Floats:
 def _by_terms(t: Floats, rows: NDArray[np.int64], f0: Floats, d: Floats, rate: Floats, until: Floats) -> Floats:
     """Fill in the rows that may fall: in closed form where a single term counts at all."""
     f0, d, rate, until = f0[rows], d[rows], rate[rows], until[rows]
-    with np.errstate(divide="ignore"):
-        size = np.abs(d) * np.minimum(1.0 / rate, until[:, None])
+    with np.errstate(divide="ignore", invalid="ignore"):  # a term of nothing for ever is nothing
+        size = np.where(d != 0, np.abs(d) * np.minimum(1.0 / rate, until[:, None]), 0.0)
     counts = size > 1e-17 * (np.abs(f0) + size.max(axis=1))[:, None]
     single = counts.sum(axis=1) == 1
     only = counts[single].argmax(axis=1)[:, None]

@@ -464,6 +464,25 @@ def test_mend_carried_out_clears(case: Case) -> None:
     assert rules_of(after.findings) <= gone, "the mend breaks something else"
 
 
+@pytest.mark.parametrize("case", [p for p in NAMED if p.values[0].severity == "error"])
+def test_one_fault_is_one_error(case: Case) -> None:
+    also = {"output-overloaded"} if case.name == "diode-reversed" else set()  # it shorts the output
+    assert rules_of(derive(case.shows).findings) == {case.rule} | also
+
+
+@pytest.mark.parametrize("case", [p for p in NAMED if p.values[0].severity == "error"])
+def test_an_error_makes_the_verdict_faulty(case: Case) -> None:
+    assert derive(case.shows).verdict == "faulty"
+
+
+@pytest.mark.parametrize("case", NAMED)
+def test_message_says_numbers_and_mend_says_what_to_write(case: Case) -> None:
+    for found in of_rule(derive(case.shows), case.rule):
+        assert re.search(r"\d", found.message) or case.rule in ("intent-not-met", "relay-without-diode")
+        assert "`" in found.mend
+        assert not re.search(r"\be[-+]\d|\dnan|\binf\b", found.message + found.mend)
+
+
 def test_findings_are_in_the_order_of_the_spec() -> None:
     text = latch(
         {"R1": None, "R3": "{resistor: 100, between: [out, lamp]}"}, more="intent:\n  - {power_on: low}\n"

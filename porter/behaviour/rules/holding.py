@@ -80,6 +80,8 @@ def _lost(case: Case, key: MarginKey) -> _Lost | None:
     drawn = case.evidence.drawn.measures.margins[key]
     for group, by_parts in ((case.evidence.drawn, True), (case.evidence.published, False)):
         values = group.measures.margins[key]
+        if not np.isfinite(values).all():
+            return None  # a pin that is not connected never decides
         worst = int(values.argmin())
         if values[worst] < -_NEAR:
             column, at_most = _cause(group, values)
@@ -249,7 +251,7 @@ def _bounce(case: Case, index: int, button: Button, bounce: float) -> Iterator[F
         f"after which an opening{unit} counts as a second press"
     )
     safe = least if least > 0 else nominal
-    if safe > 0:
+    if 0 < safe < np.inf:
         fit = (
             f"fit a `{button.name}` with `bounce: {plain(two_digits(safe * (1 - 1e-9), up=False))}s` at most"
         )
