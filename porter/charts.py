@@ -47,7 +47,9 @@ def run_trace(
     nodes = _shown_nodes(circuit, engine)
     times = _sample_times([at for at, _ in steps], end_s)
     run = simulate(circuit, steps, end_s, start=start, output=output, nodes=nodes, times=times, engine=engine)
-    waves = tuple(Wave(n, tuple(times.tolist()), tuple(v.tolist())) for n, v in zip(nodes, run.volts, strict=True))
+    waves = tuple(
+        Wave(n, tuple(times.tolist()), tuple(v.tolist())) for n, v in zip(nodes, run.volts, strict=True)
+    )
     return Trace(
         title=title,
         end_s=end_s,
@@ -170,13 +172,18 @@ def _memory_traces(circuit: Circuit, behaviour: Behaviour, port: Port, engine: E
             continue
         press, hold = (button.name,), 0.6 * pace
         schedule = [
-            (0.0, ()), (0.2 * pace, press), (0.2 * pace + 0.08 * pace, ()), (1.6 * pace, press), (1.6 * pace + hold, ()),
-            (3.6 * pace, press), (3.6 * pace + 0.08 * pace, ()),
+            (0.0, ()),
+            (0.2 * pace, press),
+            (0.2 * pace + 0.08 * pace, ()),
+            (1.6 * pace, press),
+            (1.6 * pace + hold, ()),
+            (3.6 * pace, press),
+            (3.6 * pace + 0.08 * pace, ()),
         ]
         title = f"{button.name}: a tap, a hold and release, another tap"
-        yield run_trace(circuit, port, schedule, 4.8 * pace, title, start="settled", output=begin, engine=engine)
-
-
+        yield run_trace(
+            circuit, port, schedule, 4.8 * pace, title, start="settled", output=begin, engine=engine
+        )
 
 
 def _together(circuit: Circuit, behaviour: Behaviour, port: Port, engine: Engine) -> Iterator[Trace]:
@@ -186,9 +193,19 @@ def _together(circuit: Circuit, behaviour: Behaviour, port: Port, engine: Engine
     for first, second in permutations(names[:3], 2):
         for gone in (first, second):
             left = second if gone == first else first
-            schedule = [(0.0, ()), (0.3 * pace, (first,)), (0.8 * pace, (first, second)), (1.5 * pace, (left,)), (2.1 * pace, ())]
+            schedule = [
+                (0.0, ()),
+                (0.3 * pace, (first,)),
+                (0.8 * pace, (first, second)),
+                (1.5 * pace, (left,)),
+                (2.1 * pace, ()),
+            ]
             title = f"{first}, then {second} as well; {gone} is let go first"
-            yield _no_waves(run_trace(circuit, port, schedule, 2.8 * pace, title, start="settled", output="low", engine=engine))
+            yield _no_waves(
+                run_trace(
+                    circuit, port, schedule, 2.8 * pace, title, start="settled", output="low", engine=engine
+                )
+            )
 
 
 def _no_waves(trace: Trace) -> Trace:

@@ -52,9 +52,7 @@ def quantities(measures: Measures) -> Floats:
     return np.column_stack([np.nan_to_num(np.asarray(p, float), posinf=1e30, neginf=-1e30) for p in parts])
 
 
-def population(
-    circuit: Circuit, cols: Columns, published: bool, keys: tuple[MarginKey, ...]
-) -> Population:
+def population(circuit: Circuit, cols: Columns, published: bool, keys: tuple[MarginKey, ...]) -> Population:
     """Measure the units that stand for all those the drawing allows.
 
     Args:
@@ -91,7 +89,23 @@ def _in_chunks(circuit: Circuit, cols: Columns, rows: Floats, keys: tuple[Margin
         return pieces[0]
 
     def join(name: str) -> dict:  # type: ignore[type-arg]
-        return {key: np.concatenate([getattr(p, name)[key] for p in pieces]) for key in getattr(pieces[0], name)}
+        return {
+            key: np.concatenate([getattr(p, name)[key] for p in pieces]) for key in getattr(pieces[0], name)
+        }
 
     rests = [np.concatenate([p.rests[q] for p in pieces]) for q in (0, 1)]
     return Measures(rests, join("held"), join("period_s"), join("windows"), join("margins"))
+
+
+def units_at_the_ends(groups: tuple[Population, ...]) -> Floats:
+    """Return the units that stand for the family: the nominal one, and those with the least and the most
+    of every window and margin, shape (U, P)."""
+    picked = [groups[0].rows[:1]]
+    for group in groups:
+        for values in (*group.measures.windows.values(), *group.measures.margins.values()):
+            finite = np.isfinite(values)
+            if finite.any() and values[finite].max() > values[finite].min():
+                at = np.flatnonzero(finite)
+                ends = {int(at[values[finite].argmin()]), int(at[values[finite].argmax()])}
+                picked.append(group.rows[sorted(ends)])
+    return np.unique(np.concatenate(picked), axis=0)

@@ -6,7 +6,7 @@ from itertools import combinations, permutations
 
 import numpy as np
 
-from porter.behaviour.corner import Population, population
+from porter.behaviour.corner import Population, population, units_at_the_ends
 from porter.behaviour.explain import margin_why, window_why
 from porter.behaviour.measure import OSCILLATES, Measures, measure, release_in_order, works
 from porter.behaviour.model import (
@@ -64,10 +64,17 @@ def derive(circuit: Circuit) -> Behaviour:
         levels=tuple(_levels(circuit, engine)),
         findings=(),
         notes=tuple(_notes(circuit, engine, drawn, published)),
+        extra={"units": units_at_the_ends((drawn, published)), "slowest_s": _slowest(engine)},
     )
     evidence = Evidence(circuit, engine, nominal, drawn, published, base)
     findings = tuple(sorted(find(evidence), key=lambda f: (f.position, f.rule, f.message)))
     return dataclasses.replace(base, findings=findings, verdict=_verdict(findings, nominal, drawn, published))
+
+
+def _slowest(engine: Engine) -> float:
+    """The longest time constant met so far, seconds, 0 where nothing decays."""
+    rates = [float(r) for mode in engine.modes for r in mode.rate[0] if r > 1e-9]
+    return 1.0 / min(rates) if rates else 0.0
 
 
 def _names(circuit: Circuit, mask: int) -> tuple[str, ...]:
@@ -80,7 +87,9 @@ def _held_rows(circuit: Circuit, nominal: Measures) -> Iterator[HeldRow]:
             continue
         period = float(nominal.period_s[q, mask][0])
         oscillates = output[0] == OSCILLATES and period > 0
-        yield HeldRow(_names(circuit, mask), _LEVELS[q], _OUTPUTS[int(output[0])], period if oscillates else None)
+        yield HeldRow(
+            _names(circuit, mask), _LEVELS[q], _OUTPUTS[int(output[0])], period if oscillates else None
+        )
 
 
 def held_output(nominal: Measures, mask: int) -> Settled:
@@ -158,7 +167,11 @@ def _power_why(engine: Engine, at_once: list[int], output: int) -> str:
     lanes = engine.empty(1 - output)
     lanes.q[:] = 1 - output
     f = engine.guards(lanes)[0]
-    pins = [name for name, on in zip(("trigger", "threshold", "reset"), (f[0] < 0, f[1] > 0, f[2] < 0), strict=True) if on]
+    pins = [
+        name
+        for name, on in zip(("trigger", "threshold", "reset"), (f[0] < 0, f[1] > 0, f[2] < 0), strict=True)
+        if on
+    ]
     if at_once == [output, output] and pins:
         return f"the {' and the '.join(pins)} input forces it the instant the supply is there"
     return "an input forces it while the capacitors charge"
@@ -226,16 +239,24 @@ def _levels(circuit: Circuit, engine: Engine) -> Iterator[NamedLevel]:
 
 def _notes(circuit: Circuit, engine: Engine, drawn: Population, published: Population) -> Iterator[str]:
     for name, group in (("part tolerances", drawn), ("part tolerances and published figures", published)):
-        how = "every corner" if group.exhaustive else "the corners that each result's own slopes point to, and a fixed draw of others"
+        how = (
+            "every corner"
+            if group.exhaustive
+            else "the corners that each result's own slopes point to, and a fixed draw of others"
+        )
         yield f"{name}: {len(group.moving)} values move something; {how}, {len(group.rows)} units"
     if engine.topo.states > 1:
         yield "more than one capacitor: the corners are the rule here, not a proof of the extremes"
 
 
-def _verdict(findings: Sequence[Finding], nominal: Measures, drawn: Population, published: Population) -> Verdict:
+def _verdict(
+    findings: Sequence[Finding], nominal: Measures, drawn: Population, published: Population
+) -> Verdict:
     if any(f.severity == "error" for f in findings):
         return "faulty"
     for group in (drawn, published):
-        if not works(group.measures, nominal).all() or any(m.min() < 0 for m in group.measures.margins.values()):
+        if not works(group.measures, nominal).all() or any(
+            m.min() < 0 for m in group.measures.margins.values()
+        ):
             return "typical-only"
     return "sound"

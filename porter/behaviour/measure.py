@@ -158,7 +158,9 @@ def _settling(engine: Engine, lanes: Lanes) -> float:
     return 60.0 / slowest
 
 
-def _windows(engine: Engine, button: int, rests: list[Lanes], ok: list[Mask]) -> Iterator[tuple[WindowKey, Floats]]:
+def _windows(
+    engine: Engine, button: int, rests: list[Lanes], ok: list[Mask]
+) -> Iterator[tuple[WindowKey, Floats]]:
     mask = 1 << button
     for q in (0, 1):
         yield (button, q, "shortest-press"), _shortest(engine, rests[q], ok[q], mask)
@@ -256,7 +258,9 @@ def _instant_gap(engine: Engine, lanes: Lanes, settled: Lanes, mask: int) -> Flo
     return found
 
 
-def _joint_crossing(engine: Engine, open_: Mode, pressed: Mode, unit: Ints, z0: Floats, length: Floats) -> Floats:
+def _joint_crossing(
+    engine: Engine, open_: Mode, pressed: Mode, unit: Ints, z0: Floats, length: Floats
+) -> Floats:
     """When the pressed mode's decision would turn, along the open mode's flow from z0."""
     rate = open_.rate[unit]
     pull = open_.drive[unit] - rate * z0
@@ -300,7 +304,9 @@ def _wanted(
             f = engine.guards(lanes.take(np.array([0])))[0]
             for pin, side in _holding(int(lanes.q[0]), f):
                 if _connected(engine, pin):
-                    same = any(k[:2] == (mask, int(lanes.q[0])) and k[2].startswith(f"{pin} {side}") for k in keys)
+                    same = any(
+                        k[:2] == (mask, int(lanes.q[0])) and k[2].startswith(f"{pin} {side}") for k in keys
+                    )
                     if not same:
                         keys[mask, int(lanes.q[0]), f"{pin} {side}{start}"] = None
     for i in range(len(engine.circuit.buttons)):

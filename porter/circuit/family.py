@@ -90,7 +90,9 @@ BIPOLAR = Family(
         # Two junctions at light load (typical curves, from memory); with the slope below it meets
         # the published 1.7 V typical and 2.25 V most at 100 mA.
         "high_drop": _flat(1.1, 1.3, 1.6, "light-load drop, from memory; " + _BIP + " at 100 mA"),
-        "high_resistance": _flat(2.0, 4.0, 6.5, "derived: (1.7 - 1.3) V and (2.25 - 1.6) V at 100 mA; " + _BIP),
+        "high_resistance": _flat(
+            2.0, 4.0, 6.5, "derived: (1.7 - 1.3) V and (2.25 - 1.6) V at 100 mA; " + _BIP
+        ),
         # Straight lines through the published VOL pairs: 5 and 8 mA at 5 V, 10 and 50 mA at 15 V.
         "low_level": (
             Point(5.0, 0.0, 0.1 - 5 * 0.05 / 3, 0.35 - 5 * 0.05 / 3, "derived from " + _BIP),
@@ -102,8 +104,12 @@ BIPOLAR = Family(
         ),
         "divider": _flat(4e3, 5e3, 6e3, "5 kohm in published block diagrams; ±20 % assumed"),
         "discharge_resistance": (
-            Point(5.0, 8.9, 0.08 / 4.5e-3, 0.2 / 4.5e-3, "ST Doc 2182: 80/200 mV at 4.5 mA; least assumed half"),
-            Point(15.0, 6.0, 0.18 / 15e-3, 0.48 / 15e-3, "ST Doc 2182: 180/480 mV at 15 mA; least assumed half"),
+            Point(
+                5.0, 8.9, 0.08 / 4.5e-3, 0.2 / 4.5e-3, "ST Doc 2182: 80/200 mV at 4.5 mA; least assumed half"
+            ),
+            Point(
+                15.0, 6.0, 0.18 / 15e-3, 0.48 / 15e-3, "ST Doc 2182: 180/480 mV at 15 mA; least assumed half"
+            ),
         ),
         "shortest_pulse": _flat(0.1e-6, 0.3e-6, 0.5e-6, "reset pulse of the class, from memory"),
     },
@@ -127,14 +133,22 @@ CMOS = Family(
         ),
         "reset_level": _flat(0.4, 1.1, 1.5, _TLC5),
         "trigger_current": _flat(0.0, 10e-12, 150e-12, _TLC5 + "; most at the industrial temperature limit"),
-        "threshold_current": _flat(0.0, 10e-12, 150e-12, _TLC5 + "; most at the industrial temperature limit"),
+        "threshold_current": _flat(
+            0.0, 10e-12, 150e-12, _TLC5 + "; most at the industrial temperature limit"
+        ),
         "reset_current": _flat(0.0, 10e-12, 150e-12, _TLC5 + "; most at the industrial temperature limit"),
-        "reset_high_current": _flat(0.0, 10e-12, 150e-12, _TLC5 + "; most at the industrial temperature limit"),
+        "reset_high_current": _flat(
+            0.0, 10e-12, 150e-12, _TLC5 + "; most at the industrial temperature limit"
+        ),
         "high_drop": _flat(0.0, 0.0, 0.0, "resistive to the rail"),
         "high_resistance": (
-            Point(2.0, 167.0, 0.1 / 0.3e-3, 0.5 / 0.3e-3, _TLC2 + ": 1.9/1.5 V at 0.3 mA; least assumed half"),
+            Point(
+                2.0, 167.0, 0.1 / 0.3e-3, 0.5 / 0.3e-3, _TLC2 + ": 1.9/1.5 V at 0.3 mA; least assumed half"
+            ),
             Point(5.0, 100.0, 200.0, 900.0, "derived: 4.8/4.1 V at 1 mA; " + _TLC5 + "; least assumed half"),
-            Point(15.0, 40.0, 80.0, 250.0, "derived: 14.2/12.5 V at 10 mA; " + _TLC15 + "; least assumed half"),
+            Point(
+                15.0, 40.0, 80.0, 250.0, "derived: 14.2/12.5 V at 10 mA; " + _TLC15 + "; least assumed half"
+            ),
         ),
         "low_level": _flat(0.0, 0.0, 0.0, "resistive to the rail"),
         "low_resistance": (
@@ -147,7 +161,9 @@ CMOS = Family(
             Point(5.0, 7.0, 14.0, 50.0, _TLC5 + " at 10 mA; least assumed half"),
             Point(15.0, 3.85, 7.7, 17.0, _TLC15 + " at 100 mA; least assumed half"),
         ),
-        "shortest_pulse": _flat(0.1e-6, 0.2e-6, 0.35e-6, "ST TS555: minimum reset pulse 350 ns; rest assumed"),
+        "shortest_pulse": _flat(
+            0.1e-6, 0.2e-6, 0.35e-6, "ST TS555: minimum reset pulse 350 ns; rest assumed"
+        ),
     },
 )
 
@@ -159,7 +175,8 @@ def figure(family: Family, key: str, supply_v: float) -> Spread:
     points = family.figures[key]
     at = [p.supply_v for p in points]
     least, typical, most = (
-        float(np.interp(supply_v, at, [getattr(p, side) for p in points])) for side in ("least", "typical", "most")
+        float(np.interp(supply_v, at, [getattr(p, side) for p in points]))
+        for side in ("least", "typical", "most")
     )
     return Spread(typical, least, most)
 

@@ -48,7 +48,9 @@ def first_fall(f0: Floats, d: Floats, rate: Floats, until: Floats) -> Floats:
     return _by_terms(t, rows, f0, d, rate, until)
 
 
-def _by_terms(t: Floats, rows: NDArray[np.int64], f0: Floats, d: Floats, rate: Floats, until: Floats) -> Floats:
+def _by_terms(
+    t: Floats, rows: NDArray[np.int64], f0: Floats, d: Floats, rate: Floats, until: Floats
+) -> Floats:
     """Fill in the rows that may fall: in closed form where a single term counts at all."""
     f0, d, rate, until = f0[rows], d[rows], rate[rows], until[rows]
     with np.errstate(divide="ignore", invalid="ignore"):  # a term of nothing for ever is nothing
@@ -57,7 +59,9 @@ def _by_terms(t: Floats, rows: NDArray[np.int64], f0: Floats, d: Floats, rate: F
     single = counts.sum(axis=1) == 1
     only = counts[single].argmax(axis=1)[:, None]
     one = _one_term(
-        f0[single], np.take_along_axis(d[single], only, 1)[:, 0], np.take_along_axis(rate[single], only, 1)[:, 0]
+        f0[single],
+        np.take_along_axis(d[single], only, 1)[:, 0],
+        np.take_along_axis(rate[single], only, 1)[:, 0],
     )
     t[rows[single]] = np.where(one <= until[single], one, np.inf)
     many = ~single
@@ -159,7 +163,11 @@ def _polish(f, a: Floats, b: Floats) -> Floats:  # type: ignore[no-untyped-def]
             xi, phi = (x1 - x2) / (x3 - x2), (f1 - f2) / (f3 - f2)
             bend = (phi * phi < xi) & ((1 - phi) ** 2 < 1 - xi)
             step = f1 / (f2 - f1) * f3 / (f2 - f3) + (x3 - x1) / (x2 - x1) * f1 / (f3 - f1) * f2 / (f3 - f2)
-            t = np.clip(np.where(bend & np.isfinite(step), step, 0.5), np.minimum(small, 0.5), 1 - np.minimum(small, 0.5))
+            t = np.clip(
+                np.where(bend & np.isfinite(step), step, 0.5),
+                np.minimum(small, 0.5),
+                1 - np.minimum(small, 0.5),
+            )
             t = np.where(np.isfinite(t), t, 0.5)
     return np.where(np.abs(f1) < np.abs(f2), x1, x2)
 

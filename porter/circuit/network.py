@@ -161,16 +161,21 @@ class Mode:
     drifts: bool  # a charge is held that nothing drains
 
 
-def topology(circuit: Circuit, cols: Columns) -> Topology:
-    """Lay out a circuit's network."""
-    return _Layout(circuit, cols).topology()
+def topology(circuit: Circuit, cols: Columns, rail: Getter | None = None) -> Topology:
+    """Lay out a circuit's network.
+
+    Args:
+        rail: voltage of the supply rail where that isn't the supply of the spec.
+    """
+    return _Layout(circuit, cols, rail).topology()
 
 
 class _Layout:
     """Collects branches, sources and capacitors while walking over the circuit."""
 
-    def __init__(self, circuit: Circuit, cols: Columns) -> None:
+    def __init__(self, circuit: Circuit, cols: Columns, rail: Getter | None) -> None:
         self.circuit, self.cols = circuit, cols
+        self.rail = rail or self.value("supply")
         names = [*circuit.nodes]
         names += [n for n in circuit.timer.pins.values() if n not in names and n not in RAILS]
         self.nodes = tuple(names)
@@ -219,7 +224,7 @@ class _Layout:
             caps=tuple(self.caps),
             state_names=names,
             ways=self.ways,
-            supply=self.value("supply"),
+            supply=self.rail,
         )
 
     def _resistor(self, part: Part, a: int, b: int) -> None:
@@ -238,7 +243,9 @@ class _Layout:
         self.injects.append(Inject(a, b, self.value(f"parts.{part.name}"), part.name))
         # A real load stops drawing when its voltage is gone: the return path keeps the
         # ideal current from pulling its node past the other rail.
-        self.branches.append(Branch(b, a, lambda rows: np.full(len(rows), 0.1), way=self.way(), name=part.name))
+        self.branches.append(
+            Branch(b, a, lambda rows: np.full(len(rows), 0.1), way=self.way(), name=part.name)
+        )
 
     def _capacitor(self, part: Part, a: int, b: int) -> None:
         self.caps.append((a, b, self.value(f"parts.{part.name}"), part.name))
@@ -278,7 +285,10 @@ class _Layout:
             self.branches.append(Branch(pin, GND, ohm, q=0, name="discharge"))
 
     def _input_currents(self) -> None:
-        for pin, key, into in (("trigger", "trigger_current", False), ("threshold", "threshold_current", True)):
+        for pin, key, into in (
+            ("trigger", "trigger_current", False),
+            ("threshold", "threshold_current", True),
+        ):
             node = self.pin(pin)
             if node is not None and node >= 0:
                 ends = (node, GND) if into else (VCC, node)
@@ -299,7 +309,7 @@ class _Layout:
         self.branches.append(Branch(control, GND, lambda r: 3 * each(r) * ratio(r), name="divider"))
 
     def _comparators(self) -> tuple[Comparator, ...]:
-        supply, trigger, threshold = self.value("supply"), self.figure("trigger_ratio"), self.figure("threshold_ratio")
+        supply, trigger, threshold = self.rail, self.figure("trigger_ratio"), self.figure("threshold_ratio")
         control = self.pin("control")
         zero: Getter = lambda rows: np.zeros(len(rows))  # noqa: E731
         if control is None:

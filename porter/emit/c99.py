@@ -188,10 +188,13 @@ class Core:
             tests = [self._settled(f) for f in filters]
             return [*opened, "", f"return {' && '.join(tests)};"]
         same = " && ".join(f"(next.{cell.name} == m->{cell.name})" for cell in parts.cells)
-        trial = [f"{self.name}_t next = *m;"]
+        # Member by member: SDCC has no struct assignment, and gcc may call memcpy for it.
+        copied = [f"next.{cell.name} = m->{cell.name};" for cell in parts.cells]
+        trial = f"{self.name}_t next;"
         if parts.recorded:
             opened = [line for line in opened if " was = " in line]
-            return [*trial, *opened, "", f"(void){self.name}_step(&next, was);", f"return {same};"]
+            asked = [*copied, f"(void){self.name}_step(&next, was);", f"return {same};"]
+            return [trial, *opened, "", *asked]
         opened = [line for line in opened if " n_" in line]
         guess = [
             line
@@ -199,11 +202,12 @@ class Core:
             for line in branch(self._ask_down(f.button)[0], [f"was |= {self.buttons[f.button]};"], [], SYNTAX)
         ]
         return [
-            *trial,
+            trial,
             *opened,
             "uint8_t was = 0u;",
             "",
             *guess,
+            *copied,
             f"(void){self.name}_step(&next, was);",
             f"return {same};",
         ]

@@ -55,8 +55,9 @@ def walk_plain(mem: Memory, port: Port) -> Walk:
             front.insert(0, (State(after.q[picked], after.regs[picked]), truth[picked], more))
     said = (
         f"port and circuit together have {len(seen)} reachable states; all were visited with every held combination",
-        "they decide differently in some of them" if differs else
-        "their outputs are equal at every tick of every input sequence of any length: proved, with no exception",
+        "they decide differently in some of them"
+        if differs
+        else "their outputs are equal at every tick of every input sequence of any length: proved, with no exception",
     )
     closure = Closure(len(seen), steps, 0, None, True, differs, said)
     return Walk(closure, 0.0, {}, wrong)
@@ -161,7 +162,9 @@ class _Cells:
             ]
             self.distance[h] = np.stack([self._times(mem, q, h, ends[0]) for q in (0, 1)])
             for q in (0, 1):
-                moved = [mem.copies(circuit_moves(mem, q, h, end[:, None], port.tick_s).x)[:, 0] for end in ends]
+                moved = [
+                    mem.copies(circuit_moves(mem, q, h, end[:, None], port.tick_s).x)[:, 0] for end in ends
+                ]
                 least = np.floor(np.minimum(*moved) / self.width - 1e-9).astype(np.int64)
                 most = np.floor(np.maximum(*moved) / self.width + 1e-9).astype(np.int64)
                 self._moves[q, h] = np.clip(least, 0, _CELLS - 1), np.clip(most, 0, _CELLS - 1)
@@ -181,7 +184,9 @@ class _Cells:
         edges = copies[turns + 1]
         mode = settled_mode(mem.engine, q, 0, mem.volts(np.array([[U16 / 2]]))[0])
         rate = float(mode.rate[0].max())
-        end = float(mem.copies((mode.S[0] @ (mode.drive[0] / np.maximum(mode.rate[0], 1e-12)))[None, :])[0, 0])
+        end = float(
+            mem.copies((mode.S[0] @ (mode.drive[0] / np.maximum(mode.rate[0], 1e-12)))[None, :])[0, 0]
+        )
         with np.errstate(divide="ignore", invalid="ignore"):
             gaps = np.abs(np.log(np.abs((copies[:, None] - end) / (edges[None, :] - end)))) / rate
         return np.asarray(np.nan_to_num(gaps, nan=np.inf).min(axis=1) + self.width / U16 / rate)
@@ -222,11 +227,21 @@ def walk_many(mem: Memory, port: Port) -> Walk:
         grey, wrong = grey + int(near.sum()), wrong + int(bad.sum())
     volts = float(norm.worst_volts(bound))
     steps = len(grid) * len(pairs)
-    closure = Closure(len(grid) * 2, steps, grey, volts if holds else None, False, wrong, tuple(_said_many(len(grid), bound, volts, holds, late_seen, grey, wrong)))
+    closure = Closure(
+        len(grid) * 2,
+        steps,
+        grey,
+        volts if holds else None,
+        False,
+        wrong,
+        tuple(_said_many(len(grid), bound, volts, holds, late_seen, grey, wrong)),
+    )
     return Walk(closure, volts / float(mem.scale_v.max()), {}, None)
 
 
-def _said_many(points: int, bound: float, volts: float, holds: bool, late: bool, grey: int, wrong: int) -> list[str]:
+def _said_many(
+    points: int, bound: float, volts: float, holds: bool, late: bool, grey: int, wrong: int
+) -> list[str]:
     said = []
     if holds:
         said.append(
@@ -234,7 +249,9 @@ def _said_many(points: int, bound: float, volts: float, holds: bool, late: bool,
             "from its voltage, for every input sequence of any length"
         )
     if late:
-        said.append("flips inside a tick change how the capacitors move, which the bound does not cover: it holds between such flips")
+        said.append(
+            "flips inside a tick change how the capacitors move, which the bound does not cover: it holds between such flips"
+        )
     said.append(
         f"decisions were compared on a grid of {points:,} states in every latch state and held combination: "
         f"{wrong:,} differ, {grey:,} are grey; the grid samples the states, it doesn't exhaust them"

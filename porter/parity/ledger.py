@@ -38,7 +38,9 @@ def ledger(circuit: Circuit, behaviour: Behaviour, port: Port, mem: Memory) -> t
     rows = []
     for seen in _rows(circuit, behaviour, port, mem):
         taken = accepted.get(seen.row)
-        because = taken.because if taken is not None and seen.verdict == "differs" and _still(taken, seen) else None
+        because = (
+            taken.because if taken is not None and seen.verdict == "differs" and _still(taken, seen) else None
+        )
         rows.append(LedgerRow(seen.row, seen.circuit, seen.port, seen.verdict, because))
     return tuple(rows)
 
@@ -67,9 +69,7 @@ def _resting_copies(mem: Memory, port: Port) -> tuple[tuple[int, ...], tuple[int
     empty = mem.engine.empty(0).x[0]
     high = frozen_rest(mem.engine, 1, 0, empty)
     rests = (frozen_rest(mem.engine, 0, 0, high), high)
-    low, top = (
-        tuple(int(v) for v in np.clip(np.rint(mem.copies(x[None, :])[0]), 0, U16)) for x in rests
-    )
+    low, top = (tuple(int(v) for v in np.clip(np.rint(mem.copies(x[None, :])[0]), 0, U16)) for x in rests)
     return low, top
 
 
@@ -107,7 +107,12 @@ def _priority(circuit: Circuit, behaviour: Behaviour, port: Port, on: Bench) -> 
         same.append(row.output in seen if len(seen) == 1 else row.output == "keeps")
     said = "; ".join(f"{_and(r.held)}: {r.winner or 'neither'}" for r in behaviour.priority[:3])
     seen_row = _agree("priority", same, "combinations", [_and(r.held) for r in behaviour.priority])
-    return Seen("priority", f"{behaviour.dominance + ', ' if behaviour.dominance else ''}{said}", seen_row.port, seen_row.verdict)
+    return Seen(
+        "priority",
+        f"{behaviour.dominance + ', ' if behaviour.dominance else ''}{said}",
+        seen_row.port,
+        seen_row.verdict,
+    )
 
 
 def _releases(circuit: Circuit, behaviour: Behaviour, port: Port, on: Bench, engine: Engine) -> Seen:
@@ -205,7 +210,9 @@ def _window_row(circuit: Circuit, behaviour: Behaviour, port: Port, on: Bench, k
             if window.seconds.nominal is None and seconds is None:
                 continue
             said.append(f"{button.name} from {level} {_band_text(window.guaranteed)}")
-            ports.append(f"{button.name} from {level} {time_text(seconds)}, clock ±{circuit.port.clock * 100:.3g} %")
+            ports.append(
+                f"{button.name} from {level} {time_text(seconds)}, clock ±{circuit.port.clock * 100:.3g} %"
+            )
             wrong |= not inside(window.guaranteed, seconds, circuit.port.clock, port.tick_s)
     if not said:
         return Seen(kind, "none: no button waits", "none", "same")
@@ -233,7 +240,13 @@ def _chatter(circuit: Circuit, port: Port, engine: Engine) -> Seen:
         theirs.append(_port_edges(port, i))
     worst = max(ours, default=0)
     most = max(theirs, default=0)
-    verdict: RowVerdict = "same" if ours == theirs else "tighter" if all(t <= o for t, o in zip(theirs, ours, strict=True)) else "differs"
+    verdict: RowVerdict = (
+        "same"
+        if ours == theirs
+        else "tighter"
+        if all(t <= o for t, o in zip(theirs, ours, strict=True))
+        else "differs"
+    )
     return Seen("output-chatter", f"{worst} edges for a press that bounces", f"{most} edges", verdict)
 
 

@@ -50,7 +50,9 @@ def enumerate_all(circuit: Circuit, behaviour: Behaviour, port: Port, mem: Memor
 def strides(behaviour: Behaviour, port: Port, mem: Memory) -> tuple[int, ...]:
     """Choose how long a symbol lasts: a tick, shares of the memory's time constant, each window short and long."""
     found = {1}
-    slowest = [1 / rate for mode in mem.engine.modes for rate in mode.rate[0] if rate > 1e-9] if mem.kept else []
+    slowest = (
+        [1 / rate for mode in mem.engine.modes for rate in mode.rate[0] if rate > 1e-9] if mem.kept else []
+    )
     for factor in (0.4, 1.3) if slowest else ():
         found.add(int(np.clip(round(max(slowest) * factor / port.tick_s), 1, _LONGEST)))
     for window in behaviour.windows:
@@ -70,7 +72,13 @@ class _Count:
 
 
 def _walk(
-    circuit: Circuit, engine: Engine, port: Port, depth: int, stride: int, bound: float, edges: dict[tuple[int, int], Floats]
+    circuit: Circuit,
+    engine: Engine,
+    port: Port,
+    depth: int,
+    stride: int,
+    bound: float,
+    edges: dict[tuple[int, int], Floats],
 ) -> _Count:
     masks = port.held_count
     twin = Twin.powered(circuit, port, engine)

@@ -40,7 +40,9 @@ class Twin:
         """Return twins just powered on, the circuit's latch where the port starts."""
         engine = engine or Engine(circuit)
         zeros = np.zeros(lanes, np.int64)
-        return Twin(engine, port, engine.empty(port.start_q, zeros), start(port, lanes), np.zeros(lanes, bool))
+        return Twin(
+            engine, port, engine.empty(port.start_q, zeros), start(port, lanes), np.zeros(lanes, bool)
+        )
 
     def tick(self, held: Ints) -> tuple[Ints, Ints]:
         """Give all the held masks of one tick; returns both latches right after the boundary's decision."""
@@ -94,7 +96,9 @@ def circuit_decides(mem: Memory, q: Ints | int, held: Ints | int, copies: Floats
     return lanes
 
 
-def circuit_moves(mem: Memory, q: Ints | int, held: Ints | int, copies: Floats | Ints, tick_s: float) -> Lanes:
+def circuit_moves(
+    mem: Memory, q: Ints | int, held: Ints | int, copies: Floats | Ints, tick_s: float
+) -> Lanes:
     """Return circuits one tick after their decision at q."""
     lanes = mem.lanes(q, held, copies)
     mem.engine.run(lanes, tick_s)

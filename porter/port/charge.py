@@ -30,7 +30,13 @@ def plan_charge(circuit: Circuit, mem: Memory, tick_s: float) -> tuple[Charge, l
     names = tuple(mem.engine.topo.state_names[k] for k in mem.kept)
     machine = Charge(names, tuple(mem.low_v.tolist()), tuple(mem.scale_v.tolist()), start, (rows[0], rows[1]))
     constants = [
-        origin.constant(f"start.{k}", value, f"{names[k]} at power-on, capacitors empty", f"{mem.low_v[k] + value * mem.scale_v[k]:.6g} V", ())
+        origin.constant(
+            f"start.{k}",
+            value,
+            f"{names[k]} at power-on, capacitors empty",
+            f"{mem.low_v[k] + value * mem.scale_v[k]:.6g} V",
+            (),
+        )
         for k, value in enumerate(start)
     ]
     return machine, constants + planner.constants, _said(mem)
@@ -41,7 +47,9 @@ def _said(mem: Memory) -> list[str]:
     left = [n for k, n in enumerate(mem.engine.topo.state_names) if k not in mem.kept]
     said = [f"carries a 16-bit copy of the voltage at {', '.join(names)}"] if names else []
     if left:
-        said.append(f"leaves out the charge at {', '.join(left)}: no decision depends on it once the supply is up")
+        said.append(
+            f"leaves out the charge at {', '.join(left)}: no decision depends on it once the supply is up"
+        )
     return said
 
 
@@ -103,7 +111,9 @@ class _Planner:
         rate = -A[k, k]
         return float(rate), float(pull / rate) if rate > 1e-12 else float("nan")
 
-    def _round_move(self, q: int, held: int, at: int, rate: float, end: float, end_v: float, only: str) -> Move:
+    def _round_move(
+        self, q: int, held: int, at: int, rate: float, end: float, end_v: float, only: str
+    ) -> Move:
         share = -np.expm1(-rate * self.tick_s)
         step = round(65536 * share)
         if step <= 0 or not np.isfinite(end):
@@ -123,7 +133,9 @@ class _Planner:
         ends = (ends_v - self.mem.low_v) / self.mem.scale_v
         return tuple(self._plane_move(q, held, k, keep, ends, ends_v, mode) for k in range(len(ends)))
 
-    def _plane_move(self, q: int, held: int, k: int, keep: Floats, ends: Floats, ends_v: Floats, mode: Mode) -> Move:
+    def _plane_move(
+        self, q: int, held: int, k: int, keep: Floats, ends: Floats, ends_v: Floats, mode: Mode
+    ) -> Move:
         alone = np.abs(np.delete(keep[k], k)).max(initial=0.0) * 65536 < 0.5
         if alone:
             rate, end_v = self._own(mode, self.mem.kept[k])
@@ -157,7 +169,9 @@ def _pieces(mem: Memory, q: int, held: int, points: int = 513) -> list[tuple[int
     mem.engine.resolve(lanes, frozen=True)
     turns = np.flatnonzero(np.diff(lanes.conducts)) + 1
     cuts = [0, *turns.tolist(), points - 1]
-    return [(int(lanes.conducts[a]), float(X[a, 0]), float(X[b, 0])) for a, b in zip(cuts, cuts[1:], strict=False)]
+    return [
+        (int(lanes.conducts[a]), float(X[a, 0]), float(X[b, 0])) for a, b in zip(cuts, cuts[1:], strict=False)
+    ]
 
 
 def _one_way(
@@ -184,7 +198,9 @@ def flips_at(mem: Memory, q: int, held: int, copies: NDArray[np.integer]) -> NDA
     return np.asarray(lanes.q != q)
 
 
-def _line_tests(mem: Memory, q: int, held: int) -> tuple[tuple[Test, ...], tuple[Test, ...], tuple[Test, ...]]:
+def _line_tests(
+    mem: Memory, q: int, held: int
+) -> tuple[tuple[Test, ...], tuple[Test, ...], tuple[Test, ...]]:
     """Find where along the copy's range the latch flips: force, flips, blocks."""
     spans = list(_flip_spans(mem, q, held))
     if not spans:
@@ -221,7 +237,9 @@ def _edge(mem: Memory, q: int, held: int, a: int, b: int, first: bool) -> int:
     return int(inside[np.argmax(flips_at(mem, q, held, inside[:, None]) != first)])
 
 
-def _plane_tests(mem: Memory, mode: Mode, q: int) -> tuple[tuple[Test, ...], tuple[Test, ...], tuple[Test, ...]]:
+def _plane_tests(
+    mem: Memory, mode: Mode, q: int
+) -> tuple[tuple[Test, ...], tuple[Test, ...], tuple[Test, ...]]:
     """Turn the comparators of a mode into integer half-spaces: force, flips, blocks."""
     trigger, threshold, reset = (_half_space(mem, mode, j) for j in range(3))
     if q == 0:

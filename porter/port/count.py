@@ -21,7 +21,9 @@ def toggles(behaviour: Behaviour) -> list[int]:
     return [
         i
         for i, name in enumerate(behaviour.buttons)
-        if all(_window(behaviour, name, level, "shortest-press").seconds.nominal is not None for level in _LEVELS)
+        if all(
+            _window(behaviour, name, level, "shortest-press").seconds.nominal is not None for level in _LEVELS
+        )
     ]
 
 
@@ -38,7 +40,9 @@ def fits_count(circuit: Circuit, behaviour: Behaviour, mem: Memory) -> tuple[boo
     if found:
         name = behaviour.buttons[found[0]]
         kinds = ("re-arm-after-tap", "re-arm-after-hold")
-        if any(_window(behaviour, name, lv, kind).seconds.nominal is None for lv in _LEVELS for kind in kinds):
+        if any(
+            _window(behaviour, name, lv, kind).seconds.nominal is None for lv in _LEVELS for kind in kinds
+        ):
             return False, f"{name} doesn't re-arm"
     return True, ""
 
@@ -57,7 +61,13 @@ def plan_count(
     toggle = _toggle(circuit, behaviour, found[0], tick_s, origin, constants) if found else None
     release = (1,) * len(circuit.buttons)
     machine = Count(table, live, press, release, toggle)
-    return machine, constants, ["the re-arm counter follows taps and holds; lengths between are on a straight line"] if found else []
+    return (
+        machine,
+        constants,
+        ["the re-arm counter follows taps and holds; lengths between are on a straight line"]
+        if found
+        else [],
+    )
 
 
 def _output(behaviour: Behaviour, names: tuple[str, ...], level: str) -> str:
@@ -68,7 +78,9 @@ def _names(circuit: Circuit, mask: int) -> tuple[str, ...]:
     return tuple(b.name for i, b in enumerate(circuit.buttons) if mask >> i & 1)
 
 
-def _table(circuit: Circuit, behaviour: Behaviour, toggle_bit: int) -> tuple[tuple[int, ...], tuple[int, ...]]:
+def _table(
+    circuit: Circuit, behaviour: Behaviour, toggle_bit: int
+) -> tuple[tuple[int, ...], tuple[int, ...]]:
     """The latch by level: the held table, in which a live toggle alone changes nothing."""
 
     def entry(q: int, mask: int) -> int:
@@ -114,7 +126,12 @@ def _press_ticks(
 
 
 def _toggle(
-    circuit: Circuit, behaviour: Behaviour, button: int, tick_s: float, origin: Origin, constants: list[Constant]
+    circuit: Circuit,
+    behaviour: Behaviour,
+    button: int,
+    tick_s: float,
+    origin: Origin,
+    constants: list[Constant],
 ) -> Toggle:
     name = behaviour.buttons[button]
     values: dict[str, list[int]] = {"tap": [], "hold": []}
@@ -137,8 +154,16 @@ def _toggle(
     for q in (0, 1):
         constants.append(
             origin.constant(
-                f"toggle.pace.{q}", pace[q], "re-arm ticks that a held tick takes off a tap's, output " + _LEVELS[q],
-                "a third of the way from tap to hold", (f"buttons.{name}",),
+                f"toggle.pace.{q}",
+                pace[q],
+                "re-arm ticks that a held tick takes off a tap's, output " + _LEVELS[q],
+                "a third of the way from tap to hold",
+                (f"buttons.{name}",),
             )
         )
-    return Toggle(button, (values["tap"][0], values["tap"][1]), (values["hold"][0], values["hold"][1]), (pace[0], pace[1]))
+    return Toggle(
+        button,
+        (values["tap"][0], values["tap"][1]),
+        (values["hold"][0], values["hold"][1]),
+        (pace[0], pace[1]),
+    )

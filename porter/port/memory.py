@@ -113,7 +113,8 @@ def _same_everywhere(modes: list[Mode], k: int, engine: Engine) -> bool:
     own = abs(first_A[k]) + 1e-12
     alone = all(np.abs(np.delete(A, k)).max(initial=0.0) <= _SMALL * own for A, _ in rows)
     return alone and all(
-        abs(A[k] - first_A[k]) <= _SMALL * own and abs(b - first_b) <= _SMALL * own * engine.supply[0] for A, b in rows
+        abs(A[k] - first_A[k]) <= _SMALL * own and abs(b - first_b) <= _SMALL * own * engine.supply[0]
+        for A, b in rows
     )
 
 

@@ -43,7 +43,9 @@ class Origin:
 
     def _held(self, q: int, held: int) -> str:
         names = [b.name for i, b in enumerate(self.circuit.buttons) if held >> i & 1]
-        return f"output {'high' if q else 'low'}, {' and '.join(names) + ' held' if names else 'no button held'}"
+        return (
+            f"output {'high' if q else 'low'}, {' and '.join(names) + ' held' if names else 'no button held'}"
+        )
 
     def _state(self, at: int) -> tuple[int, str]:
         k = self.mem.kept[at]
@@ -67,9 +69,7 @@ class Origin:
         k, name = self._state(at)
         A, _ = _dynamics(self._mode(q, held))
         share = -np.expm1(-rate * tick_s)
-        working = (
-            f"65536 * (1 - exp(-T/tau)) = 65536 * (1 - exp(-{tick_s * 1e3:g} ms / {1e3 / rate:.6g} ms)) = {65536 * share:.2f}"
-        )
+        working = f"65536 * (1 - exp(-T/tau)) = 65536 * (1 - exp(-{tick_s * 1e3:g} ms / {1e3 / rate:.6g} ms)) = {65536 * share:.2f}"
         meaning = f"65536ths of the way to its end that {name} goes in a tick; {self._held(q, held)}"
         return self.constant(key, value, meaning, working, self._moved_by(A[:, k, k]))
 
@@ -79,7 +79,9 @@ class Origin:
         mode = self._mode(q, held)
         phi = (mode.S * np.exp(-mode.rate * tick_s)[:, None, :]) @ mode.Sinv
         working = f"exp(A T)[{name}, {from_}] with T = {tick_s * 1e3:g} ms, in 65536ths"
-        meaning = f"65536ths of {from_}'s distance from its end that {name} has a tick later; {self._held(q, held)}"
+        meaning = (
+            f"65536ths of {from_}'s distance from its end that {name} has a tick later; {self._held(q, held)}"
+        )
         return self.constant(key, value, meaning, working, self._moved_by(phi[:, k, j]))
 
     def limit(self, key: str, test: Test, q: int, held: int) -> Constant:

@@ -106,9 +106,15 @@ def choose_tick(circuit: Circuit, behaviour: Behaviour) -> tuple[float, str]:
         return circuit.port.tick_s, f"tick {_ms(circuit.port.tick_s)}: fixed by the spec"
     spreads = [s for w in behaviour.windows if (s := _spread(w))]
     if not spreads:
-        return _PLAIN_S, f"tick {_ms(_PLAIN_S)}: no window has a length, so a pace that no hand can tell from at once"
+        return (
+            _PLAIN_S,
+            f"tick {_ms(_PLAIN_S)}: no window has a length, so a pace that no hand can tell from at once",
+        )
     tick = min(max(series_below(min(spreads) / 10), _FINEST_S), _COARSEST_S)
-    return tick, f"tick {_ms(tick)}: of the 1-2-5 series, within a tenth of the narrowest window spread ({_ms(min(spreads))})"
+    return (
+        tick,
+        f"tick {_ms(tick)}: of the 1-2-5 series, within a tenth of the narrowest window spread ({_ms(min(spreads))})",
+    )
 
 
 def _spread(window: Window) -> float:
@@ -147,7 +153,9 @@ def _start(circuit: Circuit, behaviour: Behaviour) -> tuple[int, str]:
         whose = "as the spec asks" if wish else "chosen here, since the spec says nothing"
         return int(chosen == "high"), f"starts {chosen}, {whose}: the circuit's own start is undetermined"
     if wish and wish != found.output:
-        return int(wish == "high"), f"starts {wish} as the spec asks, although the circuit starts {found.output}"
+        return int(
+            wish == "high"
+        ), f"starts {wish} as the spec asks, although the circuit starts {found.output}"
     return int(found.output == "high"), f"starts {found.output}, as the circuit does"
 
 

@@ -91,7 +91,9 @@ class _Tests:
         self.most = max(len(g) for g in groups)
         never = ((0,) * copies, 1)
         padded = [g + [never] * (self.most - len(g)) for g in groups]
-        self.coeff = np.array([[t[0] for t in g] for g in padded], np.int64).reshape(len(modes), self.most, copies)
+        self.coeff = np.array([[t[0] for t in g] for g in padded], np.int64).reshape(
+            len(modes), self.most, copies
+        )
         self.limit = np.array([[t[1] for t in g] for g in padded], np.int64).reshape(len(modes), self.most)
 
     def any(self, key: Ints, regs: Ints) -> NDArray[np.bool_]:
