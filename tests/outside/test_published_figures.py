@@ -7,9 +7,9 @@ from itertools import product
 
 import pytest
 
+from porter import simulate
 from porter.circuit.family import figures
 from porter.findings import Position
-from porter.single_run import simulate
 from porter.spec.model import Spread, Timer
 from porter.spec.read import read_text
 from tests.reference.integrate import decide

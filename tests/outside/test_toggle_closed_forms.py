@@ -14,9 +14,9 @@ from math import exp, log
 
 import pytest
 
+from porter import simulate
 from porter.behaviour.derive import derive
 from porter.behaviour.model import Behaviour
-from porter.single_run import simulate
 from porter.spec.model import Circuit
 from porter.spec.read import read_text
 from tests.reference.network import IDEAL, Chip, Contact, Net

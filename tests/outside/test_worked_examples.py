@@ -10,7 +10,7 @@ from math import exp, log
 import numpy as np
 import pytest
 
-from porter.single_run import simulate
+from porter import simulate
 from porter.spec.read import read_text
 from tests.reference.network import IDEAL, Chip, Contact, Net
 from tests.reference.text import spec_text

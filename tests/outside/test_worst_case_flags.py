@@ -6,9 +6,9 @@ has a circuit just inside the limit and one just outside.
 
 import pytest
 
+from porter import simulate
 from porter.behaviour.derive import derive
 from porter.behaviour.model import Behaviour
-from porter.single_run import simulate
 from porter.spec.read import read_text
 
 TOGGLE = """\
