@@ -15,7 +15,7 @@ import numpy as np
 from elftools.elf.elffile import ELFFile
 
 from .tools import DRIVERS, must, need
-from .work import END, IDLE, INIT, Work
+from .work import ASK, END, IDLE, INIT, Work
 
 Runs = tuple[tuple[int, int], ...]
 WARNINGS = ("-Wall", "-Wextra", "-Werror")
@@ -67,7 +67,7 @@ class Host(Backend):
 
     def drive(self, work: Work, where: Path) -> bytes:
         out = ctypes.create_string_buffer(len(work.stimulus))
-        library(where).porter_bytes(work.stimulus, out, ctypes.c_uint64(len(work.stimulus)))
+        library(where).porter_bytes(work.stimulus.tobytes(), out, ctypes.c_uint64(len(work.stimulus)))
         return out.raw
 
     def run_long(self, work: Work, where: Path, held: Runs, room: int = 4096) -> Runs:
@@ -125,7 +125,7 @@ class Wasm(Backend):
         exports = wasmtime.Instance(store, module, []).exports(store)
         start = exports["at"](store)  # type: ignore[operator]
         memory = exports["memory"]
-        memory.write(store, work.stimulus, start)  # type: ignore[union-attr]
+        memory.write(store, work.stimulus.tobytes(), start)  # type: ignore[union-attr]
         exports["go"](store)  # type: ignore[operator]
         return bytes(memory.read(store, start, start + len(work.stimulus)))  # type: ignore[union-attr]
 
@@ -151,7 +151,7 @@ class Avr(Backend):
     def cycles(self, work: Work, where: Path) -> tuple[int, int]:
         """Run a built image; return the least and the most cycles of a step, its return included."""
         must(["cc", "-O2", DRIVERS / "avr_call.c", "-o", "avr_call", "-lsimavr", "-lelf"], where)
-        (where / "in.bin").write_bytes(work.stimulus)
+        (where / "in.bin").write_bytes(work.stimulus.tobytes())
         at = addresses(where / "core.elf")
         functions = [at[f"{work.name}_{name}"] for name in ("init", "step", "idle")]
         state = at["each_core"] & 0xFFFF  # data addresses have a bit of their own in avr-gcc's images
@@ -178,7 +178,7 @@ class CortexM0(Backend):
         must(["arm-none-eabi-gcc", *flags, *WARNINGS, *names(work), *link], where)
 
     def drive(self, work: Work, where: Path) -> bytes:
-        (where / "in.bin").write_bytes(work.stimulus)
+        (where / "in.bin").write_bytes(work.stimulus.tobytes())
         machine = "-M microbit -nographic -monitor none -serial none".split()
         files = ["-semihosting-config", "enable=on,target=native", "-kernel", "core.elf"]
         must(["qemu-system-arm", *machine, *files], where)
@@ -196,7 +196,7 @@ class RiscV(Backend):
         must(["riscv64-unknown-elf-gcc", *flags, *WARNINGS, *names(work), *link], where)
 
     def drive(self, work: Work, where: Path) -> bytes:
-        (where / "in.bin").write_bytes(work.stimulus)
+        (where / "in.bin").write_bytes(work.stimulus.tobytes())
         must(["sh", "-c", "qemu-riscv32 core.elf < in.bin > out.bin"], where)
         return (where / "out.bin").read_bytes()
 
@@ -219,7 +219,7 @@ class UCsim(Backend):
         must(["sdcc", self.flag, "main.rel", "core.rel", "-o", "image.ihx"], where)
 
     def drive(self, work: Work, where: Path) -> bytes:
-        (where / "in.bin").write_bytes(work.stimulus + bytes([END]))
+        (where / "in.bin").write_bytes(work.stimulus.tobytes() + bytes([END]))
         files = f"if={self.cell},in=in.bin,out=out.bin"
         command = [self.emulator, *self.options.split(), "-q", "-b", "-I", files, "image.ihx"]
         must(command, where, text="run\nquit\n")
@@ -242,8 +242,8 @@ for ticks, held in {runs}:
         continue
     count, last = 0, -1
     for _ in range(ticks):
-        answer = m.step(held)
-        if m.idle():
+        answer = m.step(held & 0x3F)
+        if held & {ask} and m.idle():
             answer |= {idle}
         if answer != last:
             if count:
@@ -267,7 +267,7 @@ class MicroPython(Backend):
 
         name = "".join(word.capitalize() for word in work.name.split("_"))
         # Runs, since a literal of one byte a tick would not fit the runtime's memory.
-        play = _PLAY.format(runs=_runs(work.stimulus), init=INIT, idle=IDLE, name=name)
+        play = _PLAY.format(runs=_runs(work.stimulus.tobytes()), init=INIT, ask=ASK, idle=IDLE, name=name)
         code = (where / "core.py").read_text() + play
         result = run(code, fuel=2**40, wall_timeout_seconds=None)
         assert not result.stderr, result.stderr

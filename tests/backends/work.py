@@ -1,7 +1,7 @@
 """What a backend is given: an emitted core, and a stimulus as one row of bytes with its answers."""
 
 from collections.abc import Iterable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 
 import numpy as np
@@ -13,8 +13,10 @@ from porter.vectors.model import Suite
 
 #: In a stimulus: start again from power-on. Ends a stimulus in the drivers that can't ask for its length.
 INIT, END = 0xFF, 0xFE
-#: Added to an answer where the core says that it is idle.
-IDLE = 0x80
+#: Added to a held mask: ask whether the core is idle. Added to the answer: it is.
+ASK, IDLE = 0x40, 0x80
+#: Ticks that are kept of a run once the core rests in it: more than an 8-bit count holds.
+KEPT = 300
 
 Bytes = NDArray[np.uint8]
 
@@ -26,14 +28,14 @@ class Work:
     Args:
         port: where the core came from.
         texts: the emitted files by bare name.
-        stimulus: a held mask a tick, `INIT` before each case.
-        expected: the reference's output bits a tick, `INIT` at each `INIT`.
+        stimulus: a byte a tick, `INIT` before each case; shape (n,).
+        expected: the reference's output bits a tick, `INIT` at each `INIT`; shape (n,).
     """
 
     port: Port
     texts: dict[str, str]
-    stimulus: bytes
-    expected: bytes
+    stimulus: Bytes
+    expected: Bytes
 
     @property
     def name(self) -> str:
@@ -47,37 +49,62 @@ class Work:
 
 
 def work(port: Port, suite: Suite) -> Work:
-    """Return the work for every case of a suite, one after the other."""
-    assert len(port.buttons) < 7 and len(port.outputs) < 7, "the drivers' marks need room beside the masks"
+    """Return the work for every case of a suite, one after the other, asking for idle at every tick."""
+    assert len(port.buttons) < 6 and len(port.outputs) < 7, "the drivers' marks need room beside the masks"
     texts = {Path(path).name: text for path, text in emit(port, suite).items()}
-    stimulus = b"".join(_case(case.held) for case in suite.cases)
-    expected = b"".join(_case(case.expected) for case in suite.cases)
-    return Work(port, texts, stimulus, expected)
+    stimulus = np.concatenate([_case(case.held) for case in suite.cases])
+    expected = np.concatenate([_case(case.expected) for case in suite.cases])
+    return Work(port, texts, np.where(stimulus == INIT, INIT, stimulus | ASK).astype(np.uint8), expected)
 
 
-def _case(runs: Iterable[tuple[int, int]]) -> bytes:
+def _case(runs: Iterable[tuple[int, int]]) -> Bytes:
     ticks, values = np.array(tuple(runs), np.int64).T
-    return bytes([INIT]) + np.repeat(values.astype(np.uint8), ticks).tobytes()
+    return np.repeat(np.append(INIT, values), np.append(1, ticks)).astype(np.uint8)
 
 
-def outputs(answers: bytes) -> Bytes:
+def without_rest(whole: Work, answers: bytes) -> Work:
+    """Return the work with long rests cut short, for emulators that take a millisecond a tick.
+
+    Every case with every change in it stays. Of the ticks in which the core, by *answers* of
+    another backend to the whole work, is at rest with the same buttons held, the first `KEPT` stay:
+    the step is a function of state and buttons alone, so the rest repeats the last. Idle is asked
+    for where its answer turns and at every 16th tick.
+    """
+    rests = (np.frombuffer(answers, np.uint8) & IDLE != 0) & (whole.stimulus != INIT)
+    same = np.append(False, whole.stimulus[1:] == whole.stimulus[:-1])
+    at = np.arange(len(rests))
+    since = at - np.maximum.accumulate(np.where(rests & same, 0, at))
+    asks = (at % 16 == 0) | np.append(False, rests[1:] != rests[:-1]) | np.append(rests[1:] != rests[:-1], True)
+    stimulus = np.where(asks | (whole.stimulus == INIT), whole.stimulus, whole.stimulus & ~np.uint8(ASK))
+    keep = since <= KEPT
+    return replace(whole, stimulus=stimulus[keep], expected=whole.expected[keep])
+
+
+def outputs(answers: Bytes) -> Bytes:
     """Return answers without what the core said about being idle, marks left alone."""
-    got = np.frombuffer(answers, np.uint8)
-    return np.where(got == INIT, got, got & (IDLE - 1))
+    return np.where(answers == INIT, answers, answers & (IDLE - 1)).astype(np.uint8)
 
 
-def first_difference(work: Work, answers: bytes) -> str | None:
+def rests(asked: Work, answers: bytes) -> Bytes:
+    """Return for each tick at which the work asks for it whether the core is idle."""
+    where = (asked.stimulus != INIT) & (asked.stimulus & ASK != 0)
+    return np.frombuffer(answers, np.uint8)[where] & IDLE
+
+
+def first_difference(asked: Work, answers: bytes) -> str | None:
     """Return what differs first from the reference, or None.
 
     A short answer is a difference: an emulator that ends early must not pass.
     """
-    if len(answers) != len(work.expected):
-        return f"{work.name}: {len(answers)} answers to {len(work.expected)} ticks"
-    wrong = np.flatnonzero(outputs(answers) != np.frombuffer(work.expected, np.uint8))
+    if len(answers) != len(asked.expected):
+        return f"{asked.name}: {len(answers)} answers to {len(asked.expected)} ticks"
+    got = outputs(np.frombuffer(answers, np.uint8))
+    wrong = np.flatnonzero(got != asked.expected)
     if not len(wrong):
         return None
     at = int(wrong[0])
-    case = work.stimulus[: at + 1].count(INIT) - 1
-    tick = at - work.stimulus.rindex(INIT, 0, at + 1) - 1
-    got, due = answers[at] & (IDLE - 1), work.expected[at]
-    return f"{work.name}: case {case}, tick {tick}, held {work.stimulus[at]}: expected {due}, got {got}"
+    starts = np.flatnonzero(asked.stimulus[: at + 1] == INIT)
+    case, tick, held = len(starts) - 1, at - starts[-1] - 1, asked.stimulus[at] & (ASK - 1)
+    return (
+        f"{asked.name}: case {case}, tick {tick}, held {held}: expected {asked.expected[at]}, got {got[at]}"
+    )

@@ -80,12 +80,15 @@ int main(int argc, char **argv)
             putc(0xFF, out);
             continue;
         }
-        spent = call(at[1], (uint8_t)held);
+        spent = call(at[1], (uint8_t)held & 0x3Fu);
         least = spent < least ? spent : least;
         most = spent > most ? spent : most;
         uint8_t answer = avr->data[24];
-        call(at[2], 0u);
-        putc(avr->data[24] ? answer | 0x80 : answer, out);
+        if (held & 0x40) {
+            call(at[2], 0u);
+            answer |= avr->data[24] ? 0x80 : 0;
+        }
+        putc(answer, out);
     }
     printf("%lu %lu\n", least, most);
     return fclose(out) == 0 ? 0 : 1;

@@ -2,7 +2,7 @@
  *
  * CORE is the core's name and CORE_HEADER its header, both from the command line. 0xFF starts from
  * power-on and is answered with itself; any other byte is a held mask, answered with the outputs'
- * bits, plus 0x80 where the core says that it is idle.
+ * bits. With 0x40 added to the mask the core is asked whether it is idle: 0x80 in the answer if so.
  */
 #include CORE_HEADER
 
@@ -23,8 +23,8 @@ static uint8_t each(uint8_t held)
         CORE_INIT(&each_core);
         return 0xFFu;
     }
-    answer = CORE_STEP(&each_core, held);
-    if (CORE_IDLE(&each_core)) {
+    answer = CORE_STEP(&each_core, held & 0x3Fu);
+    if (((held & 0x40u) != 0u) && CORE_IDLE(&each_core)) {
         answer |= 0x80u;
     }
     return answer;

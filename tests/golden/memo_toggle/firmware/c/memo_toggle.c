@@ -97,9 +97,11 @@ uint8_t memo_toggle_step(memo_toggle_t *m, uint8_t held)
 
 bool memo_toggle_idle(const memo_toggle_t *m)
 {
-    memo_toggle_t next = *m;
+    memo_toggle_t next;
     uint8_t was = (uint8_t)(m->bits >> 1u);
 
+    next.x = m->x;
+    next.bits = m->bits;
     (void)memo_toggle_step(&next, was);
     return (next.x == m->x) && (next.bits == m->bits);
 }

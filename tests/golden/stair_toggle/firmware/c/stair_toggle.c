@@ -66,13 +66,15 @@ uint8_t stair_toggle_step(stair_toggle_t *m, uint8_t held)
 
 bool stair_toggle_idle(const stair_toggle_t *m)
 {
-    stair_toggle_t next = *m;
+    stair_toggle_t next;
     uint8_t n_push = m->n_push;
     uint8_t was = 0u;
 
     if (n_push >= STAIR_TOGGLE_PRESS_PUSH) {
         was |= STAIR_TOGGLE_BUTTON_PUSH;
     }
+    next.bits = m->bits;
+    next.n_push = m->n_push;
     (void)stair_toggle_step(&next, was);
     return (next.bits == m->bits) && (next.n_push == m->n_push);
 }
