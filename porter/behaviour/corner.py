@@ -48,7 +48,13 @@ def single_steps(cols: Columns, free: NDArray[np.integer]) -> Floats:
 
 def quantities(measures: Measures) -> Floats:
     """All measured numbers side by side, shape (U, K); never and no rest as large numbers."""
-    parts = [*measures.held.values(), *measures.windows.values(), *measures.margins.values(), *measures.rests]
+    parts = [
+        *measures.held.values(),
+        *measures.windows.values(),
+        *measures.margins.values(),
+        *measures.timed.values(),
+        *measures.rests,
+    ]
     return np.column_stack([np.nan_to_num(np.asarray(p, float), posinf=1e30, neginf=-1e30) for p in parts])
 
 
@@ -94,7 +100,7 @@ def _in_chunks(circuit: Circuit, cols: Columns, rows: Floats, keys: tuple[Margin
         }
 
     rests = [np.concatenate([p.rests[q] for p in pieces]) for q in (0, 1)]
-    return Measures(rests, join("held"), join("period_s"), join("windows"), join("margins"))
+    return Measures(rests, join("held"), join("period_s"), join("windows"), join("margins"), join("timed"))
 
 
 def units_at_the_ends(groups: tuple[Population, ...]) -> Floats:
@@ -102,7 +108,8 @@ def units_at_the_ends(groups: tuple[Population, ...]) -> Floats:
     of every window and margin, shape (U, P)."""
     picked = [groups[0].rows[:1]]
     for group in groups:
-        for values in (*group.measures.windows.values(), *group.measures.margins.values()):
+        of = group.measures
+        for values in (*of.windows.values(), *of.margins.values(), *of.timed.values(), *of.period_s.values()):
             finite = np.isfinite(values)
             if finite.any() and values[finite].max() > values[finite].min():
                 at = np.flatnonzero(finite)

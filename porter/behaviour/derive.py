@@ -20,6 +20,7 @@ from porter.behaviour.model import (
     PriorityRow,
     ReleaseRow,
     Settled,
+    Timed,
     Verdict,
     Window,
 )
@@ -58,12 +59,13 @@ def derive(circuit: Circuit) -> Behaviour:
         priority=tuple(_priority_rows(circuit, nominal)),
         dominance=_dominance(circuit, nominal),
         releases=tuple(_release_rows(circuit, engine)),
-        power_on=_power_on(circuit, engine),
+        power_on=_power_on(engine),
         windows=tuple(_windows(circuit, engine, nominal, drawn, published)),
         margins=tuple(_margins(circuit, engine, nominal, drawn, published)),
-        levels=tuple(_levels(circuit, engine)),
+        levels=tuple(_levels(engine)),
         findings=(),
-        notes=tuple(_notes(circuit, engine, drawn, published)),
+        notes=tuple(_notes(engine, drawn, published)),
+        timed=tuple(_timed(circuit, nominal, drawn, published)),
         extra={"units": units_at_the_ends((drawn, published)), "slowest_s": _slowest(engine)},
     )
     evidence = Evidence(circuit, engine, nominal, drawn, published, base)
@@ -147,7 +149,7 @@ def _after_releases(engine: Engine, order: Sequence[int]) -> Settled:
     return seen.pop() if len(seen) == 1 else "oscillates" if "oscillates" in seen else "keeps"
 
 
-def _power_on(circuit: Circuit, engine: Engine) -> PowerOn:
+def _power_on(engine: Engine) -> PowerOn:
     outcomes, at_once = [], []
     for q in (0, 1):
         lanes = engine.empty(q)
@@ -156,7 +158,10 @@ def _power_on(circuit: Circuit, engine: Engine) -> PowerOn:
         engine.run(lanes, np.inf)
         outcomes.append(OSCILLATES if lanes.busy[0] else int(lanes.q[0]))
     if outcomes[0] != outcomes[1]:
-        why = "no input forces the latch when the supply steps up over empty capacitors: it keeps what it came up with"
+        why = (
+            "no input forces the latch when the supply steps up over empty capacitors: "
+            "it keeps what it came up with"
+        )
         return PowerOn("undetermined", why)
     if outcomes[0] == OSCILLATES:
         return PowerOn("undetermined", "the circuit oscillates with no button held")
@@ -197,6 +202,13 @@ def _windows(
         )
 
 
+def _timed(circuit: Circuit, nominal: Measures, drawn: Population, published: Population) -> Iterator[Timed]:
+    for key, value in nominal.timed.items():
+        if np.isfinite(value[0]):
+            bands = (_band(value, group.measures.timed[key]) for group in (drawn, published))
+            yield Timed(circuit.buttons[key[0]].name, _LEVELS[key[1]], *bands)
+
+
 def _margins(
     circuit: Circuit, engine: Engine, nominal: Measures, drawn: Population, published: Population
 ) -> Iterator[Margin]:
@@ -205,7 +217,7 @@ def _margins(
             margin_place(circuit, key),
             _band(value, drawn.measures.margins[key]),
             _band(value, published.measures.margins[key]),
-            margin_why(engine, nominal, key, drawn),
+            margin_why(engine, key, drawn),
         )
 
 
@@ -219,7 +231,7 @@ def margin_place(circuit: Circuit, key: tuple[int, int, str]) -> str:
     return f"{held + ' held' if held else 'no button held'}, output {_LEVELS[q]}: {pin} {side[:-1]} its level"
 
 
-def _levels(circuit: Circuit, engine: Engine) -> Iterator[NamedLevel]:
+def _levels(engine: Engine) -> Iterator[NamedLevel]:
     """Voltages worth reading: thresholds, and every node at rest in both states (nominal)."""
 
     def exact(volts: float) -> Band:
@@ -237,7 +249,7 @@ def _levels(circuit: Circuit, engine: Engine) -> Iterator[NamedLevel]:
                 yield NamedLevel(f"{name} at rest, output {_LEVELS[q]}", exact(float(volts)))
 
 
-def _notes(circuit: Circuit, engine: Engine, drawn: Population, published: Population) -> Iterator[str]:
+def _notes(engine: Engine, drawn: Population, published: Population) -> Iterator[str]:
     for name, group in (("part tolerances", drawn), ("part tolerances and published figures", published)):
         how = (
             "every corner"

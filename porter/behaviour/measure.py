@@ -34,6 +34,8 @@ class Measures:
         period_s: the same keys, period of the oscillation.
         windows: seconds, inf = never, shape (U,).
         margins: volts, shape (U,).
+        timed: ``timed[button, q]``: seconds that the output stays at q by itself after a tap that
+            turned it there, inf = it stays.
     """
 
     rests: list[Mask]
@@ -41,6 +43,7 @@ class Measures:
     period_s: dict[tuple[int, int], Floats] = field(default_factory=dict)
     windows: dict[WindowKey, Floats] = field(default_factory=dict)
     margins: dict[MarginKey, Floats] = field(default_factory=dict)
+    timed: dict[tuple[int, int], Floats] = field(default_factory=dict)
 
 
 def measure(engine: Engine, margin_keys: tuple[MarginKey, ...] | None = None) -> Measures:
@@ -62,6 +65,8 @@ def measure(engine: Engine, margin_keys: tuple[MarginKey, ...] | None = None) ->
             out.period_s[q, mask] = np.where(lanes.busy, lanes.period_s, np.nan)
     for i in range(len(engine.circuit.buttons)):
         out.windows.update(_windows(engine, i, [lanes for lanes, _ in rests], out.rests))
+        for q in (0, 1):
+            out.timed[i, q] = _stays(engine, *rests[1 - q], 1 << i)
     _margins(engine, [lanes for lanes, _ in rests], settled, out, margin_keys)
     return out
 
@@ -103,11 +108,11 @@ def hold_until_flip(engine: Engine, start: Lanes, mask: int) -> tuple[Lanes, Flo
     lanes = start.copy()
     q = lanes.q.copy()
     engine.press(lanes, mask)
-    at_once = lanes.q != q
-    probe = lanes.copy()
-    when = np.where(at_once, 0.0, first_flip(engine, probe, np.inf))
-    acts = np.isfinite(when)
-    engine.run(lanes, np.where(acts, when, np.inf))
+    when = np.zeros(len(lanes))
+    waits = np.flatnonzero(lanes.q == q)
+    part = lanes.take(waits)
+    when[waits] = first_flip(engine, part, np.inf)
+    lanes.put(waits, part)
     return lanes, when
 
 
@@ -138,7 +143,7 @@ def _bisect(engine: Engine, start: Lanes, mask: int, rows: Mask) -> Floats:
     """Least press that acts by its release, where holding alone does not act."""
     out = np.full(len(start), np.inf)
     lanes = start.take(rows)
-    long = np.full(len(lanes), _settling(engine, lanes))
+    long = np.full(len(lanes), _settling(engine))
     acts = acts_on_release(engine, lanes, mask, long)
     low, high = np.full(len(lanes), 1e-9), long.copy()
     for _ in range(60 if acts.any() else 0):
@@ -149,7 +154,7 @@ def _bisect(engine: Engine, start: Lanes, mask: int, rows: Mask) -> Floats:
     return out
 
 
-def _settling(engine: Engine, lanes: Lanes) -> float:
+def _settling(engine: Engine) -> float:
     """A time in which everything that can settle has: sixty slowest time constants."""
     slowest = 1.0
     for mode in engine.modes:
@@ -170,6 +175,13 @@ def _windows(
         yield (button, q, "re-arm-after-tap"), tap
         yield (button, q, "re-arm-after-hold"), hold
         yield (button, q, "stray-gap"), np.minimum(tap, hold)
+
+
+def _stays(engine: Engine, rest: Lanes, ok: Mask, mask: int) -> Floats:
+    """How long the output stays turned after a tap from rest, inf = until another press, shape (U,)."""
+    lanes = after_press(engine, rest, mask, held=False)
+    turned = ok & (lanes.q != rest.q) & ~lanes.busy
+    return np.where(turned, first_flip(engine, lanes, np.inf), np.inf)
 
 
 def after_press(engine: Engine, rest: Lanes, mask: int, held: bool) -> Lanes:
@@ -211,7 +223,7 @@ def least_gap(engine: Engine, lanes: Lanes, mask: int) -> Floats:
     """
     settled = lanes.copy()
     engine.run(settled, np.inf)
-    far = np.full(len(lanes), _settling(engine, lanes))
+    far = np.full(len(lanes), _settling(engine))
     ever = press_acts(engine, lanes, mask, far)
     gap = np.where(ever, _instant_gap(engine, lanes, settled, mask), np.inf)
     sure = np.isfinite(gap)
@@ -251,16 +263,14 @@ def _instant_gap(engine: Engine, lanes: Lanes, settled: Lanes, mask: int) -> Flo
             part = np.flatnonzero((pressed.conducts[rows] == conducts) & np.isinf(found[rows]))
             if len(part):
                 target = engine.mode(mode.q, mask, conducts)
-                when = _joint_crossing(engine, mode, target, lanes.unit[rows[part]], z0[part], length[part])
+                when = _joint_crossing(mode, target, lanes.unit[rows[part]], z0[part], length[part])
                 found[rows[part]] = begin[part] + when
 
     engine.run(lanes.copy(), np.inf, watcher=watch)
     return found
 
 
-def _joint_crossing(
-    engine: Engine, open_: Mode, pressed: Mode, unit: Ints, z0: Floats, length: Floats
-) -> Floats:
+def _joint_crossing(open_: Mode, pressed: Mode, unit: Ints, z0: Floats, length: Floats) -> Floats:
     """When the pressed mode's decision would turn, along the open mode's flow from z0."""
     rate = open_.rate[unit]
     pull = open_.drive[unit] - rate * z0
@@ -284,7 +294,7 @@ def _margins(
     out: Measures,
     keys: tuple[MarginKey, ...] | None,
 ) -> None:
-    wanted = _wanted(engine, rests, settled, out) if keys is None else keys
+    wanted = _wanted(engine, settled, out) if keys is None else keys
     guards = {key: engine.guards(lanes) for key, lanes in settled.items()}
     for mask, q, what in wanted:
         if what == "press":
@@ -294,9 +304,7 @@ def _margins(
             out.margins[mask, q, what] = _hold_margin(settled[key], guards[key], q, what)
 
 
-def _wanted(
-    engine: Engine, rests: list[Lanes], settled: Mapping[tuple[int, int], Lanes], out: Measures
-) -> tuple[MarginKey, ...]:
+def _wanted(engine: Engine, settled: Mapping[tuple[int, int], Lanes], out: Measures) -> tuple[MarginKey, ...]:
     """The margins that matter, told from the first unit."""
     keys: dict[MarginKey, None] = {}
     for (start, mask), lanes in settled.items():

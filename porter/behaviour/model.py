@@ -76,6 +76,16 @@ class Window:
 
 
 @dataclass(frozen=True, slots=True)
+class Timed:
+    """After a tap of a button the output stays at `output` by itself for this long, then returns."""
+
+    button: str
+    output: Level
+    seconds: Band
+    guaranteed: Band
+
+
+@dataclass(frozen=True, slots=True)
 class Margin:
     """How far a deciding voltage is from its threshold in a settled situation; negative = wrong side.
 
@@ -113,4 +123,5 @@ class Behaviour:
     levels: tuple[NamedLevel, ...]
     findings: tuple[Finding, ...]
     notes: tuple[str, ...] = ()  # e.g. how the corners were chosen
+    timed: tuple[Timed, ...] = ()
     extra: Mapping[str, object] = field(default_factory=dict)
