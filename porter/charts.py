@@ -45,11 +45,9 @@ def run_trace(
     engine = engine or Engine(circuit)
     steps = [(float(at), tuple(names)) for at, names in schedule]
     nodes = _shown_nodes(circuit, engine)
-    times = _sample_times([at for at, _ in steps], end_s)
+    times = _sample_times([at for at, _ in steps], end_s).tolist()
     run = simulate(circuit, steps, end_s, start=start, output=output, nodes=nodes, times=times, engine=engine)
-    waves = tuple(
-        Wave(n, tuple(times.tolist()), tuple(v.tolist())) for n, v in zip(nodes, run.volts, strict=True)
-    )
+    waves = tuple(Wave(n, tuple(times), tuple(v.tolist())) for n, v in zip(nodes, run.volts, strict=True))
     return Trace(
         title=title,
         end_s=end_s,

@@ -35,15 +35,16 @@ def window_why(engine: Engine, nominal: Measures, key: WindowKey, drawn: Populat
     name = engine.circuit.buttons[button].name
     if np.isinf(seconds):
         return f"{name} never changes that output this way"
+    again = f"until pressing {name} again crosses a level"
     said = {
-        "shortest-press": f"from rest, time from the closing of {name} until a deciding voltage crosses its level",
-        "re-arm-after-tap": f"from the release of a shortest press, until pressing {name} again crosses a level",
-        "re-arm-after-hold": f"from the release of a settled hold, until pressing {name} again crosses a level",
+        "shortest-press": f"from rest, from the closing of {name} until a deciding voltage crosses its level",
+        "re-arm-after-tap": f"from the release of a shortest press, {again}",
+        "re-arm-after-hold": f"from the release of a settled hold, {again}",
         "stray-gap": "the shorter of the two re-arm times",
     }[kind]
     return "; ".join(filter(None, (said, _moved_by(drawn, drawn.measures.windows[key], engine))))
 
 
-def margin_why(engine: Engine, nominal: Measures, key: MarginKey, drawn: Population) -> str:
+def margin_why(engine: Engine, key: MarginKey, drawn: Population) -> str:
     """Say which values move a margin."""
     return _moved_by(drawn, drawn.measures.margins[key], engine)

@@ -26,6 +26,7 @@ from porter.spec.model import RAILS, Circuit, Part
 #: A value of every unit: takes rows (B, P), gives (B,).
 Getter = Callable[[Floats], Floats]
 GND, VCC = -1, -2
+RAIL_INDEX = {"gnd": GND, "vcc": VCC}
 
 
 @dataclass(frozen=True, slots=True)
@@ -106,11 +107,11 @@ class Topology:
     @property
     def states(self) -> int:
         """Number of capacitor states."""
-        return self.T.shape[1]
+        return int(self.T.shape[1])
 
     def node(self, name: str) -> int:
         """Return the index of a node or rail."""
-        return {"gnd": GND, "vcc": VCC}.get(name) if name in RAILS else self.nodes.index(name)  # type: ignore[return-value]
+        return RAIL_INDEX[name] if name in RAILS else self.nodes.index(name)
 
     def cap_matrix(self, rows: Floats) -> Floats:
         """Return the capacitance matrix in the states' coordinates, shape (B, m, m)."""
@@ -491,7 +492,7 @@ def _project(Ay: Floats, Ax: Floats, e: Floats) -> tuple[Floats, Floats, Floats,
 
 
 def _solve_upper(R: Floats, B: Floats) -> Floats:
-    return np.linalg.solve(R, B) if R.shape[1] else np.zeros((len(R), 0, B.shape[2]))
+    return np.asarray(np.linalg.solve(R, B)) if R.shape[1] else np.zeros((len(R), 0, B.shape[2]))
 
 
 def _solve_lower(R: Floats, b: Floats) -> Floats:

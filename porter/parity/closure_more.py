@@ -1,22 +1,18 @@
-"""Closures other than the one-capacitor charge walk: nothing carried, counters, several capacitors."""
-
-from itertools import product
+"""Closures of ports that carry no capacitor: nothing remembered, and counters beside one capacitor."""
 
 import numpy as np
 from numpy.typing import NDArray
 
-from porter.circuit.engine import Ints, Mask
+from porter.circuit.engine import Ints
 from porter.circuit.values import Floats
 from porter.parity.closure import Walk
 from porter.parity.model import Closure
 from porter.parity.twin import circuit_decides, circuit_moves, port_decides
-from porter.port.charge import one_tick
 from porter.port.memory import Memory, settled_mode
-from porter.port.model import U16, Charge, Port, State
-from porter.port.step import move_copies, start, step
+from porter.port.model import U16, Port, State
+from porter.port.step import start, step
 
 _CELLS = 1024  # intervals that a capacitor's range is cut in beside a counting port
-_GRID = 4096  # about how many states the several-capacitor walk looks at in each mode
 
 
 # --- nothing carried: the product is finite ---
@@ -175,7 +171,7 @@ class _Cells:
         high = np.stack([self._moves[k, h][1] for k in (0, 1)])
         return low[q, cell], high[q, cell]
 
-    def _times(self, mem: Memory, q: int, h: int, copies: Floats) -> Floats:
+    def _times(self, mem: Memory, q: int, h: int, copies: NDArray[np.floating]) -> Floats:
         """Seconds of open contact between a cell and the copy at which the decision changes."""
         truth = circuit_decides(mem, q, h, copies[:, None]).q
         turns = np.flatnonzero(np.diff(truth))
@@ -190,132 +186,3 @@ class _Cells:
         with np.errstate(divide="ignore", invalid="ignore"):
             gaps = np.abs(np.log(np.abs((copies[:, None] - end) / (edges[None, :] - end)))) / rate
         return np.asarray(np.nan_to_num(gaps, nan=np.inf).min(axis=1) + self.width / U16 / rate)
-
-
-# --- several capacitors ---
-
-
-def walk_many(mem: Memory, port: Port) -> Walk:
-    """Bound a charge port of several capacitors over the whole box of states, in the energy norm.
-
-    Every passive mode shrinks ``e' C e`` (C the capacitance matrix), so with at most q added
-    each tick the error stays below ``q / (1 - lambda)``.  Decisions are compared on a grid of
-    states in every mode; those within the bound of a threshold are grey.
-    """
-    assert isinstance(port.machine, Charge)
-    norm = _Norm(mem)
-    grid = _grid(len(mem.kept))
-    rounding = slowest = 0.0
-    holds, late_seen = True, False
-    grey = wrong = 0
-    pairs = [(q, h) for q in (0, 1) for h in range(port.held_count)]
-    for q, h in pairs:
-        off, late = _local(mem, port, grid, q, h)
-        size = norm.size(off[~late]).max(initial=0.0)
-        rounding = max(rounding, float(size))
-        late_size = float(norm.size(off[late]).max(initial=0.0))
-        late_seen |= late_size > 2 * size + 1e-12
-        factor = _factor(mem, q, h, port.tick_s)
-        if factor >= 1 - 1e-12:
-            holds &= bool(size < 1e-9)
-        else:
-            slowest = max(slowest, factor)
-    bound = rounding / (1 - slowest) if slowest < 1 else np.inf
-    holds &= not late_seen
-    for q, h in pairs:
-        near, bad = _decisions(mem, port, grid, q, h, norm, bound)
-        grey, wrong = grey + int(near.sum()), wrong + int(bad.sum())
-    volts = float(norm.worst_volts(bound))
-    steps = len(grid) * len(pairs)
-    closure = Closure(
-        len(grid) * 2,
-        steps,
-        grey,
-        volts if holds else None,
-        False,
-        wrong,
-        tuple(_said_many(len(grid), bound, volts, holds, late_seen, grey, wrong)),
-    )
-    return Walk(closure, volts / float(mem.scale_v.max()), {}, None)
-
-
-def _said_many(
-    points: int, bound: float, volts: float, holds: bool, late: bool, grey: int, wrong: int
-) -> list[str]:
-    said = []
-    if holds:
-        said.append(
-            f"in the energy norm every mode shrinks the copies' error, so no copy is ever further than {volts * 1e3:.3g} mV "
-            "from its voltage, for every input sequence of any length"
-        )
-    if late:
-        said.append(
-            "flips inside a tick change how the capacitors move, which the bound does not cover: it holds between such flips"
-        )
-    said.append(
-        f"decisions were compared on a grid of {points:,} states in every latch state and held combination: "
-        f"{wrong:,} differ, {grey:,} are grey; the grid samples the states, it doesn't exhaust them"
-    )
-    return said
-
-
-class _Norm:
-    """The energy norm of copies' errors."""
-
-    def __init__(self, mem: Memory) -> None:
-        full = mem.engine.topo.cap_matrix(mem.engine.rows[:1])[0]
-        self.C = full[np.ix_(mem.kept, mem.kept)]
-        self.scale = mem.scale_v
-        self.inverse = np.linalg.inv(self.C)
-
-    def size(self, off: Floats) -> Floats:
-        """Norm of errors given in copies, shape (B, kept) -> (B,)."""
-        volts = off * self.scale
-        return np.sqrt(np.einsum("bi,ij,bj->b", volts, self.C, volts))
-
-    def along(self, row: Floats, bound: float) -> float:
-        """The most that ``row . e`` (e in volt) can be with a norm of *bound*."""
-        return float(np.sqrt(row @ self.inverse @ row) * bound)
-
-    def worst_volts(self, bound: float) -> float:
-        """The most that any one copy can be off, volt."""
-        return float(np.sqrt(np.diag(self.inverse).max()) * bound)
-
-
-def _grid(kept: int) -> Ints:
-    side = max(5, int(round(_GRID ** (1 / kept))))
-    axis = np.rint(np.linspace(0, U16, side)).astype(np.int64)
-    return np.array(list(product(axis, repeat=kept)), np.int64)
-
-
-def _local(mem: Memory, port: Port, grid: Ints, q: int, h: int) -> tuple[Floats, Mask]:
-    """One tick of port against circuit with the latch at q; error in copies and flips inside the tick."""
-    assert isinstance(port.machine, Charge)
-    lanes = circuit_moves(mem, q, h, grid, port.tick_s)
-    moved = np.column_stack([move_copies(m, k, grid) for k, m in enumerate(port.machine.modes[q][h].moves)])
-    return moved - mem.copies(lanes.x), lanes.flips > 0
-
-
-def _factor(mem: Memory, q: int, h: int, tick_s: float) -> float:
-    mode = settled_mode(mem.engine, q, h, mem.volts(np.full((1, len(mem.kept)), U16 / 2))[0])
-    keep, _ = one_tick(mem, mode, tick_s)
-    norm = _Norm(mem)
-    L = np.linalg.cholesky(norm.C) * 1.0
-    T = L.T @ (keep * mem.scale_v[:, None] / mem.scale_v[None, :]) @ np.linalg.inv(L.T)
-    return float(np.linalg.norm(T, 2))
-
-
-def _decisions(
-    mem: Memory, port: Port, grid: Ints, q: int, h: int, norm: _Norm, bound: float
-) -> tuple[Mask, NDArray[np.bool_]]:
-    state = State(np.full(len(grid), q, np.uint8), grid)
-    decided = port_decides(port, state, np.full(len(grid), h, np.int64))
-    lanes = mem.lanes(q, h, grid)
-    mem.engine.resolve(lanes, frozen=True)
-    guards = mem.engine.guards(lanes)
-    mode = settled_mode(mem.engine, q, h, mem.volts(np.full((1, len(mem.kept)), U16 / 2))[0])
-    rows = (mode.Gz[0, :3] @ mode.Sinv[0])[:, list(mem.kept)]
-    reach = np.array([norm.along(row, bound) for row in rows])
-    near = ((np.abs(guards) <= reach) & (reach > 0)).any(axis=1)
-    truth = circuit_decides(mem, q, h, grid).q
-    return near, ~near & (decided != truth)

@@ -89,7 +89,9 @@ def port_decides(port: Port, state: State, held: Ints) -> Ints:
     return decider(port)(state, held).astype(np.int64)
 
 
-def circuit_decides(mem: Memory, q: Ints | int, held: Ints | int, copies: Floats | Ints) -> Lanes:
+def circuit_decides(
+    mem: Memory, q: Ints | int, held: Ints | int, copies: NDArray[np.integer | np.floating]
+) -> Lanes:
     """Return circuits that have decided at this instant with their capacitors at the copies' voltages."""
     lanes = mem.lanes(q, held, copies)
     mem.engine.resolve(lanes)
@@ -97,7 +99,7 @@ def circuit_decides(mem: Memory, q: Ints | int, held: Ints | int, copies: Floats
 
 
 def circuit_moves(
-    mem: Memory, q: Ints | int, held: Ints | int, copies: Floats | Ints, tick_s: float
+    mem: Memory, q: Ints | int, held: Ints | int, copies: NDArray[np.integer | np.floating], tick_s: float
 ) -> Lanes:
     """Return circuits one tick after their decision at q."""
     lanes = mem.lanes(q, held, copies)

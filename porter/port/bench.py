@@ -4,7 +4,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from porter.circuit.engine import Ints
+from porter.circuit.engine import Ints, Mask
 from porter.port.model import Charge, Port, State
 from porter.port.step import start
 from porter.port.swift import stepper
@@ -86,7 +86,7 @@ def shortest_press(bench: Bench, button: int, q: int) -> int | None:
 
 
 def re_arm(bench: Bench, button: int, q: int, held: bool) -> int | None:
-    """Fewest open ticks after a tap (or a settled hold) that turned the output to *q* until a press turns it back."""
+    """Fewest open ticks after a tap (or hold) that turned the output to *q* until a press turns it back."""
     port, rest = bench.port, bench.rest[1 - q]
     press = shortest_press(bench, button, 1 - q)
     if rest is None or press is None:
@@ -124,7 +124,7 @@ def _openings(port: Port, state: State) -> State:
     return State(np.concatenate(q), np.concatenate(regs))
 
 
-def _press_acts(port: Port, opened: State, button: int, q: int) -> np.ndarray:
+def _press_acts(port: Port, opened: State, button: int, q: int) -> Mask:
     """Whether holding the button from each of these states turns the latch from q within a settling time."""
     masks: Ints = np.full(len(opened.q), 1 << button, np.int64)
     state, acts, step = opened, np.zeros(len(opened.q), bool), stepper(port)
@@ -137,7 +137,7 @@ def _press_acts(port: Port, opened: State, button: int, q: int) -> np.ndarray:
             break
     # A state that turns by itself at this very tick says nothing about the press.
     alone, _ = step(opened, np.zeros(len(opened.q), np.int64))
-    return acts & (opened.q == q) & (alone.q == q)
+    return np.asarray(acts & (opened.q == q) & (alone.q == q))
 
 
 def is_charge(port: Port) -> bool:

@@ -1,6 +1,7 @@
 """The charge style: an integer copy of each capacitor that matters, moved by the exact one-tick solution."""
 
 from collections.abc import Iterator
+from itertools import pairwise
 
 import numpy as np
 from numpy.typing import NDArray
@@ -169,9 +170,7 @@ def _pieces(mem: Memory, q: int, held: int, points: int = 513) -> list[tuple[int
     mem.engine.resolve(lanes, frozen=True)
     turns = np.flatnonzero(np.diff(lanes.conducts)) + 1
     cuts = [0, *turns.tolist(), points - 1]
-    return [
-        (int(lanes.conducts[a]), float(X[a, 0]), float(X[b, 0])) for a, b in zip(cuts, cuts[1:], strict=False)
-    ]
+    return [(int(lanes.conducts[a]), float(X[a, 0]), float(X[b, 0])) for a, b in pairwise(cuts)]
 
 
 def _one_way(
@@ -183,7 +182,7 @@ def _one_way(
         mode = engine.mode(q, held, conducts)
         A = -(mode.S[0] * mode.rate[0]) @ mode.Sinv[0]
         still[conducts] = (abs(A[k, k]) < 1e-9, a, b)
-    at = [i for i, piece in enumerate(pieces) if piece[0] == main][0]
+    at = next(i for i, piece in enumerate(pieces) if piece[0] == main)
     if at > 0 and all(still[c][0] for c, _, _ in pieces[:at]):
         return "down"
     if at + 1 < len(pieces) and all(still[c][0] for c, _, _ in pieces[at + 1 :]):

@@ -1,9 +1,8 @@
-"""The count style: the latch by table, filters for slow inputs, and at most one toggle with a re-arm counter."""
+"""The count style: the latch by table, filters for slow inputs, at most one toggle with a re-arm counter."""
 
 import numpy as np
 
 from porter.behaviour.model import Behaviour, Window
-from porter.circuit.engine import Engine
 from porter.port.memory import Memory
 from porter.port.model import Constant, Count, Toggle
 from porter.port.origin import Origin
@@ -27,7 +26,7 @@ def toggles(behaviour: Behaviour) -> list[int]:
     ]
 
 
-def fits_count(circuit: Circuit, behaviour: Behaviour, mem: Memory) -> tuple[bool, str]:
+def fits_count(behaviour: Behaviour) -> tuple[bool, str]:
     """Return whether latch, filters and one re-arm counter can do what the circuit does, and why not."""
     rows = [row for row in behaviour.held if row.output == "oscillates"]
     if rows:
@@ -48,7 +47,7 @@ def fits_count(circuit: Circuit, behaviour: Behaviour, mem: Memory) -> tuple[boo
 
 
 def plan_count(
-    circuit: Circuit, behaviour: Behaviour, engine: Engine, mem: Memory, tick_s: float
+    circuit: Circuit, behaviour: Behaviour, mem: Memory, tick_s: float
 ) -> tuple[Count, list[Constant], list[str]]:
     """Plan the count machine; call only where `fits_count` is true."""
     found = toggles(behaviour)
@@ -58,7 +57,7 @@ def plan_count(
     origin = Origin(circuit, mem)
     constants: list[Constant] = []
     press = _press_ticks(circuit, behaviour, tick_s, origin, constants)
-    toggle = _toggle(circuit, behaviour, found[0], tick_s, origin, constants) if found else None
+    toggle = _toggle(behaviour, found[0], tick_s, origin, constants) if found else None
     release = (1,) * len(circuit.buttons)
     machine = Count(table, live, press, release, toggle)
     return (
@@ -126,7 +125,6 @@ def _press_ticks(
 
 
 def _toggle(
-    circuit: Circuit,
     behaviour: Behaviour,
     button: int,
     tick_s: float,

@@ -34,7 +34,7 @@ class Memory:
     low_v: Floats
     scale_v: Floats
 
-    def volts(self, copies: NDArray[np.integer] | Floats) -> Floats:
+    def volts(self, copies: NDArray[np.integer | np.floating]) -> Floats:
         """Return full capacitor states for copies, shape (B, kept) -> (B, m)."""
         x = np.tile(self.base, (len(copies), 1))
         x[:, list(self.kept)] = self.low_v + np.asarray(copies, float) * self.scale_v
@@ -44,7 +44,7 @@ class Memory:
         """Return unrounded copies of full states, shape (B, m) -> (B, kept)."""
         return np.asarray((x[:, list(self.kept)] - self.low_v) / self.scale_v)
 
-    def lanes(self, q: Ints | int, held: Ints | int, copies: NDArray[np.integer] | Floats) -> Lanes:
+    def lanes(self, q: Ints | int, held: Ints | int, copies: NDArray[np.integer | np.floating]) -> Lanes:
         """Return lanes of the nominal unit with the capacitors at the copies' voltages."""
         return self.engine.lanes(np.zeros(len(copies), np.int64), q, self.volts(copies), held)
 
@@ -60,7 +60,7 @@ def frozen_rest(engine: Engine, q: int, held: int, x: Floats) -> Floats:
     """Return where the capacitors settle with latch and buttons kept, shape (m,)."""
     lanes = engine.lanes(np.zeros(1, np.int64), q, x[None, :], held)
     engine.run(lanes, np.inf, frozen=True)
-    return lanes.x[0]
+    return np.asarray(lanes.x[0])
 
 
 def memory(engine: Engine) -> Memory:

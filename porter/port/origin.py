@@ -69,7 +69,8 @@ class Origin:
         k, name = self._state(at)
         A, _ = _dynamics(self._mode(q, held))
         share = -np.expm1(-rate * tick_s)
-        working = f"65536 * (1 - exp(-T/tau)) = 65536 * (1 - exp(-{tick_s * 1e3:g} ms / {1e3 / rate:.6g} ms)) = {65536 * share:.2f}"
+        times = f"{tick_s * 1e3:g} ms / {1e3 / rate:.6g} ms"
+        working = f"65536 * (1 - exp(-T/tau)) = 65536 * (1 - exp(-{times})) = {65536 * share:.2f}"
         meaning = f"65536ths of the way to its end that {name} goes in a tick; {self._held(q, held)}"
         return self.constant(key, value, meaning, working, self._moved_by(A[:, k, k]))
 

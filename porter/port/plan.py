@@ -36,7 +36,7 @@ def plan(circuit: Circuit, behaviour: Behaviour) -> Port:
     start_q, start_why = _start(circuit, behaviour)
     machine: Count | Charge
     if style == "count":
-        machine, constants, made = plan_count(circuit, behaviour, engine, mem, tick_s)
+        machine, constants, made = plan_count(circuit, behaviour, mem, tick_s)
     else:
         machine, constants, made = plan_charge(circuit, mem, tick_s)
     return Port(
@@ -101,7 +101,7 @@ def series_below(limit_s: float) -> float:
 
 
 def choose_tick(circuit: Circuit, behaviour: Behaviour) -> tuple[float, str]:
-    """Choose the tick: the spec's, or the largest that keeps each window's step under a tenth of its spread."""
+    """Choose the tick: the spec's, or the largest that is within a tenth of each window's spread."""
     if circuit.port.tick_s is not None:
         return circuit.port.tick_s, f"tick {_ms(circuit.port.tick_s)}: fixed by the spec"
     spreads = [s for w in behaviour.windows if (s := _spread(w))]
@@ -111,9 +111,10 @@ def choose_tick(circuit: Circuit, behaviour: Behaviour) -> tuple[float, str]:
             f"tick {_ms(_PLAIN_S)}: no window has a length, so a pace that no hand can tell from at once",
         )
     tick = min(max(series_below(min(spreads) / 10), _FINEST_S), _COARSEST_S)
+    narrowest = _ms(min(spreads))
     return (
         tick,
-        f"tick {_ms(tick)}: of the 1-2-5 series, within a tenth of the narrowest window spread ({_ms(min(spreads))})",
+        f"tick {_ms(tick)}: of the 1-2-5 series, within a tenth of the narrowest window spread ({narrowest})",
     )
 
 
@@ -131,7 +132,7 @@ def _ms(seconds: float) -> str:
 
 def _style(circuit: Circuit, behaviour: Behaviour, mem: Memory) -> tuple[str, str]:
     wish = circuit.port.style
-    fits, why_not = fits_count(circuit, behaviour, mem)
+    fits, why_not = fits_count(behaviour)
     if wish == "charge":
         return "charge", "charge style: asked for by the spec"
     if wish == "count":
