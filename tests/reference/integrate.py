@@ -157,7 +157,10 @@ def _cut(lo: int, hi: int, row: Floats, flow: Callable[[NDArray[np.int64]], Floa
     """Return the first tick in (lo, hi] at which the row is negative; it is at *hi*."""
     while hi - lo > 1:
         ticks = np.unique(np.linspace(lo, hi, 65).astype(np.int64))
-        k = int(np.flatnonzero(flow(ticks[1:]) @ row < 0)[0]) + 1
+        negative = np.flatnonzero(flow(ticks[1:]) @ row < 0)
+        if not len(negative):
+            return hi  # within rounding of the level
+        k = int(negative[0]) + 1
         lo, hi = int(ticks[k - 1]), int(ticks[k])
     return hi
 
