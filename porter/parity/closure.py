@@ -23,7 +23,7 @@ from porter.circuit.engine import Ints, Mask
 from porter.circuit.values import Floats
 from porter.parity.model import Closure
 from porter.parity.twin import circuit_decides, circuit_moves
-from porter.port.memory import Memory
+from porter.port.memory import Memory, settled_mode
 from porter.port.model import U16, Charge, Port, State
 from porter.port.step import move_copies
 from porter.port.swift import stepper
@@ -48,14 +48,23 @@ class Walk:
     path: tuple[int, ...] | None
 
 
-def walk_one(mem: Memory, port: Port) -> Walk:
-    """Close the charge port of a one-capacitor circuit."""
-    table = _Table(mem, port)
+def open_walk(said: str) -> Walk:
+    """Return the closure of what was not walked, saying so."""
+    return Walk(Closure(0, 0, 0, None, False, 0, (said,)), 0.0, {}, None)
+
+
+def walk_one(mem: Memory, port: Port, clock: float = 1.0) -> Walk:
+    """Close the charge port of a one-capacitor circuit.
+
+    Args:
+        clock: how long a tick of the port's real clock is, in nominal ticks.
+    """
+    table = _Table(mem, port, port.tick_s * clock)
     seen, parents = table.reach()
     error = table.local_error(seen)
-    bound = table.bound(seen, error)
+    bound = table.bound(error)
     grey, wrong = table.compare(seen, bound.copies)
-    table.pending(seen, error, bound.copies, grey, wrong)
+    table.pending(error, bound.copies, grey, wrong)
     path = _path(parents, wrong, port) if wrong.any() else None
     scale = float(mem.scale_v[0])
     states, masks = int(seen.sum()), port.held_count
@@ -66,7 +75,8 @@ def walk_one(mem: Memory, port: Port) -> Walk:
         bound_v=bound.copies * scale if bound.holds else None,
         complete=bound.holds,
         differs=int(wrong.sum()),
-        said=tuple(_said(port, states, masks, bound, scale, int(grey.sum()), int(wrong.sum()))),
+        said=tuple(_said(states, masks, bound, scale, int(grey.sum()), int(wrong.sum()))),
+        band_s=table.band(bound.copies) if grey.any() else None,
     )
     return Walk(closure, bound.copies, table.edges, path)
 
@@ -83,7 +93,7 @@ class Bound:
     holds: bool
 
 
-def _said(port: Port, states: int, masks: int, bound: Bound, scale: float, grey: int, wrong: int) -> list[str]:
+def _said(states: int, masks: int, bound: Bound, scale: float, grey: int, wrong: int) -> list[str]:
     volts = bound.copies * scale
     said = [
         f"every state that the port can reach from power-on was visited: {states:,} states, {states * masks:,} steps"
@@ -94,18 +104,26 @@ def _said(port: Port, states: int, masks: int, bound: Bound, scale: float, grey:
             f"a tick adds at most {bound.rounding * scale * 1e6:.3g} µV and the slowest mode keeps {bound.slowest:.6f} of what was there"
         )
     else:
-        said.append("the copy's error has no bound that holds for ever: a mode neither shrinks it nor is copied exactly")
+        said.append(
+            "the copy's error has no bound that holds for ever: a mode neither shrinks it nor is copied exactly"
+        )
     if bound.late > 0:
         said.append(
             f"the circuit can flip inside a tick; the port then acts at the next one, which costs up to "
             f"{bound.late * scale * 1e3:.3g} mV once, and {bound.apart} ticks at least lie between two such flips"
         )
     if wrong:
-        said.append(f"{wrong:,} reachable situations decide differently although they are further from a threshold than the bound")
+        said.append(
+            f"{wrong:,} reachable situations decide differently although they are further from a threshold than the bound"
+        )
     else:
         said.append(
             "in every one of them the port decides as the circuit does, "
-            + (f"but for {grey:,} grey ones, whose deciding voltage is within the bound of its threshold" if grey else "none excepted")
+            + (
+                f"but for {grey:,} grey ones, whose deciding voltage is within the bound of its threshold"
+                if grey
+                else "none excepted"
+            )
         )
     return said
 
@@ -113,26 +131,24 @@ def _said(port: Port, states: int, masks: int, bound: Bound, scale: float, grey:
 class _Table:
     """Port and circuit tabulated over all copies, per (q, held)."""
 
-    def __init__(self, mem: Memory, port: Port) -> None:
+    def __init__(self, mem: Memory, port: Port, tick_s: float) -> None:
         assert isinstance(port.machine, Charge)
-        self.mem, self.port, self.machine = mem, port, port.machine
+        self.mem, self.port, self.machine, self.tick_s = mem, port, port.machine, tick_s
         self.masks = range(port.held_count)
         self.X = np.arange(_COPIES, dtype=np.int64)[:, None]
-        full = np.ones(_COPIES, np.int64)
         self.decided: dict[tuple[int, int], NDArray[np.uint8]] = {}
         self.truth: dict[tuple[int, int], Ints] = {}
         self.next_q: dict[tuple[int, int], NDArray[np.uint8]] = {}
         self.next_x: dict[tuple[int, int], Ints] = {}
         self.edges: dict[tuple[int, int], Floats] = {}
+        step = stepper(port)
         for q in (0, 1):
+            state = State(np.full(_COPIES, q, np.uint8), self.X)
             for h in self.masks:
-                state = State(np.full(_COPIES, q, np.uint8), self.X)
-                after, _ = stepper(port)(state, h * full)
+                after, _ = step(state, np.full(_COPIES, h, np.int64))
                 self.decided[q, h] = after.q
                 self.next_q[q, h], self.next_x[q, h] = after.q, after.regs[:, 0]
-                self.truth[q, h] = circuit_decides(mem, q, h, self.X).q
-                turns = np.flatnonzero(np.diff(self.truth[q, h]))
-                self.edges[q, h] = turns + 0.5
+                self.truth[q, h], self.edges[q, h] = _decisions(mem, q, h)
 
     def reach(self) -> tuple[NDArray[np.bool_], NDArray[np.int64]]:
         """Mark the reachable states, shape (2, copies), with how each was first come to.
@@ -142,7 +158,8 @@ class _Table:
         seen = np.zeros(2 * _COPIES, bool)
         parents = np.full(2 * _COPIES, -1, np.int64)
         nexts = [
-            np.concatenate([self.next_q[q, h] * np.int64(_COPIES) + self.next_x[q, h] for q in (0, 1)]) for h in self.masks
+            np.concatenate([self.next_q[q, h] * np.int64(_COPIES) + self.next_x[q, h] for q in (0, 1)])
+            for h in self.masks
         ]
         front = np.array([self.port.start_q * _COPIES + self.machine.start[0]])
         seen[front] = True
@@ -163,30 +180,28 @@ class _Table:
         errors = _Errors({}, {}, {}, {})
         for q in (0, 1):
             for h in self.masks:
-                arrive = self._arrivals(seen, q, h)
-                X = self.X[arrive]
-                lanes = circuit_moves(self.mem, q, h, X, self.port.tick_s)
-                true = self.mem.copies(lanes.x)[:, 0]
-                to = self._moved(q, h)[arrive]
-                late = lanes.flips > 0
-                errors.at[q, h], errors.late[q, h] = np.flatnonzero(arrive), late
-                errors.off[q, h] = np.abs(to - true)
-                errors.flips[q, h] = lanes.flips
+                at = np.flatnonzero(self._arrivals(seen, q, h))
+                true, flips = _one_tick(self.mem, q, h, self.tick_s)
+                errors.at[q, h], errors.flips[q, h] = at, flips[at]
+                errors.late[q, h] = flips[at] > 0
+                errors.off[q, h] = np.abs(self._moved(q, h)[at] - true[at])
         return errors
 
     def _arrivals(self, seen: Mask, q: int, h: int) -> Mask:
         """Copies from which a tick is lived through with the latch at q: as come in, or just flipped to."""
-        return np.asarray((seen[q] & (self.decided[q, h] == q)) | (seen[1 - q] & (self.decided[1 - q, h] == q)))
+        return np.asarray(
+            (seen[q] & (self.decided[q, h] == q)) | (seen[1 - q] & (self.decided[1 - q, h] == q))
+        )
 
     def _moved(self, q: int, h: int) -> Ints:
         return move_copies(self.machine.modes[q][h].moves[0], 0, self.X)
 
     def factor(self, q: int, h: int) -> float:
         """The share of an error that one tick of a mode leaves."""
-        a, b = (circuit_moves_frozen(self.mem, q, h, x, self.port.tick_s) for x in (0.25 * U16, 0.75 * U16))
+        a, b = (circuit_moves_frozen(self.mem, q, h, x, self.tick_s) for x in (0.25 * U16, 0.75 * U16))
         return float(abs(b - a) / (0.5 * U16))
 
-    def bound(self, seen: Mask, errors: "_Errors") -> Bound:
+    def bound(self, errors: "_Errors") -> Bound:
         """Find the error that no input sequence can exceed."""
         worst, rounding, slowest, holds = 0.5, 0.0, 0.0, True
         for key, off in errors.off.items():
@@ -202,13 +217,13 @@ class _Table:
             worst = max(worst, most / (1 - factor))
         if not any(late.any() for late in errors.late.values()):
             return Bound(worst, rounding, slowest, 0.0, 0, holds)
-        return self._late_bound(seen, errors, worst, rounding, slowest, holds)
+        return self._late_bound(errors, worst, rounding, slowest, holds)
 
     def _late_bound(
-        self, seen: Mask, errors: "_Errors", calm: float, rounding: float, slowest: float, holds: bool
+        self, errors: "_Errors", calm: float, rounding: float, slowest: float, holds: bool
     ) -> Bound:
         """Widen the bound by what flips inside ticks let in; see the module's head."""
-        apart = self._ticks_apart(seen, errors)
+        apart = self._ticks_apart(errors)
         left = slowest ** (apart - 1)
         before = after = late = calm
         for _ in range(400):
@@ -236,13 +251,13 @@ class _Table:
         to = self._moved(q, h)[near]
         worst = 0.0
         for shift in (-before, 0.0, before):
-            lanes = circuit_moves(self.mem, q, h, near[:, None] + shift, self.port.tick_s)
+            lanes = circuit_moves(self.mem, q, h, near[:, None] + shift, self.tick_s)
             flipped = lanes.flips > 0
             off = np.abs(to - self.mem.copies(lanes.x)[:, 0])
             worst = max(worst, float(off[flipped].max(initial=0.0)))
         return worst
 
-    def _ticks_apart(self, seen: Mask, errors: "_Errors") -> int:
+    def _ticks_apart(self, errors: "_Errors") -> int:
         """Fewest ticks from just after a flip inside a tick to the next one, over all inputs."""
         source = np.zeros((2, _COPIES), bool)
         front = np.zeros((2, _COPIES), bool)
@@ -261,6 +276,24 @@ class _Table:
             front = new
         return 4096
 
+    def band(self, bound: float) -> float:
+        """The most that a decision within the bound is early or late: the bound over the speed of crossing, seconds."""
+        worst = 0.0
+        for (q, h), edges in self.edges.items():
+            for mask in {0, h}:
+                for edge in edges:
+                    speed = abs(self._speed(q, mask, float(edge)))
+                    if speed > 1e-6:
+                        worst = max(worst, (bound + 1.0) / speed)
+        return worst
+
+    def _speed(self, q: int, h: int, copy: float) -> float:
+        """How fast the true voltage moves through a copy with latch and buttons kept, copies a second."""
+        mode = settled_mode(self.mem.engine, q, h, self.mem.volts(np.array([[copy]]))[0])
+        z = mode.Sinv[0] @ self.mem.volts(np.array([[copy]]))[0]
+        k = self.mem.kept[0]
+        return float((mode.S[0] @ (mode.drive[0] - mode.rate[0] * z))[k] / self.mem.scale_v[0])
+
     def compare(self, seen: Mask, bound: float) -> tuple[NDArray[np.bool_], NDArray[np.bool_]]:
         """Return grey and wrong (state, held) pairs, shape (2, copies, masks)."""
         grey = np.zeros((2, _COPIES, len(self.masks)), bool)
@@ -274,16 +307,15 @@ class _Table:
                 wrong[q, :, h] = seen[q] & ~near & (self.decided[q, h] != self.truth[q, h])
         return grey, wrong
 
-
     def pending(
-        self, seen: Mask, errors: "_Errors", bound: float, grey: NDArray[np.bool_], wrong: NDArray[np.bool_]
+        self, errors: "_Errors", bound: float, grey: NDArray[np.bool_], wrong: NDArray[np.bool_]
     ) -> None:
         """After a flip inside a tick: the port's next decision must bring it level, whatever is pressed then."""
         for (q, h), late in errors.late.items():
             if not late.any():
                 continue
             at = errors.at[q, h][late]
-            lanes = circuit_moves(self.mem, q, h, at[:, None], self.port.tick_s)
+            lanes = circuit_moves(self.mem, q, h, at[:, None], self.tick_s)
             to = self._moved(q, h)[at]
             for h2 in self.masks:
                 truth = lanes.copy()
@@ -295,6 +327,56 @@ class _Table:
                 grey[q, to[off & near], h2] = True
                 wrong[q, to[off & ~near], h2] = True
             wrong[q, to[errors.flips[q, h][late] > 1], 0] = True
+
+
+_GRID = np.unique(np.rint(np.linspace(0, U16, 258)).astype(np.int64))
+
+
+def _decisions(mem: Memory, q: int, h: int) -> tuple[Ints, Floats]:
+    """Return what the circuit decides at every copy, and between which copies that changes.
+
+    Decided on a grid; a stretch whose ends decide alike in the same mode decides so throughout,
+    since every guard is affine there; the other stretches are looked at copy by copy.
+    """
+    truth = np.empty(_COPIES, np.int64)
+    lanes = mem.lanes(q, h, _GRID[:, None])
+    mem.engine.resolve(lanes)
+    alike = (lanes.q[1:] == lanes.q[:-1]) & (lanes.conducts[1:] == lanes.conducts[:-1])
+    which = np.clip(np.searchsorted(_GRID, np.arange(_COPIES), side="right") - 1, 0, len(_GRID) - 2)
+    truth[:] = lanes.q[which]
+    open_ = np.flatnonzero(~alike[which])
+    if len(open_):
+        truth[open_] = circuit_decides(mem, q, h, open_[:, None]).q
+    truth[_GRID] = lanes.q
+    return truth, np.asarray(np.flatnonzero(np.diff(truth)) + 0.5, np.float64)
+
+
+def _one_tick(mem: Memory, q: int, h: int, tick_s: float) -> tuple[Floats, Ints]:
+    """Return where one tick takes the true voltage from every copy, in copies, and the flips on the way.
+
+    Between two grid copies that start in one mode and meet no event the map is affine, and
+    neither does any copy between them meet one: guards are affine in the copy at every instant.
+    The other stretches are run copy by copy.
+    """
+    lanes = mem.lanes(q, h, _GRID[:, None])
+    mem.engine.resolve(lanes, frozen=True)
+    first = lanes.conducts.copy()
+    calm = np.ones(len(_GRID), bool)
+
+    def watch(rows: Ints, _: object, __: object, at: Floats, length: Floats) -> None:
+        calm[rows] &= (at == 0) & (length >= tick_s)
+
+    mem.engine.run(lanes, tick_s, watcher=watch)
+    ends = mem.copies(lanes.x)[:, 0]
+    true = np.interp(np.arange(_COPIES), _GRID, ends)
+    flips = np.zeros(_COPIES, np.int64)
+    quiet = calm[1:] & calm[:-1] & (first[1:] == first[:-1])
+    which = np.clip(np.searchsorted(_GRID, np.arange(_COPIES), side="right") - 1, 0, len(_GRID) - 2)
+    open_ = np.flatnonzero(~quiet[which])
+    if len(open_):
+        single = circuit_moves(mem, q, h, open_[:, None], tick_s)
+        true[open_], flips[open_] = mem.copies(single.x)[:, 0], single.flips
+    return true, flips
 
 
 @dataclass(frozen=True, slots=True)

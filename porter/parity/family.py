@@ -13,6 +13,7 @@ The comparison of edges by their number is a Skorokhod distance on binary traces
 
 from collections.abc import Iterator
 from dataclasses import dataclass
+from itertools import pairwise
 from typing import Any, Protocol
 
 import numpy as np
@@ -21,6 +22,7 @@ from numpy.typing import NDArray
 from porter.behaviour.model import Behaviour
 from porter.circuit.engine import Engine, Ints
 from porter.circuit.values import Floats, columns
+from porter.parity.model import FamilyCheck
 from porter.port.model import Port
 from porter.port.step import start
 from porter.port.swift import stepper
@@ -49,11 +51,12 @@ class Machine(Protocol):
         """Advance by a tick; returns the state and the latch of each lane."""
 
 
-@dataclass(frozen=True, slots=True)
 class PortMachine:
     """A port as a machine."""
 
-    port: Port
+    def __init__(self, port: Port) -> None:
+        self.port, self.start_q = port, port.start_q
+        self._step = stepper(port)
 
     @property
     def tick_s(self) -> float:
@@ -71,7 +74,7 @@ class PortMachine:
 
     def step(self, state: Any, held: Ints) -> tuple[Any, Ints]:
         """Advance by a tick."""
-        after, _ = stepper(self.port)(state, held)
+        after, _ = self._step(state, held)
         return after, after.q.astype(np.int64)
 
 
@@ -85,29 +88,6 @@ class Presses:
 
     def __len__(self) -> int:
         return len(self.masks)
-
-
-@dataclass(frozen=True, slots=True)
-class FamilyCheck:
-    """What came of it.
-
-    Args:
-        sequences, units, clocks: how many of each were run.
-        always, never, either: edges in each band, over all sequences.
-        violations: sequences in which the port left the first two bands.
-        witness: held masks per tick of the shortest such sequence, None = none.
-        said: in plain words.
-    """
-
-    sequences: int
-    units: int
-    clocks: tuple[float, ...]
-    always: int
-    never: int
-    either: int
-    violations: int
-    witness: tuple[int, ...] | None
-    said: str
 
 
 def check_family(
@@ -134,20 +114,24 @@ def check_family(
     first, last, share = _bands(times)
     clocks = tuple(sorted({1 - circuit.port.clock, 1.0, 1 + circuit.port.clock}))
     wrong = np.zeros(len(presses), bool)
-    for clock in clocks:
-        edges = machine_edges(machine, presses, clock)
+    runs = machine_edges(machine, presses, np.array(clocks))
+    for clock, edges in zip(clocks, runs, strict=True):
         late = 2 * machine.tick_s * clock + 1e-12
-        wrong |= _violates(edges, first, last, share, machine.tick_s * clock + early_s, late, presses, machine.tick_s)
-    seen = np.isfinite(first)
+        wrong |= _violates(
+            edges, first, last, share, machine.tick_s * clock + early_s, late, presses, machine.tick_s
+        )
     always, either = int((share == 1.0).sum()), int(((share > 0) & (share < 1)).sum())
     witness = _shortest(presses, wrong) if wrong.any() else None
-    never = int((~seen).any(axis=1).sum())
     said = (
         f"{len(presses):,} press sequences were run through {len(rows)} units that span the family and through the port with its "
         f"clock at {', '.join(f'{c:.3g}' for c in clocks)} of nominal: {always:,} edges that every unit has, {either:,} that some have; "
-        + (f"the port left these bands in {int(wrong.sum())} sequences" if wrong.any() else "the port kept within them")
+        + (
+            f"the port left these bands in {int(wrong.sum())} sequences"
+            if wrong.any()
+            else "the port kept within them"
+        )
     )
-    return FamilyCheck(len(presses), len(rows), clocks, always, never, either, int(wrong.sum()), witness, said)
+    return FamilyCheck(len(presses), len(rows), clocks, always, either, int(wrong.sum()), witness, said)
 
 
 def units(circuit: Circuit, behaviour: Behaviour) -> Floats:
@@ -182,7 +166,7 @@ def lengths(behaviour: Behaviour, machine: Machine) -> Ints:
     found |= {max(2, round(2.5 * longest / tick)), max(2, round(_slow(behaviour) / tick))}
     ordered = sorted(found)
     while len(ordered) > _LENGTHS:
-        ratios = [b / a for a, b in zip(ordered, ordered[1:], strict=False)]
+        ratios = [b / a for a, b in pairwise(ordered)]
         del ordered[1 + int(np.argmin(ratios[:-1]))]
     return np.array(ordered, np.int64)
 
@@ -267,34 +251,42 @@ def _from(start_q: int, begin: Ints, times: Floats) -> Floats:
     return out
 
 
-def machine_edges(machine: Machine, presses: Presses, clock: float) -> Floats:
-    """Run a machine whose tick is *clock* nominal ticks; returns edge times, shape (sequences, MOST_EDGES)."""
-    ends = np.cumsum(presses.ticks, axis=1)
-    total = int(np.ceil(ends[:, -1].max() / clock))
-    state = machine.begin(len(presses))
-    times = np.full((len(presses), MOST_EDGES), np.inf)
-    used = np.zeros(len(presses), np.int64)
-    last: Ints | None = None
-    rows = np.arange(len(presses))
-    for tick in range(total):
+def machine_edges(machine: Machine, presses: Presses, clocks: Floats) -> Floats:
+    """Run a machine through every sequence with every clock, all beside each other.
+
+    Args:
+        clocks: shape (C,), how long a real tick is in nominal ticks.
+
+    Returns:
+        Edge times in real seconds, shape (C, sequences, MOST_EDGES), inf = none.
+    """
+    many, count = len(presses), len(clocks) * len(presses)
+    ends = np.tile(np.cumsum(presses.ticks, axis=1), (len(clocks), 1))
+    masks, clock = np.tile(presses.masks, (len(clocks), 1)), np.repeat(clocks, many)
+    state = machine.begin(count)
+    times = np.full((count, MOST_EDGES), np.inf)
+    used = np.zeros(count, np.int64)
+    rows = np.arange(count)
+    last = np.full(count, _first(machine))
+    segment = np.zeros(count, np.int64)
+    for tick in range(int(np.ceil(ends[:, -1].max() / clocks.min()))):
         now = tick * clock
-        segment = np.minimum((ends <= now + 1e-9).sum(axis=1), ends.shape[1] - 1)
-        state, q = machine.step(state, presses.masks[rows, segment])
-        turned = np.zeros(len(q), bool) if last is None else q != last
-        if last is None:
-            turned = q != _first(machine)
-        live = turned & (used < MOST_EDGES) & (now <= ends[:, -1])
-        times[live, used[live]] = now * machine.tick_s
-        used[live] += 1
+        while True:  # segments of length 0 are stepped over
+            over = (ends[rows, segment] <= now + 1e-9) & (segment < ends.shape[1] - 1)
+            if not over.any():
+                break
+            segment += over
+        state, q = machine.step(state, masks[rows, segment])
+        turned = np.flatnonzero((q != last) & (used < MOST_EDGES) & (now <= ends[:, -1]))
+        times[turned, used[turned]] = now[turned] * machine.tick_s
+        used[turned] += 1
         last = q
-    return times
+    return times.reshape(len(clocks), many, MOST_EDGES)
 
 
 def _first(machine: Machine) -> int:
-    begin = getattr(machine, "start_q", None)
-    if begin is not None:
-        return int(begin)
-    return int(machine.port.start_q) if isinstance(machine, PortMachine) else 0
+    """The level that a machine shows before its first tick; low where it doesn't say."""
+    return int(getattr(machine, "start_q", 0))
 
 
 def _bands(times: Floats) -> tuple[Floats, Floats, Floats]:
@@ -337,5 +329,3 @@ def _shortest(presses: Presses, wrong: NDArray[np.bool_]) -> tuple[int, ...]:
     for mask, ticks in zip(presses.masks[best], presses.ticks[best], strict=True):
         out += [int(mask)] * int(ticks)
     return tuple(out)
-
-

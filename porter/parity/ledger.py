@@ -2,6 +2,7 @@
 
 from collections.abc import Iterator
 from dataclasses import dataclass
+from itertools import pairwise
 
 import numpy as np
 
@@ -11,7 +12,7 @@ from porter.circuit.engine import Engine, Ints
 from porter.circuit.family import FAMILIES, figures
 from porter.circuit.values import Floats
 from porter.parity.model import LedgerRow, RowVerdict
-from porter.port.bench import Bench, bench, output_after, re_arm, settle, shortest_press
+from porter.port.bench import Bench, bench, output_after, re_arm, settle, shortest_press, stays
 from porter.port.memory import Memory, frozen_rest
 from porter.port.model import U16, Charge, Port
 from porter.spec.model import Circuit
@@ -59,6 +60,8 @@ def _rows(circuit: Circuit, behaviour: Behaviour, port: Port, mem: Memory) -> It
     yield _shortest(circuit, behaviour, port, on)
     for kind in _WINDOWS:
         yield _window_row(circuit, behaviour, port, on, kind)
+    if behaviour.timed:
+        yield _timed_row(circuit, behaviour, port, on)
     yield _chatter(circuit, port, mem.engine)
     yield from _supply_rows(circuit, port)
 
@@ -219,6 +222,18 @@ def _window_row(circuit: Circuit, behaviour: Behaviour, port: Port, on: Bench, k
     return Seen(kind, "; ".join(said), "; ".join(ports), "differs" if wrong else "same")
 
 
+def _timed_row(circuit: Circuit, behaviour: Behaviour, port: Port, on: Bench) -> Seen:
+    said, ports, wrong = [], [], False
+    for timed in behaviour.timed:
+        button = next(i for i, b in enumerate(circuit.buttons) if b.name == timed.button)
+        ticks = stays(on, button, _LEVELS.index(timed.output))
+        seconds = None if ticks is None else ticks * port.tick_s
+        said.append(f"{timed.output} after a tap of {timed.button} for {_band_text(timed.guaranteed)}")
+        ports.append(f"{timed.button} {time_text(seconds)}, clock ±{circuit.port.clock * 100:.3g} %")
+        wrong |= not inside(timed.guaranteed, seconds, circuit.port.clock, port.tick_s)
+    return Seen("timed-output", "; ".join(said), "; ".join(ports), "differs" if wrong else "same")
+
+
 def inside(family: Band, seconds: float | None, clock: float, tick_s: float) -> bool:
     """True where a port's window lies between that of two allowed units with its clock at either end.
 
@@ -269,7 +284,7 @@ def _circuit_edges(engine: Engine, q: int, button: int) -> int:
 
     engine.run(lanes, _bounces(button)[0][0])
     changes = [*_bounces(button), (1.0, 0)]
-    for (at, held), (until, _) in zip(changes, changes[1:], strict=False):
+    for (at, held), (until, _) in pairwise(changes):
         engine.press(lanes, held, listen)
         engine.run(lanes, until - at, listener=listen)
     return len(edges)

@@ -5,13 +5,12 @@ arrays, and a port of one capacitor is stepped once from each of its 2 x 65 536
 states and looked up from then on.  Tests hold the two equal.
 """
 
-from collections.abc import Callable
-from functools import lru_cache
+from collections.abc import Callable, Iterator
 
 import numpy as np
 from numpy.typing import NDArray
 
-from porter.port.model import U16, Charge, ChargeMode, Port, State, Test
+from porter.port.model import U16, Charge, ChargeMode, Move, Port, State, Test
 from porter.port.step import step
 
 Ints = NDArray[np.int64]
@@ -21,9 +20,25 @@ MOST_TABLES = 16
 _COPIES = U16 + 1
 
 
-@lru_cache(maxsize=4)
+_made: list[tuple[Port, Stepper]] = []
+
+
 def stepper(port: Port) -> Stepper:
-    """Return a function that steps a batch as `step(port, state, held)` does."""
+    """Return a function that steps a batch as `step(port, state, held)` does.
+
+    The last few are kept, found again by identity: hashing a port's thousand numbers would cost
+    more than a step.
+    """
+    for known, move in _made:
+        if known is port:
+            return move
+    move = _stepper(port)
+    _made.insert(0, (port, move))
+    del _made[4:]
+    return move
+
+
+def _stepper(port: Port) -> Stepper:
     if not isinstance(port.machine, Charge) or any(m.kind == "mix" for m in _moves(port.machine)):
         return lambda state, held: step(port, state, held)
     gather = _Gather(port, port.machine)
@@ -40,7 +55,7 @@ def decider(port: Port) -> Callable[[State, NDArray[np.integer]], NDArray[np.uin
     return lambda state, held: step(port, state, held)[0].q
 
 
-def _moves(machine: Charge):  # type: ignore[no-untyped-def]
+def _moves(machine: Charge) -> Iterator[Move]:
     return (move for row in machine.modes for mode in row for move in mode.moves)
 
 
@@ -55,6 +70,10 @@ class _Gather:
         self.rate = np.array([[_rate(m) for m in mode.moves] for mode in modes], np.int64)
         self.up = np.array([[m.only != "down" for m in mode.moves] for mode in modes], bool)
         self.down = np.array([[m.only != "up" for m in mode.moves] for mode in modes], bool)
+        self.flip = np.array([[U16 * m.mirror for m in mode.moves] for mode in modes], np.int64)
+        self.affine = np.array([[m.kind in ("scale", "drain") for m in mode.moves] for mode in modes], bool)
+        self.shift = np.array([[m.shift for m in mode.moves] for mode in modes], np.int64)
+        self.add = np.array([[m.add for m in mode.moves] for mode in modes], np.int64)
         self.tests = [_Tests(modes, name, len(machine.start)) for name in ("force", "flips", "blocks")]
 
     def decide(self, state: State, held: NDArray[np.integer]) -> NDArray[np.uint8]:
@@ -71,16 +90,27 @@ class _Gather:
     def __call__(self, state: State, held: NDArray[np.integer]) -> tuple[State, NDArray[np.uint8]]:
         q = self.decide(state, held)
         key = q.astype(np.int64) * self.masks + held
-        X, end = state.regs, self.end[key]
+        X, end = state.regs ^ self.flip[key], self.end[key]
         far = end - X
         by = (np.abs(far) * self.rate[key] + 32768) >> 16
-        regs = X + np.where((far > 0) & self.up[key], by, np.where((far < 0) & self.down[key], -by, 0))
-        return State(q, regs), self.answer[q, held]
+        to = np.where(far > 0, X + by, X - by)
+        if self.affine.any():
+            to = np.where(self.affine[key], self._affine(key, X), to)
+        stays = ~np.where(far > 0, self.up[key], self.down[key]) | ((far == 0) & ~(self.up[key] & self.down[key]))
+        regs = np.where(stays, X, to)
+        return State(q, regs ^ self.flip[key]), self.answer[q, held]
+
+    def _affine(self, key: Ints, X: Ints) -> Ints:
+        """Scale and drain: a drain has no rate, so its shift tells them apart."""
+        shift = self.shift[key]
+        kept = np.where(shift > 0, X - (X >> shift), X * self.rate[key] >> 16)
+        return np.asarray(kept + self.add[key])
 
 
-def _rate(move) -> int:  # type: ignore[no-untyped-def]
+def _rate(move: Move) -> int:
     """Every plain move as a number of 65536ths: a shift by s is exactly 65536 >> s of them."""
-    return {"hold": 0, "jump": 65536, "shift": 65536 >> move.shift, "multiply": move.rate}[move.kind]
+    plain = {"hold": 0, "jump": 65536, "shift": 65536 >> move.shift}
+    return plain.get(move.kind, move.rate)
 
 
 class _Tests:
@@ -126,7 +156,7 @@ class _Table:
 
     def decide(self, state: State, held: NDArray[np.integer]) -> NDArray[np.uint8]:
         """Return the latch after deciding: moving doesn't change it."""
-        return (self.next[held, self.codes(state)] >> 16).astype(np.uint8)
+        return np.asarray(self.next[held, self.codes(state)] >> 16, np.uint8)
 
     def __call__(self, state: State, held: NDArray[np.integer]) -> tuple[State, NDArray[np.uint8]]:
         to = self.next[held, self.codes(state)]

@@ -27,6 +27,7 @@ LEDGER_ROWS = (
     "re-arm-after-tap",
     "re-arm-after-hold",
     "stray-gap",
+    "timed-output",
     "output-chatter",
     "supply-extremes",
     "supply-loss",
