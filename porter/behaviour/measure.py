@@ -17,6 +17,8 @@ from porter.circuit.network import Mode
 from porter.circuit.values import Floats
 
 LOW, HIGH, OSCILLATES = 0, 1, 2
+#: A quick press of a person, seconds (common practice; fast tapping leaves about as much).
+QUICK_S = 0.04
 #: (button index, output that the press would change, kind)
 WindowKey = tuple[int, int, WindowKind]
 #: (held mask, settled output, what is compared)
@@ -34,7 +36,7 @@ class Measures:
         period_s: the same keys, period of the oscillation.
         windows: seconds, inf = never, shape (U,).
         margins: volts, shape (U,).
-        timed: ``timed[button, q]``: seconds that the output stays at q by itself after a tap that
+        timed: ``timed[button, q]``: seconds that the output stays at q by itself after a quick press that
             turned it there, inf = it stays.
     """
 
@@ -178,10 +180,19 @@ def _windows(
 
 
 def _stays(engine: Engine, rest: Lanes, ok: Mask, mask: int) -> Floats:
-    """How long the output stays turned after a tap from rest, inf = until another press, shape (U,)."""
-    lanes = after_press(engine, rest, mask, held=False)
+    """How long the output stays turned after a quick press from rest, inf = until another press, shape (U,).
+
+    Counted from where it turns; the press lasts `QUICK_S`, or until it acts if that takes longer.
+    """
+    lanes, when = hold_until_flip(engine, rest, mask)
     turned = ok & (lanes.q != rest.q) & ~lanes.busy
-    return np.where(turned, first_flip(engine, lanes, np.inf), np.inf)
+    q = lanes.q.copy()
+    more = np.where(np.isfinite(when), np.maximum(QUICK_S - when, 0.0), 0.0)
+    engine.run(lanes, more)
+    turned &= lanes.q == q
+    engine.press(lanes, 0)
+    at_once = lanes.q != q
+    return np.where(turned, more + np.where(at_once, 0.0, first_flip(engine, lanes, np.inf)), np.inf)
 
 
 def after_press(engine: Engine, rest: Lanes, mask: int, held: bool) -> Lanes:

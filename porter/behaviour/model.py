@@ -77,7 +77,7 @@ class Window:
 
 @dataclass(frozen=True, slots=True)
 class Timed:
-    """After a tap of a button the output stays at `output` by itself for this long, then returns."""
+    """After a quick press (40 ms) of a button the output stays at `output` by itself for this long, then returns."""
 
     button: str
     output: Level

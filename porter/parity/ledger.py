@@ -6,7 +6,7 @@ from itertools import pairwise
 
 import numpy as np
 
-from porter.behaviour.measure import release_in_order
+from porter.behaviour.measure import QUICK_S, release_in_order
 from porter.behaviour.model import Band, Behaviour, Level, Window, WindowKind
 from porter.circuit.engine import Engine, Ints
 from porter.circuit.family import FAMILIES, figures
@@ -226,9 +226,9 @@ def _timed_row(circuit: Circuit, behaviour: Behaviour, port: Port, on: Bench) ->
     said, ports, wrong = [], [], False
     for timed in behaviour.timed:
         button = next(i for i, b in enumerate(circuit.buttons) if b.name == timed.button)
-        ticks = stays(on, button, _LEVELS.index(timed.output))
+        ticks = stays(on, button, _LEVELS.index(timed.output), QUICK_S)
         seconds = None if ticks is None else ticks * port.tick_s
-        said.append(f"{timed.output} after a tap of {timed.button} for {_band_text(timed.guaranteed)}")
+        said.append(f"{timed.output} after a quick press of {timed.button} for {_band_text(timed.guaranteed)}")
         ports.append(f"{timed.button} {time_text(seconds)}, clock ±{circuit.port.clock * 100:.3g} %")
         wrong |= not inside(timed.guaranteed, seconds, circuit.port.clock, port.tick_s)
     return Seen("timed-output", "; ".join(said), "; ".join(ports), "differs" if wrong else "same")

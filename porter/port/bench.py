@@ -145,20 +145,19 @@ def is_charge(port: Port) -> bool:
     return isinstance(port.machine, Charge)
 
 
-def stays(bench: Bench, button: int, q: int) -> int | None:
-    """Ticks that the output stays at *q* by itself after a tap from rest turned it there, None = for good."""
+def stays(bench: Bench, button: int, q: int, quick_s: float) -> int | None:
+    """Ticks that the output stays at *q* by itself after a quick press from rest turned it there, None = for good."""
     press = shortest_press(bench, button, 1 - q)
     state = bench.rest[1 - q]
     if state is None or press is None:
         return None
     step = stepper(bench.port)
-    for _ in range(press):
-        state, _ = step(state, np.array([1 << button]))
+    held = max(press, round(quick_s / bench.port.tick_s))
     for ticks in range(1, _LONGEST):
-        after, _ = step(state, np.array([0]))
-        if after.q[0] != q:
-            return ticks
-        if (after.regs == state.regs).all():
+        after, _ = step(state, np.array([1 << button if ticks <= held else 0]))
+        if ticks > press and after.q[0] != q:
+            return ticks - press
+        if ticks > held and (after.regs == state.regs).all():
             return None
         state = after
     return None
