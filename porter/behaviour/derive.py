@@ -231,22 +231,25 @@ def margin_place(circuit: Circuit, key: tuple[int, int, str]) -> str:
     return f"{held + ' held' if held else 'no button held'}, output {_LEVELS[q]}: {pin} {side[:-1]} its level"
 
 
-def _levels(engine: Engine) -> Iterator[NamedLevel]:
-    """Voltages worth reading: thresholds, and every node at rest in both states (nominal)."""
-
-    def exact(volts: float) -> Band:
-        return Band(volts, volts, volts)
-
+def _levels(circuit: Circuit, engine: Engine, drawn: Population) -> Iterator[NamedLevel]:
+    """Voltages worth reading: the timer's levels as published, and every node at rest over the part tolerances."""
     supply = float(engine.supply[0])
     cols = engine.columns
-    for pin, key in (("trigger", "trigger_ratio"), ("threshold", "threshold_ratio")):
-        yield NamedLevel(f"{pin} level", exact(supply * float(cols.nominal[cols.index(f"timer.{key}")])))
-    yield NamedLevel("reset level", exact(float(cols.nominal[cols.index("timer.reset_level")])))
+    for pin, key, unit in (
+        ("trigger", "trigger_ratio", supply),
+        ("threshold", "threshold_ratio", supply),
+        ("reset", "reset_level", 1.0),
+    ):
+        k = cols.index(f"timer.{key}")
+        yield NamedLevel(f"{pin} level", Band(*(float(v[k]) * unit for v in (cols.nominal, cols.least, cols.most))))
+    units = Engine(circuit, drawn.rows, cols)
     for q in (0, 1):
-        lanes, ok = engine.rest(q)
+        lanes, ok = units.rest(q)
         if ok[0]:
-            for name, volts in zip(engine.topo.nodes, engine.volts(lanes)[0], strict=True):
-                yield NamedLevel(f"{name} at rest, output {_LEVELS[q]}", exact(float(volts)))
+            volts = units.volts(lanes)
+            volts = np.where(np.abs(volts) < 1e-9 * supply, 0.0, volts)  # rounding is no voltage
+            for name, column in zip(units.topo.nodes, volts.T, strict=True):
+                yield NamedLevel(f"{name} at rest, output {_LEVELS[q]}", _band(column, column))
 
 
 def _notes(engine: Engine, drawn: Population, published: Population) -> Iterator[str]:
