@@ -62,7 +62,7 @@ def derive(circuit: Circuit) -> Behaviour:
         power_on=_power_on(engine),
         windows=tuple(_windows(circuit, engine, nominal, drawn, published)),
         margins=tuple(_margins(circuit, engine, nominal, drawn, published)),
-        levels=tuple(_levels(engine)),
+        levels=tuple(_levels(engine, drawn)),
         findings=(),
         notes=tuple(_notes(engine, drawn, published)),
         timed=tuple(_timed(circuit, nominal, drawn, published)),
@@ -231,7 +231,7 @@ def margin_place(circuit: Circuit, key: tuple[int, int, str]) -> str:
     return f"{held + ' held' if held else 'no button held'}, output {_LEVELS[q]}: {pin} {side[:-1]} its level"
 
 
-def _levels(circuit: Circuit, engine: Engine, drawn: Population) -> Iterator[NamedLevel]:
+def _levels(engine: Engine, drawn: Population) -> Iterator[NamedLevel]:
     """Voltages worth reading: the timer's levels as published, and every node at rest over the part tolerances."""
     supply = float(engine.supply[0])
     cols = engine.columns
@@ -242,7 +242,7 @@ def _levels(circuit: Circuit, engine: Engine, drawn: Population) -> Iterator[Nam
     ):
         k = cols.index(f"timer.{key}")
         yield NamedLevel(f"{pin} level", Band(*(float(v[k]) * unit for v in (cols.nominal, cols.least, cols.most))))
-    units = Engine(circuit, drawn.rows, cols)
+    units = Engine(engine.circuit, drawn.rows, cols)
     for q in (0, 1):
         lanes, ok = units.rest(q)
         if ok[0]:
