@@ -164,7 +164,13 @@ static void board_rest(void)
     sei();
     GIMSK = 0u;
     wdt_enable(WDTO_1S);
-    board_seen = board_ticks; /* time stood still, and nothing was due */
+    /* The pins are read next; the tick after that comes a whole period later, or a press seen in so
+     * many ticks in a row would count too early.
+     */
+    TCNT0 = 0u;
+    GTCCR = (1u << PSR0);
+    TIFR = (1u << OCF0A);
+    board_seen = board_ticks;
 }
 
 #elif defined(PORTER_BOARD_NRF51)
