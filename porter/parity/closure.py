@@ -93,6 +93,13 @@ class Bound:
     holds: bool
 
 
+def _volts(volts: float) -> str:
+    for unit, size in (("V", 1.0), ("mV", 1e-3)):
+        if volts >= size:
+            return f"{volts / size:.3g} {unit}"
+    return f"{volts * 1e6:.3g} µV"
+
+
 def _said(states: int, masks: int, bound: Bound, scale: float, grey: int, wrong: int) -> list[str]:
     volts = bound.copies * scale
     said = [
@@ -100,8 +107,8 @@ def _said(states: int, masks: int, bound: Bound, scale: float, grey: int, wrong:
     ]
     if bound.holds:
         said.append(
-            f"the copy stays within {volts * 1e3:.3g} mV of the true voltage for every input sequence of any length: "
-            f"a tick adds at most {bound.rounding * scale * 1e6:.3g} µV and the slowest mode keeps {bound.slowest:.6f} of what was there"
+            f"the copy stays within {_volts(volts)} of the true voltage for every input sequence of any length: "
+            f"a tick adds at most {_volts(bound.rounding * scale)} and the slowest mode keeps {bound.slowest:.6f} of what was there"
         )
     else:
         said.append(
@@ -110,7 +117,7 @@ def _said(states: int, masks: int, bound: Bound, scale: float, grey: int, wrong:
     if bound.late > 0:
         said.append(
             f"the circuit can flip inside a tick; the port then acts at the next one, which costs up to "
-            f"{bound.late * scale * 1e3:.3g} mV once, and {bound.apart} ticks at least lie between two such flips"
+            f"{_volts(bound.late * scale)} once, and {bound.apart} ticks at least lie between two such flips"
         )
     if wrong:
         said.append(

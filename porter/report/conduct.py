@@ -93,7 +93,24 @@ def windows_section(behaviour: Behaviour, tick_s: float) -> Section:
         mine = tuple(w for w in behaviour.windows if w.button == name)
         blocks += _windows_figures(f"windows-{k}", name, mine, tick_s)
     blocks.append(windows_table(behaviour.windows))
+    if behaviour.timed:
+        blocks.append(_timed_table(behaviour))
     return Section("windows", "Windows", tuple(blocks))
+
+
+def _timed_table(behaviour: Behaviour) -> Table:
+    rows = tuple(
+        row(
+            t.button,
+            t.output,
+            seconds(t.seconds.nominal),
+            band_range(t.seconds, "s"),
+            band_range(t.guaranteed, "s"),
+        )
+        for t in behaviour.timed
+    )
+    heads = ("Button", "Output", "Nominal", "Over part tolerances", "Guaranteed")
+    return Table("Timed outputs: how long the output stays after a quick press (40 ms)", heads, rows)
 
 
 def _windows_figures(key: str, button: str, windows: Sequence[Window], tick_s: float) -> list[Figure]:

@@ -114,6 +114,7 @@ def parity_section(parity: Parity) -> Section:
         row("steps that decide differently", _nought(closure.differs)),
         row("grey steps (within the bound of a threshold)", count(closure.grey)),
         row("a capacitor copy's distance from the true voltage, at most", bound),
+        row("the output turns earlier or later for it by, at most", _band(closure.band_s, closure.spread_s)),
         row("walk complete", complete),
     )
     literal = (
@@ -130,11 +131,57 @@ def parity_section(parity: Parity) -> Section:
     )
     blocks: list[Block] = [Items("In words", said)] if said else []
     blocks += [
+        *_clock_blocks(parity),
+        *_family_blocks(parity),
         Text(sampling),
         Table("Closure: the walk over every reachable state", ("Item", "Found"), walk),
         Table("Sequences: every one run, circuit against port", ("Item", "Found"), literal),
     ]
     return Section("parity", "What was proved", tuple(blocks))
+
+
+def _band(band_s: float | None, spread_s: float | None) -> str:
+    """How far grey decisions reach in time, beside how far apart allowed units are."""
+    if band_s is None:
+        return "nothing is grey"
+    if not spread_s or not band_s:
+        return seconds(band_s)
+    return f"{seconds(band_s)}; two allowed units differ by {seconds(spread_s)} in their narrowest window"
+
+
+def _clock_blocks(parity: Parity) -> list[Block]:
+    """The walk with the clock at the ends of its tolerance."""
+    if not parity.clocks:
+        return []
+    rows = tuple(
+        row(
+            f"tick {clock:.4g} of nominal",
+            count(c.states),
+            _nought(c.differs),
+            count(c.grey),
+            volts(c.bound_v) if c.bound_v is not None else "none",
+            _band(c.band_s, None),
+        )
+        for clock, c in parity.clocks
+    )
+    heads = ("Clock", "States", "Decide differently", "Grey", "Bound", "In time")
+    return [Table("The same walk with the controller's clock at the ends of its tolerance", heads, rows)]
+
+
+def _family_blocks(parity: Parity) -> list[Block]:
+    """The port against units that span the family."""
+    family = parity.family
+    if family is None:
+        return []
+    rows = (
+        row("press sequences", count(family.sequences)),
+        row("units that span the family", count(family.units)),
+        row("clocks, in nominal ticks", ", ".join(f"{c:.4g}" for c in family.clocks)),
+        row("output edges that every unit has (always)", count(family.always)),
+        row("output edges that some units have (either)", count(family.either)),
+        row("sequences in which the port does what no unit does", _nought(family.violations)),
+    )
+    return [Table("Family: what every allowed unit does, the port must do", ("Item", "Found"), rows)]
 
 
 def _nought(number: int) -> Cell:

@@ -11,7 +11,7 @@ from typing import TYPE_CHECKING, Any
 
 from porter.behaviour.model import Band, Behaviour, HeldRow, Margin, Window
 from porter.findings import Finding
-from porter.parity.model import LedgerRow, Parity
+from porter.parity.model import Closure, FamilyCheck, LedgerRow, Parity
 
 if TYPE_CHECKING:
     from porter.job import Job
@@ -61,6 +61,15 @@ def derived(behaviour: Behaviour) -> Object:
         ],
         "power_on": {"output": behaviour.power_on.output, "why": behaviour.power_on.why},
         "windows": [_window(w) for w in behaviour.windows],
+        "timed": [
+            {
+                "button": t.button,
+                "output": t.output,
+                "seconds": band(t.seconds),
+                "guaranteed": band(t.guaranteed),
+            }
+            for t in behaviour.timed
+        ],
         "margins": [_margin(m) for m in behaviour.margins],
         "levels": [{"name": level.name, "volts": band(level.volts)} for level in behaviour.levels],
         "findings": findings(behaviour.findings),
@@ -102,15 +111,9 @@ def proved(parity: Parity) -> Object:
         "statement": parity.statement,
         "style": parity.style,
         "tick_s": figure(parity.tick_s),
-        "closure": {
-            "states": closure.states,
-            "steps": closure.steps,
-            "grey": closure.grey,
-            "differs": closure.differs,
-            "bound_v": figure(closure.bound_v),
-            "complete": closure.complete,
-            "said": list(closure.said),
-        },
+        "closure": _closure(closure),
+        "clocks": [{"clock": figure(clock), **_closure(at)} for clock, at in parity.clocks],
+        "family": _family(parity.family),
         "sequences": {
             "depth": tried.depth,
             "count": tried.count,
@@ -120,6 +123,34 @@ def proved(parity: Parity) -> Object:
         },
         "ledger": [_row(row) for row in parity.ledger],
         "counterexample": _changes(parity.counterexample),
+    }
+
+
+def _closure(closure: Closure) -> Object:
+    return {
+        "states": closure.states,
+        "steps": closure.steps,
+        "grey": closure.grey,
+        "differs": closure.differs,
+        "bound_v": figure(closure.bound_v),
+        "band_s": figure(closure.band_s),
+        "spread_s": figure(closure.spread_s),
+        "complete": closure.complete,
+        "said": list(closure.said),
+    }
+
+
+def _family(family: FamilyCheck | None) -> Object | None:
+    if family is None:
+        return None
+    return {
+        "sequences": family.sequences,
+        "units": family.units,
+        "clocks": [figure(c) for c in family.clocks],
+        "always": family.always,
+        "either": family.either,
+        "violations": family.violations,
+        "said": family.said,
     }
 
 

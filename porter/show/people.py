@@ -104,9 +104,12 @@ def _show_logic(out: Console, behaviour: Behaviour) -> None:
 def _show_figures(out: Console, behaviour: Behaviour) -> None:
     bands = ("nominal", "with these parts", "guaranteed")
     show_table(out, "Time windows", ("button", "output", "window", *bands), _windows(behaviour))
+    if behaviour.timed:
+        timed = [(t.button, t.output, *_three(t.seconds, t.guaranteed, "s")) for t in behaviour.timed]
+        show_table(out, "Timed outputs (after a press of 40 ms)", ("button", "output", *bands), timed)
     show_table(out, "Margins (negative: on the wrong side)", ("where", *bands), _margins(behaviour))
-    levels = [(level.name, _volts(level.volts.nominal)) for level in behaviour.levels]
-    show_table(out, "Levels", ("level", "nominal"), levels)
+    levels = [(v.name, _volts(v.volts.nominal), band_range(v.volts, "V")) for v in behaviour.levels]
+    show_table(out, "Levels", ("level", "nominal", "least to most"), levels)
 
 
 def _volts(value: float | None) -> str:
@@ -160,7 +163,7 @@ def show_parity(out: Console, parity: Parity) -> None:
     """Print a proof: the verdict, what was walked and run, the ledger, the counterexample."""
     said = parity.statement.removeprefix(f"{parity.verdict}: ")
     _headline(out, f"{parity.style} style, tick {_plain(seconds(parity.tick_s))}", parity.verdict, said)
-    for sentence in parity.closure.said:
+    for sentence in (*parity.closure.said, *((parity.family.said,) if parity.family else ())):
         out.print(Text(f"- {sentence}"))
     out.print()
     show_table(out, "Every reachable state", ("what", "found"), _walked(parity))
@@ -181,6 +184,17 @@ def _walked(parity: Parity) -> list[tuple[str, str]]:
         (
             "a copy is from the true voltage at most",
             "no copies" if closure.bound_v is None else volts(closure.bound_v),
+        ),
+        (
+            "and turns earlier or later by at most",
+            "nothing is grey" if closure.band_s is None else seconds(closure.band_s),
+        ),
+        *(
+            (
+                f"the same with the tick at {clock:.4g} of nominal",
+                "no bound" if c.bound_v is None else volts(c.bound_v),
+            )
+            for clock, c in parity.clocks
         ),
         ("holds for sequences of any length", "yes" if closure.complete else "no"),
     ]
