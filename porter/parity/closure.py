@@ -53,21 +53,33 @@ def open_walk(said: str) -> Walk:
     return Walk(Closure(0, 0, 0, None, False, 0, (said,)), 0.0, {}, None)
 
 
-def walk_one(mem: Memory, port: Port, clock: float = 1.0) -> Walk:
+def walk_one(mem: Memory, port: Port, clocks: tuple[float, ...] = ()) -> tuple[Walk, tuple[Closure, ...]]:
     """Close the charge port of a one-capacitor circuit.
 
     Args:
-        clock: how long a tick of the port's real clock is, in nominal ticks.
+        clocks: further lengths of the port's real tick, in nominal ticks, to close it with.
+
+    Returns:
+        The walk at the nominal clock, and the closures at the others.
     """
-    table = _Table(mem, port, port.tick_s * clock)
+    table = _Table(mem, port)
     seen, parents = table.reach()
+    first, wrong = _close(table, seen, 1.0)
+    path = _path(parents, wrong, port) if wrong.any() else None
+    others = tuple(_close(table, seen, clock)[0] for clock in clocks)
+    bound = first.bound_v / float(mem.scale_v[0]) if first.bound_v is not None else float(U16)
+    return Walk(first, bound, table.edges, path), others
+
+
+def _close(table: "_Table", seen: Mask, clock: float) -> tuple[Closure, NDArray[np.bool_]]:
+    """Close with one clock; returns the closure and the (state, held) pairs that decide wrongly."""
+    table.tick_s = table.port.tick_s * clock
     error = table.local_error(seen)
     bound = table.bound(error)
     grey, wrong = table.compare(seen, bound.copies)
     table.pending(error, bound.copies, grey, wrong)
-    path = _path(parents, wrong, port) if wrong.any() else None
-    scale = float(mem.scale_v[0])
-    states, masks = int(seen.sum()), port.held_count
+    scale = float(table.mem.scale_v[0])
+    states, masks = int(seen.sum()), len(table.masks)
     closure = Closure(
         states=states,
         steps=states * masks,
@@ -78,7 +90,7 @@ def walk_one(mem: Memory, port: Port, clock: float = 1.0) -> Walk:
         said=tuple(_said(states, masks, bound, scale, int(grey.sum()), int(wrong.sum()))),
         band_s=table.band(bound.copies) if grey.any() else None,
     )
-    return Walk(closure, bound.copies, table.edges, path)
+    return closure, wrong
 
 
 @dataclass(frozen=True, slots=True)
@@ -138,9 +150,9 @@ def _said(states: int, masks: int, bound: Bound, scale: float, grey: int, wrong:
 class _Table:
     """Port and circuit tabulated over all copies, per (q, held)."""
 
-    def __init__(self, mem: Memory, port: Port, tick_s: float) -> None:
+    def __init__(self, mem: Memory, port: Port) -> None:
         assert isinstance(port.machine, Charge)
-        self.mem, self.port, self.machine, self.tick_s = mem, port, port.machine, tick_s
+        self.mem, self.port, self.machine, self.tick_s = mem, port, port.machine, port.tick_s
         self.masks = range(port.held_count)
         self.X = np.arange(_COPIES, dtype=np.int64)[:, None]
         self.decided: dict[tuple[int, int], NDArray[np.uint8]] = {}

@@ -96,7 +96,7 @@ def check_family(
     machine: Machine,
     *,
     start_q: int,
-    count: int = 400,
+    count: int = 240,
     seed: int = 7,
     early_s: float = 0.0,
 ) -> FamilyCheck:

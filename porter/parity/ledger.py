@@ -228,7 +228,9 @@ def _timed_row(circuit: Circuit, behaviour: Behaviour, port: Port, on: Bench) ->
         button = next(i for i, b in enumerate(circuit.buttons) if b.name == timed.button)
         ticks = stays(on, button, _LEVELS.index(timed.output), QUICK_S)
         seconds = None if ticks is None else ticks * port.tick_s
-        said.append(f"{timed.output} after a quick press of {timed.button} for {_band_text(timed.guaranteed)}")
+        said.append(
+            f"{timed.output} after a quick press of {timed.button} for {_band_text(timed.guaranteed)}"
+        )
         ports.append(f"{timed.button} {time_text(seconds)}, clock ±{circuit.port.clock * 100:.3g} %")
         wrong |= not inside(timed.guaranteed, seconds, circuit.port.clock, port.tick_s)
     return Seen("timed-output", "; ".join(said), "; ".join(ports), "differs" if wrong else "same")

@@ -32,8 +32,9 @@ def prove(circuit: Circuit, port: Port, behaviour: Behaviour | None = None) -> P
 
         behaviour = derive(circuit)
     mem = memory(Engine(circuit))
-    walk = close(behaviour, port, mem)
-    clocks = tuple((c, close(behaviour, port, mem, c).closure) for c in _clocks(circuit, port, mem))
+    ends = _clocks(circuit, port, mem)
+    walk, others = close(behaviour, port, mem, ends)
+    clocks = tuple(zip(ends, others, strict=False))
     listed = enumerate_all(circuit, behaviour, port, mem, walk)
     units = check_family(
         circuit, behaviour, PortMachine(port), start_q=port.start_q, early_s=_early(walk.closure, clocks)
@@ -68,17 +69,20 @@ def _early(closure: Closure, clocks: tuple[tuple[float, Closure], ...]) -> float
     return max((c.band_s or 0.0 for c in (closure, *(c for _, c in clocks))), default=0.0)
 
 
-def close(behaviour: Behaviour, port: Port, mem: Memory, clock: float = 1.0) -> Walk:
-    """Walk every reachable state, in the way that fits the port and its memory."""
+def close(
+    behaviour: Behaviour, port: Port, mem: Memory, clocks: tuple[float, ...] = ()
+) -> tuple[Walk, tuple[Closure, ...]]:
+    """Walk every reachable state, in the way that fits the port and its memory, and again with other clocks."""
     if not mem.kept:
-        return walk_plain(mem, port)
+        return walk_plain(mem, port), ()
     if isinstance(port.machine, Charge):
-        return walk_one(mem, port, clock) if len(mem.kept) == 1 else walk_many(mem, port, clock)
+        if len(mem.kept) == 1:
+            return walk_one(mem, port, clocks)
+        return walk_many(mem, port), tuple(walk_many(mem, port, clock).closure for clock in clocks)
     if len(mem.kept) == 1:
-        return walk_count(mem, port, half_spread(behaviour))
-    return open_walk(
-        "counters beside several capacitors are not walked: what is said rests on sequences and units"
-    )
+        return walk_count(mem, port, half_spread(behaviour)), ()
+    said = "counters beside several capacitors are not walked: what is said rests on sequences and units"
+    return open_walk(said), ()
 
 
 def half_spread(behaviour: Behaviour) -> float:

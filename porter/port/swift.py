@@ -43,14 +43,14 @@ def _stepper(port: Port) -> Stepper:
         return lambda state, held: step(port, state, held)
     gather = _Gather(port, port.machine)
     if len(port.machine.start) == 1 and port.held_count <= MOST_TABLES:
-        return _Table(port, gather)
+        return Table(port, gather)
     return gather
 
 
 def decider(port: Port) -> Callable[[State, NDArray[np.integer]], NDArray[np.uint8]]:
     """Return a function that gives the latch after the decision of a tick, without moving."""
     move = stepper(port)
-    if isinstance(move, (_Gather, _Table)):
+    if isinstance(move, (_Gather, Table)):
         return move.decide
     return lambda state, held: step(port, state, held)[0].q
 
@@ -140,7 +140,7 @@ def _upward(test: Test, copies: int) -> tuple[tuple[int, ...], int]:
     return (coeff, test.limit) if test.ge else (tuple(-c for c in coeff), -test.limit)
 
 
-class _Table:
+class Table:
     """Every state of a one-capacitor port stepped once, then looked up."""
 
     def __init__(self, port: Port, gather: _Gather) -> None:

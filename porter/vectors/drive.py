@@ -9,6 +9,7 @@ from numpy.typing import NDArray
 
 from porter.port.model import U16, Charge, Count, Port, State
 from porter.port.step import start
+from porter.port.swift import Table
 from porter.port.swift import stepper as swift
 from porter.vectors.mealy import rows, state_of
 
@@ -63,12 +64,21 @@ class Stepper:
 def stepper(port: Port) -> Stepper:
     """Return the reference step of *port* on rows."""
     step = swift(port)
+    if isinstance(step, Table):
+        return Stepper(rows(start(port)), lambda now, masks: _look_up(step, now, masks))
 
     def advance(now: Ints, masks: Ints) -> tuple[Ints, Ints]:
         after, out = step(state_of(now), masks)
         return rows(after), out.astype(np.int64)
 
     return Stepper(rows(start(port)), advance)
+
+
+def _look_up(table: Table, now: Ints, masks: Ints) -> tuple[Ints, Ints]:
+    """Step rows (latch, copy) of a tabulated port."""
+    to = table.next[masks, now[:, 0] << 16 | now[:, 1]]
+    q = to >> 16
+    return np.stack([q, to & U16], axis=1), table.answer[q, masks].astype(np.int64)
 
 
 def drive(port: Port, stimuli: Sequence[Runs], most_answers: int | None = None) -> tuple[list[Runs], State]:
