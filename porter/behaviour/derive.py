@@ -24,6 +24,7 @@ from porter.behaviour.model import (
     Verdict,
     Window,
 )
+from porter.behaviour.power import assumption, power_notes, power_rows
 from porter.behaviour.rules import Evidence, find
 from porter.circuit.engine import Engine
 from porter.circuit.values import Floats, columns
@@ -51,6 +52,8 @@ def derive(circuit: Circuit) -> Behaviour:
     keys = tuple(nominal.margins)
     drawn = population(circuit, cols, False, keys)
     published = population(circuit, cols, True, keys)
+    power_on = _power_on(engine)
+    power = tuple(power_rows(circuit, cols, nominal, starts_at(circuit, power_on)))
     base = Behaviour(
         circuit=circuit.title,
         buttons=tuple(b.name for b in circuit.buttons),
@@ -59,12 +62,13 @@ def derive(circuit: Circuit) -> Behaviour:
         priority=tuple(_priority_rows(circuit, nominal)),
         dominance=_dominance(circuit, nominal),
         releases=tuple(_release_rows(circuit, engine)),
-        power_on=_power_on(engine),
+        power_on=power_on,
         windows=tuple(_windows(circuit, engine, nominal, drawn, published)),
         margins=tuple(_margins(circuit, engine, nominal, drawn, published)),
         levels=tuple(_levels(engine, drawn)),
         findings=(),
-        notes=tuple(_notes(engine, drawn, published)),
+        notes=(*_notes(engine, drawn, published), *power_notes(power), assumption(circuit)),
+        power=power,
         timed=tuple(_timed(circuit, nominal, drawn, published)),
         extra={"units": units_at_the_ends((drawn, published)), "slowest_s": _slowest(engine)},
     )
@@ -166,6 +170,13 @@ def _power_on(engine: Engine) -> PowerOn:
     if outcomes[0] == OSCILLATES:
         return PowerOn("undetermined", "the circuit oscillates with no button held")
     return PowerOn(_LEVELS[outcomes[0]], _power_why(engine, at_once, outcomes[0]))
+
+
+def starts_at(circuit: Circuit, power_on: PowerOn) -> int:
+    """Return the level that a port starts at: as the spec asks, as the circuit does, or low."""
+    if circuit.port.power_on is not None:
+        return int(circuit.port.power_on == "high")
+    return int(power_on.output == "high")
 
 
 def _power_why(engine: Engine, at_once: list[int], output: int) -> str:

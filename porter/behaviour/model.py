@@ -59,6 +59,27 @@ class PowerOn:
 
 
 @dataclass(frozen=True, slots=True)
+class PowerRow:
+    """What comes of one course of the supply (nominal unit).
+
+    Args:
+        profile: the course in words, such as ``ramp 1 ms`` or ``dropout 10 ms``.
+        start: the output before, None where the supply comes up over empty capacitors.
+        held: the buttons held all the while.
+        output: the output once settled; ``undetermined`` where nothing forces the latch.
+        why: which input forces it and when, or that none does.
+        port: what the port does there after its own reset.
+    """
+
+    profile: str
+    start: Level | None
+    held: tuple[str, ...]
+    output: Literal["low", "high", "oscillates", "undetermined"]
+    why: str
+    port: str
+
+
+@dataclass(frozen=True, slots=True)
 class Window:
     """A time window of a button; `start` is the output that the press in question would change.
 
@@ -123,5 +144,6 @@ class Behaviour:
     levels: tuple[NamedLevel, ...]
     findings: tuple[Finding, ...]
     notes: tuple[str, ...] = ()  # e.g. how the corners were chosen
+    power: tuple[PowerRow, ...] = ()
     timed: tuple[Timed, ...] = ()
     extra: Mapping[str, object] = field(default_factory=dict)

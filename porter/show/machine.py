@@ -9,7 +9,7 @@ from collections.abc import Iterable, Sequence
 from pathlib import PurePath
 from typing import TYPE_CHECKING, Any
 
-from porter.behaviour.model import Band, Behaviour, HeldRow, Margin, Window
+from porter.behaviour.model import Band, Behaviour, HeldRow, Margin, PowerRow, Window
 from porter.findings import Finding
 from porter.parity.model import Closure, FamilyCheck, LedgerRow, Parity
 
@@ -60,6 +60,7 @@ def derived(behaviour: Behaviour) -> Object:
             {"held": list(r.held), "order": list(r.order), "output": r.output} for r in behaviour.releases
         ],
         "power_on": {"output": behaviour.power_on.output, "why": behaviour.power_on.why},
+        "power": [_course(row) for row in behaviour.power],
         "windows": [_window(w) for w in behaviour.windows],
         "timed": [
             {
@@ -80,6 +81,17 @@ def derived(behaviour: Behaviour) -> Object:
 def _held(row: HeldRow) -> Object:
     period = {} if row.period_s is None else {"period_s": figure(row.period_s)}
     return {"held": list(row.held), "from": row.start, "output": row.output, **period}
+
+
+def _course(row: PowerRow) -> Object:
+    return {
+        "profile": row.profile,
+        "from": row.start,
+        "held": list(row.held),
+        "output": row.output,
+        "why": row.why,
+        "port": row.port,
+    }
 
 
 def _window(window: Window) -> Object:

@@ -1,6 +1,8 @@
 """Tables for people: what a circuit does, and what was proved about its port."""
 
 from collections.abc import Iterable, Sequence
+from dataclasses import dataclass
+from itertools import groupby
 from typing import TextIO
 
 from rich.box import SIMPLE_HEAD
@@ -8,7 +10,7 @@ from rich.console import Console
 from rich.table import Table
 from rich.text import Text
 
-from porter.behaviour.model import Band, Behaviour
+from porter.behaviour.model import Band, Behaviour, PowerRow
 from porter.parity.model import Parity
 from porter.report.numbers import NBSP, band_range, count, quantity, seconds, volts
 
@@ -86,6 +88,10 @@ def show_behaviour(out: Console, behaviour: Behaviour, why: bool) -> None:
     out.print()
     _show_logic(out, behaviour)
     _show_figures(out, behaviour)
+    courses = [
+        (r.profiles, _and(r.held), r.start, r.output, r.port) for r in grouped_courses(behaviour.power)
+    ]
+    show_table(out, "When the supply comes and goes", ("supply", "held", "before", "output", "port"), courses)
     if why:
         show_table(out, "Why", ("number", "where it comes from"), _reasons(behaviour))
     for note in behaviour.notes:
@@ -153,7 +159,40 @@ def _three(typical: Band, guaranteed: Band, unit: str) -> tuple[str, str, str]:
 
 def _reasons(behaviour: Behaviour) -> list[tuple[str, str]]:
     windows = [(f"{w.window} of {w.button}, {_turn(w.start)}", w.why) for w in behaviour.windows if w.why]
-    return windows + [(f"margin: {m.where}", m.why) for m in behaviour.margins if m.why]
+    margins = [(f"margin: {m.where}", m.why) for m in behaviour.margins if m.why]
+    return [*windows, *margins, *_power_reasons(behaviour)]
+
+
+def _power_reasons(behaviour: Behaviour) -> Iterable[tuple[str, str]]:
+    for row in behaviour.power:
+        held = f", {_and(row.held)} held" if row.held else ""
+        before = f", from {row.start}" if row.start else ""
+        yield f"supply: {row.profile}{held}{before}: {row.output}", row.why
+
+
+@dataclass(frozen=True, slots=True)
+class Courses:
+    """Neighbouring courses of the supply that end alike."""
+
+    profiles: str
+    held: tuple[str, ...]
+    start: str
+    output: str
+    port: str
+
+
+def grouped_courses(rows: Iterable[PowerRow]) -> list[Courses]:
+    """Put courses of one kind that follow each other and end alike into one."""
+    out = []
+    for _, some in groupby(
+        rows, lambda r: (r.profile.split()[0] == "dip", r.start, r.held, r.output, r.port)
+    ):
+        group = list(some)
+        names = [r.profile for r in group]
+        said = names[0] if len(names) == 1 else f"{names[0]} to {names[-1]}"
+        first = group[0]
+        out.append(Courses(said, first.held, first.start or "off", first.output, first.port))
+    return out
 
 
 # --- parity ---
