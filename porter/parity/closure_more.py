@@ -1,16 +1,21 @@
 """Closures of ports that carry no capacitor: nothing remembered, and counters beside one capacitor."""
 
+from dataclasses import dataclass
+from itertools import groupby
+
 import numpy as np
 from numpy.typing import NDArray
 
+from porter.behaviour.model import Behaviour
 from porter.circuit.engine import Ints
-from porter.circuit.values import Floats
 from porter.parity.closure import Walk
+from porter.parity.family import PortMachine, compare, laid_out, lengths, units
 from porter.parity.model import Closure
 from porter.parity.twin import circuit_decides, circuit_moves, port_decides
-from porter.port.memory import Memory, settled_mode
+from porter.port.memory import Memory
 from porter.port.model import U16, Port, State
 from porter.port.step import start, step
+from porter.spec.model import Circuit
 
 _CELLS = 1024  # intervals that a capacitor's range is cut in beside a counting port
 
@@ -67,47 +72,117 @@ def _key(state: State, q: Ints) -> list[bytes]:
 # --- counters beside one capacitor ---
 
 
-def walk_count(mem: Memory, port: Port, slack_s: float) -> Walk:
+def walk_count(circuit: Circuit, behaviour: Behaviour, mem: Memory, port: Port) -> Walk:
     """Close a counting port against cells of the circuit's capacitor, rounded outward.
 
-    Args:
-        slack_s: how far in time a decision may lie from the circuit's and still be between two
-            allowed units; a difference beyond it refutes the port.
+    Cells let the capacitor linger longer than it does, so a pair that decides differently is a
+    suspicion.  Each one's press sequence is run through the port and through units that span the
+    family; where every unit does otherwise than the port, the port is refuted.
     """
     ports = _port_states(port)
     cells = _Cells(mem, port)
-    seen = np.zeros((len(ports.q), 2, _CELLS), bool)
-    first = int(np.clip(mem.copies(mem.engine.empty(0).x)[0, 0] / U16 * _CELLS, 0, _CELLS - 1))
-    seen[0, port.start_q, max(first - 1, 0) : first + 2] = True
-    front = seen.copy()
-    grey = wrong = steps = 0
-    widest = 0.0
-    while front.any():
-        new = np.zeros_like(seen)
-        for h in range(port.held_count):
-            p, q, c = np.nonzero(front)
-            steps += len(p)
-            to = ports.next[p, h]
-            decided = ports.decided[p, h]
+    found = _pairs(port, mem, ports, cells)
+    paths = [_runs(found.path(at)) for at in found.suspects]
+    guilty = _judge(circuit, behaviour, port, paths)
+    witness = min(
+        (paths[i] for i in np.flatnonzero(guilty)), key=lambda p: sum(t for _, t in p), default=None
+    )
+    grey = len(paths) - int(guilty.sum())
+    said = (
+        f"every reachable pair of a port state and a cell of the capacitor's range ({_CELLS} cells, rounded outward) was visited: {found.visited:,}",
+        f"in {len(paths):,} of them port and nominal circuit may decide differently; their press sequences were run through port and "
+        f"units that span the family: in {grey:,} some allowed unit does as the port does"
+        + (f", in {int(guilty.sum()):,} none does" if guilty.any() else ""),
+    )
+    closure = Closure(found.visited, found.steps, grey, None, found.whole, int(guilty.sum()), said)
+    path = None if witness is None else tuple(m for m, t in witness for _ in range(t))
+    return Walk(closure, 0.0, {}, path)
+
+
+_SUSPECTS = 512  # pairs whose sequences are run
+
+
+@dataclass(slots=True)
+class _Found:
+    """Reachable pairs ``(port * 2 + q) * cells + cell``, how each was come to, and which are suspect."""
+
+    parents: Ints
+    suspects: list[tuple[int, int]]
+    masks: int
+    visited: int
+    steps: int
+    whole: bool
+
+    def path(self, suspect: tuple[int, int]) -> list[int]:
+        """Return the held masks from power-on to a suspect pair, its own last."""
+        state, held = suspect
+        out = [held]
+        while self.parents[state] >= 0:
+            out.append(int(self.parents[state] % self.masks))
+            state = int(self.parents[state] // self.masks)
+        return out[::-1]
+
+
+def _pairs(port: Port, mem: Memory, ports: "_PortStates", cells: "_Cells") -> _Found:
+    masks = port.held_count
+    parents = np.full(len(ports.q) * 2 * _CELLS, -2, np.int64)  # -2: not reached
+    begin = mem.copies(mem.engine.empty(0).x)[0, 0] / U16 * _CELLS
+    first = np.unique(np.clip([int(begin) - 1, int(begin), int(begin) + 1], 0, _CELLS - 1))
+    front = port.start_q * _CELLS + first
+    parents[front] = -1
+    suspects: list[tuple[int, int]] = []
+    doubted = np.zeros((len(ports.q), 2, masks), bool)
+    steps, whole = 0, True
+    while len(front):
+        new: list[Ints] = []
+        p, q, c = front // (2 * _CELLS), front // _CELLS % 2, front % _CELLS
+        for h in range(masks):
+            steps += len(front)
             for side in (0, 1):
                 truth = cells.truth[h][side][q, c]
-                same = decided == truth
-                distance = np.where(same, 0.0, cells.distance[h][q, c])
-                grey += int((~same & (distance <= slack_s)).sum())
-                wrong += int((~same & (distance > slack_s)).sum())
-                widest = max(widest, float(distance.max(initial=0.0)))
-                low, high = cells.moved(truth[same], h, c[same])
-                for k in range(int((high - low).max(initial=0)) + 1):
-                    new[to[same], truth[same], np.minimum(low + k, high)] = True
-        front = new & ~seen
-        seen |= new
-    said = (
-        f"every reachable pair of a port state and a cell of the capacitor's range ({_CELLS} cells, rounded outward) was visited: {int(seen.sum()):,}",
-        f"the port decides up to {widest * 1e3:.3g} ms earlier or later than the nominal circuit, in {grey:,} pairs within the spread of allowed units"
-        + (f" and in {wrong:,} beyond it" if wrong else ""),
-    )
-    closure = Closure(int(seen.sum()), steps, grey, None, True, wrong, said)
-    return Walk(closure, 0.0, {}, None)
+                same = ports.decided[p, h] == truth
+                # One suspect for each port state, latch and held mask: the first cell that gives it.
+                fresh = np.flatnonzero(~same & ~doubted[p, q, h])
+                doubted[p[fresh], q[fresh], h] = True
+                room = _SUSPECTS - len(suspects)
+                whole &= len(fresh) <= room
+                suspects += [(int(front[i]), h) for i in fresh[:room]]
+                new += _reached(
+                    parents, front[same], ports.next[p[same], h], truth[same], cells, h, c[same], masks
+                )
+        front = np.concatenate(new) if new else front[:0]
+    return _Found(parents, suspects, masks, int((parents > -2).sum()), steps, whole)
+
+
+def _reached(
+    parents: Ints, source: Ints, to: Ints, q: Ints, cells: "_Cells", h: int, cell: Ints, masks: int
+) -> list[Ints]:
+    """Mark the cells that a tick may lead to; returns those not met before."""
+    low, high = cells.moved(q, h, cell)
+    out = []
+    for k in range(int((high - low).max(initial=0)) + 1):
+        state = (to * 2 + q) * _CELLS + np.minimum(low + k, high)
+        fresh = parents[state] == -2
+        parents[state[fresh]] = source[fresh] * masks + h
+        out.append(np.unique(state[fresh]))
+    return out
+
+
+def _runs(masks: list[int]) -> list[tuple[int, int]]:
+    return [(mask, len(list(group))) for mask, group in groupby(masks)]
+
+
+def _judge(
+    circuit: Circuit, behaviour: Behaviour, port: Port, paths: list[list[tuple[int, int]]]
+) -> NDArray[np.bool_]:
+    """Run suspects' sequences, the last mask held on, through port and family."""
+    if not paths:
+        return np.zeros(0, bool)
+    machine = PortMachine(port)
+    rest = int(lengths(behaviour, machine)[-1])
+    presses = laid_out([[*path, (path[-1][0], rest)] for path in paths], rest)
+    wrong, _, _ = compare(circuit, units(circuit, behaviour), machine, presses, port.start_q, 0.0)
+    return wrong
 
 
 class _PortStates:
@@ -150,13 +225,11 @@ class _Cells:
         low = np.arange(_CELLS) * self.width
         ends = (low, low + self.width)
         self.truth: dict[int, list[Ints]] = {}
-        self.distance: dict[int, Floats] = {}
         self._moves: dict[tuple[int, int], tuple[Ints, Ints]] = {}
         for h in range(port.held_count):
             self.truth[h] = [
                 np.stack([circuit_decides(mem, q, h, end[:, None]).q for q in (0, 1)]) for end in ends
             ]
-            self.distance[h] = np.stack([self._times(mem, q, h, ends[0]) for q in (0, 1)])
             for q in (0, 1):
                 moved = [
                     mem.copies(circuit_moves(mem, q, h, end[:, None], port.tick_s).x)[:, 0] for end in ends
@@ -170,19 +243,3 @@ class _Cells:
         low = np.stack([self._moves[k, h][0] for k in (0, 1)])
         high = np.stack([self._moves[k, h][1] for k in (0, 1)])
         return low[q, cell], high[q, cell]
-
-    def _times(self, mem: Memory, q: int, h: int, copies: NDArray[np.floating]) -> Floats:
-        """Seconds of open contact between a cell and the copy at which the decision changes."""
-        truth = circuit_decides(mem, q, h, copies[:, None]).q
-        turns = np.flatnonzero(np.diff(truth))
-        if not len(turns):
-            return np.full(len(copies), np.inf)
-        edges = copies[turns + 1]
-        mode = settled_mode(mem.engine, q, 0, mem.volts(np.array([[U16 / 2]]))[0])
-        rate = float(mode.rate[0].max())
-        end = float(
-            mem.copies((mode.S[0] @ (mode.drive[0] / np.maximum(mode.rate[0], 1e-12)))[None, :])[0, 0]
-        )
-        with np.errstate(divide="ignore", invalid="ignore"):
-            gaps = np.abs(np.log(np.abs((copies[:, None] - end) / (edges[None, :] - end)))) / rate
-        return np.asarray(np.nan_to_num(gaps, nan=np.inf).min(axis=1) + self.width / U16 / rate)

@@ -11,7 +11,7 @@ The comparison of edges by their number is a Skorokhod distance on binary traces
 (J. Deshmukh, R. Majumdar, V. Prabhu, CAV 2015): a glitch can't hide between samples.
 """
 
-from collections.abc import Iterator
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 from itertools import pairwise
 from typing import Any, Protocol
@@ -110,16 +110,7 @@ def check_family(
     """
     rows = units(circuit, behaviour)
     presses = sequences(behaviour, machine, count, seed)
-    times = circuit_edges(circuit, rows, presses, machine.tick_s, start_q)
-    first, last, share = _bands(times)
-    clocks = tuple(sorted({1 - circuit.port.clock, 1.0, 1 + circuit.port.clock}))
-    wrong = np.zeros(len(presses), bool)
-    runs = machine_edges(machine, presses, np.array(clocks))
-    for clock, edges in zip(clocks, runs, strict=True):
-        late = 2 * machine.tick_s * clock + 1e-12
-        wrong |= _violates(
-            edges, first, last, share, machine.tick_s * clock + early_s, late, presses, machine.tick_s
-        )
+    wrong, share, clocks = compare(circuit, rows, machine, presses, start_q, early_s)
     always, either = int((share == 1.0).sum()), int(((share > 0) & (share < 1)).sum())
     witness = _shortest(presses, wrong) if wrong.any() else None
     said = (
@@ -132,6 +123,25 @@ def check_family(
         )
     )
     return FamilyCheck(len(presses), len(rows), clocks, always, either, int(wrong.sum()), witness, said)
+
+
+def compare(
+    circuit: Circuit, rows: Floats, machine: Machine, presses: Presses, start_q: int, early_s: float
+) -> tuple[NDArray[np.bool_], Floats, tuple[float, ...]]:
+    """Run units and machine through sequences.
+
+    Returns:
+        Which sequences the machine answers as no unit does, the share of units that have each edge,
+        and the clocks that the machine was run with.
+    """
+    first, last, share = _bands(circuit_edges(circuit, rows, presses, machine.tick_s, start_q))
+    clocks = tuple(sorted({1 - circuit.port.clock, 1.0, 1 + circuit.port.clock}))
+    wrong = np.zeros(len(presses), bool)
+    runs = machine_edges(machine, presses, np.array(clocks))
+    for clock, edges in zip(clocks, runs, strict=True):
+        early, late = machine.tick_s * clock + early_s, 2 * machine.tick_s * clock + 1e-12
+        wrong |= _violates(edges, first, last, share, early, late, presses, machine.tick_s)
+    return wrong, share, clocks
 
 
 def units(circuit: Circuit, behaviour: Behaviour) -> Floats:
@@ -185,10 +195,15 @@ def sequences(behaviour: Behaviour, machine: Machine, count: int, seed: int) -> 
     rows = rows[: count // 2]
     while len(rows) < count:
         rows.append(_drawn(long, machine.held_count, rng))
+    return laid_out(rows, int(long[-1]))
+
+
+def laid_out(rows: Sequence[Sequence[tuple[int, int]]], rest: int) -> Presses:
+    """Lay sequences of (mask, ticks) out as arrays, each followed by *rest* open ticks so that late edges are seen."""
     width = max(len(r) for r in rows) + 1
     masks, ticks = np.zeros((len(rows), width), np.int64), np.zeros((len(rows), width), np.int64)
     for i, row in enumerate(rows):
-        ends = [*row, (0, int(long[-1]))]  # let it come to rest, so that late edges are seen
+        ends = [*row, (0, rest)]
         masks[i, : len(ends)] = [m for m, _ in ends]
         ticks[i, : len(ends)] = [t for _, t in ends]
     return Presses(masks, ticks)

@@ -33,7 +33,7 @@ def prove(circuit: Circuit, port: Port, behaviour: Behaviour | None = None) -> P
         behaviour = derive(circuit)
     mem = memory(Engine(circuit))
     ends = _clocks(circuit, port, mem)
-    walk, others = close(behaviour, port, mem, ends)
+    walk, others = close(circuit, behaviour, port, mem, ends)
     clocks = tuple(zip(ends, others, strict=False))
     listed = enumerate_all(circuit, behaviour, port, mem, walk)
     units = check_family(
@@ -70,7 +70,7 @@ def _early(closure: Closure, clocks: tuple[tuple[float, Closure], ...]) -> float
 
 
 def close(
-    behaviour: Behaviour, port: Port, mem: Memory, clocks: tuple[float, ...] = ()
+    circuit: Circuit, behaviour: Behaviour, port: Port, mem: Memory, clocks: tuple[float, ...] = ()
 ) -> tuple[Walk, tuple[Closure, ...]]:
     """Walk every reachable state, in the way that fits the port and its memory, and again with other clocks."""
     if not mem.kept:
@@ -80,7 +80,7 @@ def close(
             return walk_one(mem, port, clocks)
         return walk_many(mem, port), tuple(walk_many(mem, port, clock).closure for clock in clocks)
     if len(mem.kept) == 1:
-        return walk_count(mem, port, half_spread(behaviour)), ()
+        return walk_count(circuit, behaviour, mem, port), ()
     said = "counters beside several capacitors are not walked: what is said rests on sequences and units"
     return open_walk(said), ()
 
