@@ -20,16 +20,19 @@ from porter.behaviour.model import (
     PriorityRow,
     ReleaseRow,
     Settled,
+    TimerFigure,
     Timed,
     Verdict,
     Window,
 )
 from porter.behaviour.power import assumption, power_notes, power_rows
 from porter.behaviour.rules import Evidence, find
+from porter.behaviour.rules.words import figure
 from porter.circuit.engine import Engine
+from porter.circuit.family import FAMILIES, KEYS, figures, sources
 from porter.circuit.values import Floats, columns
 from porter.findings import Finding
-from porter.spec.model import Circuit
+from porter.spec.model import RAILS, Circuit
 
 _LEVELS: tuple[Level, Level] = ("low", "high")
 _OUTPUTS: tuple[Settled, ...] = ("low", "high", "oscillates")
@@ -69,6 +72,7 @@ def derive(circuit: Circuit) -> Behaviour:
         findings=(),
         notes=(*_notes(engine, drawn, published), *power_notes(power), assumption(circuit)),
         power=power,
+        figures=tuple(_figures(circuit)),
         timed=tuple(_timed(circuit, nominal, drawn, published)),
         extra={"units": units_at_the_ends((drawn, published)), "slowest_s": _slowest(engine)},
     )
@@ -252,7 +256,9 @@ def _levels(engine: Engine, drawn: Population) -> Iterator[NamedLevel]:
         ("reset", "reset_level", 1.0),
     ):
         k = cols.index(f"timer.{key}")
-        yield NamedLevel(f"{pin} level", Band(*(float(v[k]) * unit for v in (cols.nominal, cols.least, cols.most))))
+        yield NamedLevel(
+            f"{pin} level", Band(*(float(v[k]) * unit for v in (cols.nominal, cols.least, cols.most)))
+        )
     units = Engine(engine.circuit, drawn.rows, cols)
     for q in (0, 1):
         lanes, ok = units.rest(q)
@@ -263,6 +269,46 @@ def _levels(engine: Engine, drawn: Population) -> Iterator[NamedLevel]:
                 yield NamedLevel(f"{name} at rest, output {_LEVELS[q]}", _band(column, column))
 
 
+def _figures(circuit: Circuit) -> Iterator[TimerFigure]:
+    """The fitted timer's figures: the spec's own, or the family's with the documents they stand in."""
+    timer = circuit.timer
+    said = sources(FAMILIES[timer.family], circuit.supply.nominal)
+    for key, spread in figures(timer, circuit.supply.nominal).items():
+        own = key in timer.values
+        place = timer.value_positions.get(key)
+        line = f"{circuit.file}:{place.line}" if place else circuit.file
+        source = line if own else said[key]
+        yield TimerFigure(key, spread.least, spread.nominal, spread.most, KEYS[key][0], source, own)
+
+
+def _strained(engine: Engine) -> Iterator[str]:
+    """Where the output carries more than the straight line of its model was drawn through."""
+    out = engine.circuit.timer.pins.get("output", "gnd")
+    if out in RAILS:
+        return
+    for q, most in enumerate(FAMILIES[engine.circuit.timer.family].modelled_a):
+        lanes, ok = engine.rest(q)
+        ampere = _output_ampere(engine, q, float(engine.volts(lanes)[0, engine.topo.node(out)]))
+        if ok[0] and ampere > most:
+            yield (
+                f"the {_LEVELS[q]} output carries {figure(ampere, 'A')}, more than the {figure(most, 'A')} up to which "
+                "its model follows published levels: the real level may lie further from its rail"
+            )
+
+
+def _output_ampere(engine: Engine, q: int, volts: float) -> float:
+    """Return the current that the output sources (high) or sinks (low) at a voltage."""
+
+    def fitted(key: str) -> float:
+        return float(engine.columns.nominal[engine.columns.index(f"timer.{key}")])
+
+    if q:
+        across, ohm = float(engine.supply[0]) - fitted("high_drop") - volts, fitted("high_resistance")
+    else:
+        across, ohm = volts - fitted("low_level"), fitted("low_resistance")
+    return across / max(ohm, 1e-3)
+
+
 def _notes(engine: Engine, drawn: Population, published: Population) -> Iterator[str]:
     for name, group in (("part tolerances", drawn), ("part tolerances and published figures", published)):
         how = (
@@ -271,6 +317,7 @@ def _notes(engine: Engine, drawn: Population, published: Population) -> Iterator
             else "the corners that each result's own slopes point to, and a fixed draw of others"
         )
         yield f"{name}: {len(group.moving)} values move something; {how}, {len(group.rows)} units"
+    yield from _strained(engine)
     if engine.topo.states > 1:
         yield "more than one capacitor: the corners are the rule here, not a proof of the extremes"
 

@@ -128,6 +128,24 @@ class NamedLevel:
 
 
 @dataclass(frozen=True, slots=True)
+class TimerFigure:
+    """One figure of the fitted timer at the spec's supply, and where it comes from.
+
+    Args:
+        unit: ``V``, ``A``, ``ohm``, ``s`` or empty for a ratio.
+        source: the documents, or the line of the spec that overrides the family.
+    """
+
+    name: str
+    least: float
+    typical: float
+    most: float
+    unit: str
+    source: str
+    overridden: bool
+
+
+@dataclass(frozen=True, slots=True)
 class Behaviour:
     """Everything that `derive` found."""
 
@@ -145,5 +163,6 @@ class Behaviour:
     findings: tuple[Finding, ...]
     notes: tuple[str, ...] = ()  # e.g. how the corners were chosen
     power: tuple[PowerRow, ...] = ()
+    figures: tuple[TimerFigure, ...] = ()
     timed: tuple[Timed, ...] = ()
     extra: Mapping[str, object] = field(default_factory=dict)

@@ -49,13 +49,19 @@ class Point:
 
 @dataclass(frozen=True, slots=True)
 class Family:
-    """A timer family: output stage, supply range, output rating, and its figures by key."""
+    """A timer family: output stage, supply range, output rating, and its figures by key.
+
+    Args:
+        modelled_a: the largest published currents into the low and out of the high output that the
+            straight lines of the model were drawn through; beyond them it is too kind.
+    """
 
     name: str
     output: Literal["one-way", "resistive"]
     supply_v: tuple[float, float]
     rated_output_a: float
     figures: Mapping[str, tuple[Point, ...]]
+    modelled_a: tuple[float, float]
 
 
 _BIP = "TI SLFS022A p.4, bipolar NE/SA column, 25 °C"
@@ -73,6 +79,7 @@ BIPOLAR = Family(
     output="one-way",
     supply_v=(4.5, 16.0),  # published, National/TI SNAS548C
     rated_output_a=0.2,  # published, same
+    modelled_a=(0.05, 0.1),  # published at 100 and 200 mA too: low 2 and 2.5 V, high 12.5 V of 15 V
     figures={
         "threshold_ratio": (
             Point(5.0, 2.4 / 5, 2 / 3, 4.2 / 5, _BIP),
@@ -120,6 +127,7 @@ CMOS = Family(
     output="resistive",
     supply_v=(2.0, 15.0),  # published, TI SLFS043C
     rated_output_a=0.1,  # sink; the source side is far weaker (figures below)
+    modelled_a=(0.1, 0.01),
     figures={
         "threshold_ratio": (
             Point(2.0, 0.95 / 2, 2 / 3, 1.65 / 2, _TLC2),
@@ -167,7 +175,138 @@ CMOS = Family(
     },
 )
 
-FAMILIES: Mapping[str, Family] = {family.name: family for family in (BIPOLAR, CMOS)}
+_TS = "ST TS555 table, {} V column, 25 °C"
+_TS3, _TS5, _TS12 = (_TS.format(v) for v in (3, 5, 12))
+_LMC = "TI SNAS558J p.4, {} V rows, 25 °C"
+_LMC1, _LMC5, _LMC12 = (_LMC.format(v) for v in ("1.5", "5", "12"))
+_ICM = "Intersil ICM7555 p.8-172"
+_PH = "Philips ICM7555 (1994)"
+_HALF = "; least assumed half of typical"
+_PULSE = _flat(0.1e-6, 0.2e-6, 0.35e-6, "ST TS555: minimum reset pulse 350 ns; rest assumed")
+_RAIL = _flat(0.0, 0.0, 0.0, "resistive to the rail")
+_DIVIDER = _flat(80e3, 100e3, 120e3, "Intersil ICM7555 p.8-172: 100 kohm ±20 % each")
+
+
+def _picoamperes(source: str) -> dict[str, tuple[Point, ...]]:
+    """Input currents of 10 pA typical; the sheets give no most, that of the ``cmos`` class stands in."""
+    most = "; most as for the cmos class, at its temperature limit"
+    keys = ("trigger_current", "threshold_current", "reset_current", "reset_high_current")
+    return {key: _flat(0.0, 10e-12, 150e-12, source + most) for key in keys}
+
+
+CMOS_TS = Family(
+    name="cmos-ts",
+    output="resistive",
+    supply_v=(2.0, 16.0),  # from memory
+    rated_output_a=0.05,  # largest current of the table
+    modelled_a=(0.05, 0.01),
+    figures={
+        "threshold_ratio": (
+            Point(3.0, 1.8 / 3, 2 / 3, 2.2 / 3, _TS3 + ", control pin open"),
+            Point(5.0, 2.9 / 5, 2 / 3, 3.8 / 5, _TS5 + ", control pin open"),
+            Point(12.0, 7.4 / 12, 2 / 3, 8.6 / 12, _TS12 + ", control pin open"),
+        ),
+        "trigger_ratio": (
+            Point(3.0, 0.9 / 3, 1 / 3, 1.1 / 3, _TS3),
+            Point(5.0, 1.36 / 5, 1 / 3, 1.96 / 5, _TS5),
+            Point(12.0, 3.2 / 12, 1 / 3, 4.8 / 12, _TS12),
+        ),
+        "reset_level": _flat(0.4, 1.1, 1.5, _TS5 + ", the same at 3 and 12 V"),
+        **_picoamperes("assumed as for the cmos class"),
+        "high_drop": _RAIL,
+        "high_resistance": (
+            Point(3.0, 167.0, 0.1 / 0.3e-3, 0.5 / 0.3e-3, _TS3 + ": 2.9/2.5 V at 0.3 mA" + _HALF),
+            Point(5.0, 100.0, 0.4 / 2e-3, 0.6 / 2e-3, _TS5 + ": 4.6/4.4 V at 2 mA" + _HALF),
+            Point(12.0, 50.0, 1.0 / 10e-3, 1.5 / 10e-3, _TS12 + ": 11/10.5 V at 10 mA" + _HALF),
+        ),
+        "low_level": _RAIL,
+        "low_resistance": (
+            Point(3.0, 50.0, 0.1 / 1e-3, 0.3 / 1e-3, _TS3 + ": 0.1/0.3 V at 1 mA" + _HALF),
+            Point(5.0, 18.75, 0.3 / 8e-3, 0.6 / 8e-3, _TS5 + ": 0.3/0.6 V at 8 mA" + _HALF),
+            Point(12.0, 12.0, 1.2 / 50e-3, 2.0 / 50e-3, _TS12 + ": 1.2/2.0 V at 50 mA" + _HALF),
+        ),
+        "divider": _DIVIDER,
+        "discharge_resistance": (
+            Point(3.0, 25.0, 0.05 / 1e-3, 0.2 / 1e-3, _TS3 + " at 1 mA" + _HALF),
+            Point(5.0, 10.0, 0.2 / 10e-3, 0.3 / 10e-3, _TS5 + " at 10 mA" + _HALF),
+            Point(12.0, 4.7, 9.4, 1.5 / 80e-3, _TS12 + ": 1.5 V at 80 mA at most; rest assumed half"),
+        ),
+        "shortest_pulse": _PULSE,
+    },
+)
+
+CMOS_LMC = Family(
+    name="cmos-lmc",
+    output="resistive",
+    supply_v=(1.5, 15.0),  # least: lowest test supply of the table; most: from memory
+    rated_output_a=0.05,  # largest current of the table
+    modelled_a=(0.05, 0.01),
+    figures={
+        "threshold_ratio": (
+            Point(1.5, 0.8 / 1.5, 2 / 3, 1.2 / 1.5, _LMC1 + ", control pin open"),
+            Point(5.0, 2.9 / 5, 2 / 3, 3.8 / 5, _LMC5 + ", control pin open"),
+            Point(12.0, 7.4 / 12, 2 / 3, 8.6 / 12, _LMC12 + ", control pin open"),
+        ),
+        "trigger_ratio": (
+            Point(1.5, 0.4 / 1.5, 1 / 3, 0.6 / 1.5, _LMC1),
+            Point(12.0, 3.7 / 12, 1 / 3, 4.3 / 12, _LMC12),
+        ),
+        "reset_level": (Point(1.5, 0.4, 0.7, 1.0, _LMC1), Point(12.0, 0.4, 0.75, 1.1, _LMC12)),
+        **_picoamperes(_LMC5),
+        "high_drop": _RAIL,
+        "high_resistance": (
+            Point(1.5, 500.0, 0.25 / 0.25e-3, 0.5 / 0.25e-3, _LMC1 + ": 1.25/1.0 V at 0.25 mA" + _HALF),
+            Point(5.0, 75.0, 0.3 / 2e-3, 0.6 / 2e-3, _LMC5 + ": 4.7/4.4 V at 2 mA" + _HALF),
+            Point(12.0, 35.0, 0.7 / 10e-3, 1.5 / 10e-3, _LMC12 + ": 11.3/10.5 V at 10 mA" + _HALF),
+        ),
+        "low_level": _RAIL,
+        "low_resistance": (
+            Point(1.5, 100.0, 0.2 / 1e-3, 0.4 / 1e-3, _LMC1 + ": 0.2/0.4 V at 1 mA" + _HALF),
+            Point(5.0, 18.75, 0.3 / 8e-3, 0.6 / 8e-3, _LMC5 + ": 0.3/0.6 V at 8 mA" + _HALF),
+            Point(12.0, 10.0, 1.0 / 50e-3, 2.0 / 50e-3, _LMC12 + ": 1.0/2.0 V at 50 mA" + _HALF),
+        ),
+        "divider": _DIVIDER,
+        "discharge_resistance": (
+            Point(1.5, 37.5, 75e-3 / 1e-3, 150e-3 / 1e-3, _LMC1 + " at 1 mA" + _HALF),
+            Point(5.0, 7.5, 150e-3 / 10e-3, 300e-3 / 10e-3, _LMC5 + " at 10 mA" + _HALF),
+        ),
+        "shortest_pulse": _PULSE,
+    },
+)
+
+CMOS_ICM = Family(
+    name="cmos-icm",
+    output="resistive",
+    supply_v=(3.0, 16.0),  # published, Philips; the other maker says 2 to 18 V, functional
+    rated_output_a=0.02,  # largest current of the table
+    modelled_a=(0.02, 0.8e-3),
+    figures={
+        "threshold_ratio": _flat(0.63, 0.65, 0.67, _PH),
+        "trigger_ratio": _flat(0.29, 0.31, 0.34, _PH),
+        "reset_level": _flat(0.4, 0.7, 1.0, _PH),
+        "trigger_current": _flat(0.0, 10e-12, 10e-9, _PH + "; most from memory"),
+        "threshold_current": _flat(0.0, 10e-12, 10e-9, _PH + "; most from memory"),
+        "reset_current": _flat(0.0, 20e-12, 10e-9, _PH + "; most from memory"),
+        "reset_high_current": _flat(0.0, 20e-12, 10e-9, _PH + "; most from memory"),
+        "high_drop": _RAIL,
+        "high_resistance": (
+            Point(5.0, 437.0, 0.7 / 0.8e-3, 1.0 / 0.8e-3, _ICM + ": 4.3/4.0 V at 0.8 mA" + _HALF),
+            Point(15.0, 250.0, 0.4 / 0.8e-3, 0.7 / 0.8e-3, _ICM + ": 14.6/14.3 V at 0.8 mA" + _HALF),
+        ),
+        "low_level": _RAIL,
+        "low_resistance": (
+            Point(5.0, 31.0, 0.2 / 3.2e-3, 0.4 / 3.2e-3, _ICM + ": 0.2/0.4 V at 3.2 mA" + _HALF),
+            Point(15.0, 10.0, 0.4 / 20e-3, 1.0 / 20e-3, _ICM + ": 0.4/1.0 V at 20 mA" + _HALF),
+        ),
+        "divider": _DIVIDER,
+        "discharge_resistance": _flat(6.7, 0.2 / 15e-3, 0.4 / 15e-3, _ICM + " at 15 mA, 5 V" + _HALF),
+        "shortest_pulse": _PULSE,
+    },
+)
+
+FAMILIES: Mapping[str, Family] = {
+    family.name: family for family in (BIPOLAR, CMOS, CMOS_TS, CMOS_LMC, CMOS_ICM)
+}
 
 
 def figure(family: Family, key: str, supply_v: float) -> Spread:
@@ -191,6 +330,16 @@ def figures(timer: Timer, supply_v: float) -> dict[str, Spread]:
     return {key: timer.values.get(key) or figure(family, key, supply_v) for key in KEYS}
 
 
-def sources(family: Family) -> dict[str, str]:
-    """Return for each figure the documents its points were read in."""
-    return {key: "; ".join(dict.fromkeys(p.source for p in points)) for key, points in family.figures.items()}
+def sources(family: Family, supply_v: float) -> dict[str, str]:
+    """Return for each figure the documents that its value at a supply was read in."""
+    return {
+        key: "; between that and: ".join(dict.fromkeys(p.source for p in _beside(points, supply_v)))
+        for key, points in family.figures.items()
+    }
+
+
+def _beside(points: tuple[Point, ...], supply_v: float) -> tuple[Point, ...]:
+    """Return the points that a value at a supply is interpolated between, or the one it is."""
+    below = [p for p in points if p.supply_v <= supply_v][-1:]
+    above = [p for p in points if p.supply_v >= supply_v][:1]
+    return tuple(dict.fromkeys((*below, *above)))

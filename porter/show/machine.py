@@ -9,7 +9,7 @@ from collections.abc import Iterable, Sequence
 from pathlib import PurePath
 from typing import TYPE_CHECKING, Any
 
-from porter.behaviour.model import Band, Behaviour, HeldRow, Margin, PowerRow, Window
+from porter.behaviour.model import Band, Behaviour, HeldRow, Margin, PowerRow, TimerFigure, Window
 from porter.findings import Finding
 from porter.parity.model import Closure, FamilyCheck, LedgerRow, Parity
 
@@ -73,6 +73,7 @@ def derived(behaviour: Behaviour) -> Object:
         ],
         "margins": [_margin(m) for m in behaviour.margins],
         "levels": [{"name": level.name, "volts": band(level.volts)} for level in behaviour.levels],
+        "figures": [_timer_figure(row) for row in behaviour.figures],
         "findings": findings(behaviour.findings),
         "notes": list(behaviour.notes),
     }
@@ -91,6 +92,18 @@ def _course(row: PowerRow) -> Object:
         "output": row.output,
         "why": row.why,
         "port": row.port,
+    }
+
+
+def _timer_figure(row: TimerFigure) -> Object:
+    return {
+        "name": row.name,
+        "least": figure(row.least),
+        "typical": figure(row.typical),
+        "most": figure(row.most),
+        "unit": row.unit,
+        "source": row.source,
+        "overridden": row.overridden,
     }
 
 

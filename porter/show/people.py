@@ -94,6 +94,10 @@ def show_behaviour(out: Console, behaviour: Behaviour, why: bool) -> None:
     show_table(out, "When the supply comes and goes", ("supply", "held", "before", "output", "port"), courses)
     if why:
         show_table(out, "Why", ("number", "where it comes from"), _reasons(behaviour))
+        show_table(out, "Why the output is so after that", ("supply", "why"), _power_reasons(behaviour))
+        show_table(
+            out, "The timer's figures", ("figure", "least", "typical", "most", "source"), _figures(behaviour)
+        )
     for note in behaviour.notes:
         out.print(Text(f"note: {note}"))
 
@@ -160,14 +164,20 @@ def _three(typical: Band, guaranteed: Band, unit: str) -> tuple[str, str, str]:
 def _reasons(behaviour: Behaviour) -> list[tuple[str, str]]:
     windows = [(f"{w.window} of {w.button}, {_turn(w.start)}", w.why) for w in behaviour.windows if w.why]
     margins = [(f"margin: {m.where}", m.why) for m in behaviour.margins if m.why]
-    return [*windows, *margins, *_power_reasons(behaviour)]
+    return [*windows, *margins]
 
 
 def _power_reasons(behaviour: Behaviour) -> Iterable[tuple[str, str]]:
     for row in behaviour.power:
         held = f", {_and(row.held)} held" if row.held else ""
         before = f", from {row.start}" if row.start else ""
-        yield f"supply: {row.profile}{held}{before}: {row.output}", row.why
+        yield f"{row.profile}{held}{before}: {row.output}", row.why
+
+
+def _figures(behaviour: Behaviour) -> Iterable[tuple[str, ...]]:
+    for f in behaviour.figures:
+        values = (quantity(v, f.unit) if f.unit else f"{v:.4g}" for v in (f.least, f.typical, f.most))
+        yield f.name, *values, f.source
 
 
 @dataclass(frozen=True, slots=True)
