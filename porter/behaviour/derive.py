@@ -12,6 +12,7 @@ from porter.behaviour.measure import OSCILLATES, Measures, measure, release_in_o
 from porter.behaviour.model import (
     Band,
     Behaviour,
+    Corners,
     HeldRow,
     Level,
     Margin,
@@ -20,15 +21,15 @@ from porter.behaviour.model import (
     PriorityRow,
     ReleaseRow,
     Settled,
-    TimerFigure,
     Timed,
+    TimerFigure,
     Verdict,
     Window,
 )
 from porter.behaviour.power import assumption, power_notes, power_rows
 from porter.behaviour.rules import Evidence, find
 from porter.behaviour.rules.words import figure
-from porter.circuit.engine import Engine
+from porter.circuit.engine import Engine, Ints
 from porter.circuit.family import FAMILIES, KEYS, figures, sources
 from porter.circuit.values import Floats, columns
 from porter.findings import Finding
@@ -61,7 +62,7 @@ def derive(circuit: Circuit) -> Behaviour:
         circuit=circuit.title,
         buttons=tuple(b.name for b in circuit.buttons),
         verdict="sound",
-        held=tuple(_held_rows(circuit, nominal)),
+        held=tuple(_held_rows(circuit, nominal, drawn, published)),
         priority=tuple(_priority_rows(circuit, nominal)),
         dominance=_dominance(circuit, nominal),
         releases=tuple(_release_rows(circuit, engine)),
@@ -91,15 +92,27 @@ def _names(circuit: Circuit, mask: int) -> tuple[str, ...]:
     return tuple(b.name for i, b in enumerate(circuit.buttons) if mask >> i & 1)
 
 
-def _held_rows(circuit: Circuit, nominal: Measures) -> Iterator[HeldRow]:
+def _held_rows(
+    circuit: Circuit, nominal: Measures, drawn: Population, published: Population
+) -> Iterator[HeldRow]:
     for (q, mask), output in sorted(nominal.held.items(), key=lambda item: (item[0][1], item[0][0])):
         if output[0] < 0:
             continue
         period = float(nominal.period_s[q, mask][0])
         oscillates = output[0] == OSCILLATES and period > 0
+        parts, guaranteed = (_alike(group.measures.held[q, mask]) for group in (drawn, published))
         yield HeldRow(
-            _names(circuit, mask), _LEVELS[q], _OUTPUTS[int(output[0])], period if oscillates else None
+            _names(circuit, mask),
+            _LEVELS[q],
+            _OUTPUTS[int(output[0])],
+            period if oscillates else None,
+            corners=parts,
+            guaranteed=guaranteed,
         )
+
+
+def _alike(outputs: Ints) -> Corners:
+    return "same" if (outputs == outputs[0]).all() else "either"
 
 
 def held_output(nominal: Measures, mask: int) -> Settled:
@@ -256,10 +269,12 @@ def _levels(engine: Engine, drawn: Population) -> Iterator[NamedLevel]:
         ("reset", "reset_level", 1.0),
     ):
         k = cols.index(f"timer.{key}")
-        yield NamedLevel(
-            f"{pin} level", Band(*(float(v[k]) * unit for v in (cols.nominal, cols.least, cols.most)))
-        )
+        if pin == "reset" or not _has_control(engine):
+            yield NamedLevel(
+                f"{pin} level", Band(*(float(v[k]) * unit for v in (cols.nominal, cols.least, cols.most)))
+            )
     units = Engine(engine.circuit, drawn.rows, cols)
+    yield from _control_levels(units)
     for q in (0, 1):
         lanes, ok = units.rest(q)
         if ok[0]:
@@ -267,6 +282,24 @@ def _levels(engine: Engine, drawn: Population) -> Iterator[NamedLevel]:
             volts = np.where(np.abs(volts) < 1e-9 * supply, 0.0, volts)  # rounding is no voltage
             for name, column in zip(units.topo.nodes, volts.T, strict=True):
                 yield NamedLevel(f"{name} at rest, output {_LEVELS[q]}", _band(column, column))
+
+
+def _has_control(engine: Engine) -> bool:
+    return engine.circuit.timer.pins.get("control", "gnd") not in RAILS
+
+
+def _control_levels(units: Engine) -> Iterator[NamedLevel]:
+    """The levels that a network on the control pin makes, at rest."""
+    if not _has_control(units):
+        return
+    rests = [units.rest(q) for q in (0, 1)]
+    lanes = next((lanes for lanes, ok in rests if ok[0]), rests[0][0])
+    control = units.volts(lanes)[:, units.topo.node(units.circuit.timer.pins["control"])]
+    trigger, threshold = (
+        units.rows[:, units.columns.index(f"timer.{key}")] for key in ("trigger_ratio", "threshold_ratio")
+    )
+    for name, volts in (("trigger", control * trigger / threshold), ("threshold", control)):
+        yield NamedLevel(f"{name} level", _band(volts, volts))
 
 
 def _figures(circuit: Circuit) -> Iterator[TimerFigure]:

@@ -10,6 +10,8 @@ Level = Literal["low", "high"]
 #: ``keeps``: whichever it was before.
 Settled = Literal["low", "high", "oscillates", "keeps"]
 WindowKind = Literal["shortest-press", "re-arm-after-tap", "re-arm-after-hold", "stray-gap"]
+#: ``either``: some allowed units do it, others don't.
+Corners = Literal["same", "either"]
 Verdict = Literal["sound", "typical-only", "faulty"]
 
 
@@ -24,12 +26,18 @@ class Band:
 
 @dataclass(frozen=True, slots=True)
 class HeldRow:
-    """From a settled output, with `held` pressed together: the output once settled."""
+    """From a settled output, with `held` pressed together: the output once settled.
+
+    `corners`: whether every unit within the part tolerances does the same; `guaranteed`: the same
+    with the family's published figures as well.
+    """
 
     held: tuple[str, ...]
     start: Level
     output: Settled
     period_s: float | None
+    corners: Corners = "same"
+    guaranteed: Corners = "same"
 
 
 @dataclass(frozen=True, slots=True)

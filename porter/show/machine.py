@@ -81,7 +81,8 @@ def derived(behaviour: Behaviour) -> Object:
 
 def _held(row: HeldRow) -> Object:
     period = {} if row.period_s is None else {"period_s": figure(row.period_s)}
-    return {"held": list(row.held), "from": row.start, "output": row.output, **period}
+    agreed = {"corners": row.corners, "guaranteed": row.guaranteed}
+    return {"held": list(row.held), "from": row.start, "output": row.output, **period, **agreed}
 
 
 def _course(row: PowerRow) -> Object:

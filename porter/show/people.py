@@ -10,7 +10,7 @@ from rich.console import Console
 from rich.table import Table
 from rich.text import Text
 
-from porter.behaviour.model import Band, Behaviour, PowerRow
+from porter.behaviour.model import Band, Behaviour, HeldRow, PowerRow
 from porter.parity.model import Parity
 from porter.report.numbers import NBSP, band_range, count, quantity, seconds, volts
 
@@ -134,8 +134,15 @@ def _held(behaviour: Behaviour) -> Iterable[tuple[str, str, str]]:
         for level in ("low", "high"):
             row = found.get((held, level))
             period = f", period {seconds(row.period_s)}" if row and row.period_s else ""
-            cells.append(f"{row.output}{period}" if row else "no rest")
+            units = _differing(row) if row else ""
+            cells.append(f"{row.output}{period}{units}" if row else "no rest")
         yield _and(held), cells[0], cells[1]
+
+
+def _differing(row: HeldRow) -> str:
+    if row.corners == "either":
+        return " (some units with these parts differ)"
+    return " (not guaranteed)" if row.guaranteed == "either" else ""
 
 
 def _windows(behaviour: Behaviour) -> Iterable[tuple[str, ...]]:
