@@ -21,6 +21,7 @@ Mask = NDArray[np.bool_]
 TRIGGER, THRESHOLD, RESET = 0, 1, 2
 #: Flips within one stretch of constant buttons after which a lane is said to oscillate.
 BUSY = 16
+_FOR_EVER = 1e8  # s, three years
 _EVENTS = 100_000  # a backstop: a run of constant buttons has far fewer events
 _ROUNDS = 64  # looks at one instant before it is said never to come to rest
 
@@ -240,6 +241,8 @@ class Engine:
         d = mode.Gz[unit] * pull[:, None, :]
         near = self._near(f0[:, :3], crossed)
         f0[:, :3], d[:, :3] = _signed(f0[:, :3], d[:, :3], near)
+        # A branch whose current only fades to nothing doesn't switch: it has to be seen past zero.
+        f0[:, 3:] = np.maximum(f0[:, 3:], 0.0) + self.tolerance
         first = 3 if frozen else 0
         rows, guards = f0.shape[0], f0.shape[1] - first
         if guards == 0:
@@ -251,6 +254,8 @@ class Engine:
             np.repeat(until, guards),
         )
         times = times.reshape(rows, guards)
+        # Later than any product lives, only the rounding of a drift is left to cross anything.
+        times = np.where(times > _FOR_EVER, np.inf, times)
         which = times.argmin(axis=1)
         return times[np.arange(rows), which], which.astype(np.int64) + first
 
