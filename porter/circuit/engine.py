@@ -89,6 +89,7 @@ class Engine:
         self.supply = self.topo.supply(self.rows)
         self._modes: dict[tuple[int, int, int], Mode] = {}
         self.tolerance = 1e-12 * float(np.max(self.supply))
+        self._way_tolerance = self.tolerance * self._slope_shares()
 
     def mode(self, q: int, held: int, conducts: int) -> Mode:
         """Return a mode solved for all units."""
@@ -101,6 +102,19 @@ class Engine:
     def modes(self) -> tuple[Mode, ...]:
         """The modes met so far."""
         return tuple(self._modes.values())
+
+    def _slope_shares(self) -> Floats:
+        """How fine each one-way branch must be judged, in tolerances, shape (ways,).
+
+        A milliohm hides nanoamperes behind a picovolt, so a steep branch is judged more finely, as far
+        as rounding allows.
+        """
+        shares = np.ones(self.topo.ways)
+        for branch in self.topo.branches:
+            if branch.way >= 0:
+                ohm = float(branch.ohm(self.rows).min())
+                shares[branch.way] = min(shares[branch.way], max(ohm, 0.005))
+        return shares
 
     # --- starting points ---
 
@@ -242,7 +256,7 @@ class Engine:
         near = self._near(f0[:, :3], crossed)
         f0[:, :3], d[:, :3] = _signed(f0[:, :3], d[:, :3], near)
         # A branch whose current only fades to nothing doesn't switch: it has to be seen past zero.
-        f0[:, 3:] = np.maximum(f0[:, 3:], 0.0) + self.tolerance
+        f0[:, 3:] = np.maximum(f0[:, 3:], 0.0) + self._way_tolerance
         first = 3 if frozen else 0
         rows, guards = f0.shape[0], f0.shape[1] - first
         if guards == 0:
@@ -293,7 +307,7 @@ class Engine:
         f = mode.g0[unit] + (mode.Gz[unit] @ z[..., None])[..., 0]
         slope = (mode.Gz[unit] @ (mode.drive[unit] - mode.rate[unit] * z)[..., None])[..., 0]
         just = np.arange(self.topo.ways) + 3 == lanes.crossed[rows, None]
-        bad = f[:, 3:] < np.where(just, -1e6, -1.0) * self.tolerance
+        bad = f[:, 3:] < np.where(just, -1e6, -1.0) * self._way_tolerance
         switch = bad.any(axis=1)
         if switch.any():
             lanes.conducts[rows[switch]] ^= 1 << bad[switch].argmax(axis=1)

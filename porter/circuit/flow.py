@@ -90,7 +90,7 @@ def _end(rate: Floats, until: Floats) -> Floats:
 
 
 def _one_term(f0: Floats, d: Floats, rate: Floats) -> Floats:
-    with np.errstate(divide="ignore", invalid="ignore"):
+    with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
         need = -f0 / d  # what reach() must become
         left = 1.0 - rate * need
         t = np.where(rate > 0, -np.log1p(-np.minimum(rate * need, 1.0)) / rate, need)
