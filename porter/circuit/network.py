@@ -26,6 +26,7 @@ from porter.spec.model import RAILS, Circuit, Part
 #: A value of every unit: takes rows (B, P), gives (B,).
 Getter = Callable[[Floats], Floats]
 GND, VCC = -1, -2
+_STRAY = 1e-9**0.5  # root of the conductance (S) of a stray path
 RAIL_INDEX = {"gnd": GND, "vcc": VCC}
 
 
@@ -471,12 +472,16 @@ def _injected(topo: Topology, rows: Floats) -> Floats:
 def _tie_floating(
     topo: Topology, A: Floats, e: Floats, groups: Sequence[int], loose: Sequence[int]
 ) -> tuple[Floats, Floats]:
-    """Give each floating group a reference so that it can be solved; `floating` tells of it."""
+    """Give each floating group a stray path to ground so that it can be solved; `floating` tells of it.
+
+    It is so weak that a current with no other way drives the group far off: a one-way branch that
+    could carry it is then seen to conduct.
+    """
     if not loose:
         return A, e
     ties = np.zeros((len(A), len(loose), len(topo.nodes)))
     for k, group in enumerate(loose):
-        ties[:, k, groups.index(group)] = 1.0
+        ties[:, k, groups.index(group)] = _STRAY
     return np.concatenate([A, ties], 1), np.concatenate([e, np.zeros((len(A), len(loose)))], 1)
 
 
