@@ -4,7 +4,7 @@ import math
 
 import numpy as np
 import pytest
-from behaviour_circuits import IDEAL, derive, latch, of_rule, spec, toggle
+from behaviour_circuits import IDEAL, derive, latch, of_rule, toggle
 
 import porter
 from porter.behaviour.model import Behaviour
