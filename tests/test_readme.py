@@ -1,0 +1,119 @@
+"""The README's commands, run again: they print what it says they print.
+
+A block fenced as ``console`` holds commands after ``$ `` and their output; a line of ``...``
+stands for any lines. ``pytest --update-golden`` rewrites every block that leaves nothing out.
+"""
+
+import os
+import re
+import shlex
+import subprocess
+import sys
+from dataclasses import dataclass
+from functools import cache
+from pathlib import Path
+
+import pytest
+
+from porter.cli import cli
+from porter.resources import folder
+
+README = Path(__file__).parents[1] / "README.md"
+BLOCK = re.compile(r"^```console\n(.*?)^```$", re.S | re.M)
+ANY = "..."
+
+
+@dataclass(frozen=True, slots=True)
+class Shown:
+    """A command of the README with the output printed under it."""
+
+    command: str
+    output: tuple[str, ...]
+
+    @property
+    def system(self) -> bool:
+        """Whether it needs a tool that does not come with Python."""
+        return self.command.startswith("cc ")
+
+
+def _shown(text: str) -> list[Shown]:
+    found = []
+    for block in BLOCK.findall(text):
+        for piece in re.split(r"^\$ ", block, flags=re.M)[1:]:
+            command, *output = piece.rstrip().split("\n")
+            found.append(Shown(command, tuple(output)))
+    return found
+
+
+SHOWN = _shown(README.read_text("utf-8"))
+
+
+@pytest.fixture(scope="module")
+def place(tmp_path_factory: pytest.TempPathFactory) -> Path:
+    """An empty folder: the commands follow one another in it as in the README."""
+    return tmp_path_factory.mktemp("readme")
+
+
+@cache
+def _run(place: Path, at: int) -> tuple[str, ...]:
+    """Run one command after those before it that leave files; returns the lines it prints."""
+    for before in range(at):
+        if SHOWN[before].command.startswith(("porter start", "porter port", "cd ")):
+            _run(place, before)
+    command = re.sub(r"^porter ", f"{shlex.quote(sys.executable)} -m porter ", SHOWN[at].command)
+    env = {**os.environ, "COLUMNS": "100", "NO_COLOR": "1", "PYTHONUTF8": "1"}
+    done = subprocess.run(
+        command, shell=True, cwd=place, env=env, stdout=subprocess.PIPE, stderr=subprocess.STDOUT, timeout=300
+    )
+    return tuple(line.rstrip() for line in done.stdout.decode().rstrip().splitlines())
+
+
+def _matches(shown: tuple[str, ...], printed: tuple[str, ...]) -> bool:
+    """Whether the lines agree, with any number of lines in place of ``...``."""
+    pattern = "".join(r"(.*\n)*?" if line == ANY else re.escape(line) + r"\n" for line in shown)
+    return re.fullmatch(pattern, "".join(line + "\n" for line in printed)) is not None
+
+
+def _rewrite(shown: Shown, printed: tuple[str, ...]) -> None:
+    text = README.read_text("utf-8")
+    old = "\n".join(("$ " + shown.command, *shown.output)) + "\n"
+    README.write_text(text.replace(old, "\n".join(("$ " + shown.command, *printed)) + "\n"), "utf-8")
+
+
+MARKS = {True: (pytest.mark.system,), False: ()}
+
+
+@pytest.mark.xdist_group("readme")
+@pytest.mark.parametrize(
+    "at", [pytest.param(k, marks=MARKS[s.system], id=s.command) for k, s in enumerate(SHOWN)]
+)
+def test_a_command_prints_what_the_readme_says(place: Path, at: int, request: pytest.FixtureRequest) -> None:
+    shown, printed = SHOWN[at], _run(place, at)
+    if request.config.getoption("--update-golden") and ANY not in shown.output:
+        _rewrite(shown, printed)
+        return
+    assert _matches(shown.output, printed), "\n".join(
+        ("it prints now:", *printed, "", "(`pytest --update-golden` rewrites blocks without ...)")
+    )
+
+
+def test_the_comparison_sees_a_changed_figure() -> None:
+    assert _matches(("a 1", ANY, "c 3"), ("a 1", "b 2", "b 2", "c 3"))
+    assert not _matches(("a 1", ANY, "c 3"), ("a 1", "b 2", "c 4"))
+    assert not _matches(("a 1",), ("a 1", "b 2"))
+
+
+def test_every_command_is_explained() -> None:
+    """Each command of the program, and each shipped spec that is not faulty, is in the README."""
+    text = README.read_text("utf-8")
+    missing = [name for name in cli.commands if f"`porter {name}" not in text]
+    assert missing == []
+    specs = [p.name.removesuffix(".yaml") for p in folder("specs").iterdir()]
+    assert [name for name in specs if not name.startswith("faulty") and f"`{name}`" not in text] == []
+
+
+def test_pictures_are_there() -> None:
+    """Every picture that the README shows is in the tree, and the lot stays small."""
+    names = re.findall(r"!\[[^\]]*\]\(([^)]+)\)", README.read_text("utf-8"))
+    assert names
+    assert sum((README.parent / name).stat().st_size for name in names) < 300_000
