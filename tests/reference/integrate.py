@@ -10,7 +10,7 @@ Two roads, sharing only the node equations of `tests.reference.network`:
 - `run_ode`: scipy's adaptive integrators on the node equations, where the conducting set is found
   anew at every evaluation, with crossings located by ``brentq`` on the dense output.
 
-Both decide as BEHAVIOUR.md section 2 says: reset beats trigger beats threshold.
+Both decide as the timer does: reset beats trigger beats threshold.
 """
 
 from __future__ import annotations
