@@ -228,7 +228,10 @@ class UCsim(Backend):
 
 MCS51 = UCsim("8051", "-mmcs51", "s51", "-t C52", "xram[0xffff]")
 STM8 = UCsim("stm8", "-mstm8", "sstm8", "", "rom[0x5fff]")
+#: 128 bytes of RAM: SDCC gives parameters and locals fixed places, so that a 32-bit multiply doesn't
+#: fit beside its caller and this driver. The larger part has the same instructions, and 256 bytes.
 PDK14 = UCsim("pdk14", "-mpdk14", "spdk", "-t PDK14", "ram[0x7f]")
+PDK15 = UCsim("pdk15", "-mpdk15", "spdk", "-t PDK15", "ram[0xff]")
 
 
 # --- MicroPython ---
@@ -289,5 +292,6 @@ BACKENDS: tuple[Backend, ...] = (
     MCS51,
     STM8,
     PDK14,
+    PDK15,
     MicroPython(),
 )

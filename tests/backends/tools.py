@@ -4,7 +4,6 @@ import os
 import shutil
 import subprocess
 from collections.abc import Sequence
-from functools import lru_cache
 from pathlib import Path
 
 import pytest
@@ -13,7 +12,7 @@ import pytest
 SPDK_FOLDER = Path(os.environ.get("PORTER_SPDK", Path.home() / ".cache" / "porter-spdk"))
 DRIVERS = Path(__file__).with_name("drivers")
 #: More than any one run needs; a run that hangs is a failure.
-PATIENCE_S = 300
+PATIENCE_S = 900
 
 
 def find(tool: str) -> str | None:
@@ -44,11 +43,3 @@ def must(command: Sequence[str | Path], where: Path, *, text: str | None = None)
     )
     assert done.returncode == 0, f"{command[0]} ended with {done.returncode}\n{done.stdout}{done.stderr}"
     return done.stdout
-
-
-@lru_cache(maxsize=1)
-def avr_caller(folder: Path) -> Path:
-    """Build the program that calls an AVR core's functions in the emulator; return its path."""
-    program = folder / "avr_call"
-    must(["cc", "-O2", DRIVERS / "avr_call.c", "-o", program, "-lsimavr", "-lelf"], folder)
-    return program

@@ -5,7 +5,10 @@
 #define CELL (*(volatile uint8_t __xdata *)0xFFFF)
 #elif defined(__SDCC_stm8)
 #define CELL (*(volatile uint8_t *)0x5FFF)
-#elif defined(__SDCC_pdk14) || defined(__SDCC_pdk15)
+#elif defined(__SDCC_pdk15)
+static volatile uint8_t __at(0xFF) cell;
+#define CELL cell
+#elif defined(__SDCC_pdk14)
 static volatile uint8_t __at(0x7F) cell;
 #define CELL cell
 #else
