@@ -18,7 +18,7 @@ from porter.circuit.values import Columns, Floats, corners
 from porter.spec.model import Circuit
 
 MOST = 12  # toleranced values whose every corner is taken
-_DRAWN = 2048  # further corners beyond that
+_DRAWN = 512  # further corners beyond that
 _CHUNK = 4200
 
 

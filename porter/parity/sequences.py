@@ -14,7 +14,7 @@ from porter.port.memory import Memory
 from porter.port.model import Charge, Port
 from porter.spec.model import Circuit
 
-_LANES = 1 << 11  # sequences walked side by side
+_LANES = 1 << 10  # sequences walked side by side
 _STRIDES = 6
 _LONGEST = 400  # ticks that one symbol of a sequence lasts at most
 
