@@ -6,6 +6,7 @@ from typing import ClassVar
 from porter.emit.fold import fold
 from porter.emit.language import Job, banner, microseconds, why
 from porter.emit.lower import (
+    Affine,
     All,
     Alone,
     Amount,
@@ -77,11 +78,14 @@ class Core:
             "outputs": _bits(self.outputs, port.outputs, len(port.buttons), (3, 2, 1, 4, 5, 6, 7, 8)),
             "members": [self._member(cell) for cell in parts.cells],
             "numbers": [self._define(number) for number in parts.numbers if self._ref(number) in words],
-            "helpers": [h for h in ("clamp", "part", "kept", "shift", "rate") if f"{self.name}_{h}" in words],
+            "helpers": [
+                h for h in ("clamp", "scaled", "part", "kept", "shift", "rate") if f"{self.name}_{h}" in words
+            ],
             "init": fold(init, 4),
             "step": fold(step, 4),
             "idle": fold(idle, 4),
             "recovery": recovery(parts),
+            "all_seen": parts.sees_held,
             "suite": suite_rows(self.job.suite),
             "title": string(port.title),
         }
@@ -104,7 +108,7 @@ class Core:
     def _field_note(self, field: Field, cell: Cell) -> str:
         at, last = _place(field, cell)
         bits = "" if len(cell.fields) == 1 else f"bit {at}: " if at == last else f"bits {at} to {last}: "
-        return bits + _meaning(field, self.port)
+        return bits + _meaning(field, self.port, self.parts.mirrored)
 
     def _ask(self, ask: int) -> tuple[str, str]:
         """Return the conditions on the latch and the buttons as read."""
@@ -196,6 +200,8 @@ class Core:
             asked = [*copied, f"(void){self.name}_step(&next, was);", f"return {same};"]
             return [trial, *opened, "", *asked]
         opened = [line for line in opened if " n_" in line]
+        if not filters:
+            return [trial, "", *copied, f"(void){self.name}_step(&next, 0u);", f"return {same};"]
         guess = [
             line
             for f in filters
@@ -308,7 +314,7 @@ class Core:
         lines = ["", "/* Decide with the charge from before this tick. */", *decide] if decide else []
         stored = [self._pack(cell) for cell in self.parts.cells if early(cell, machine)]
         lines += ["", *stored] if stored else []
-        mixed = any(motion.mixed for motion in machine.motions)
+        mixed = any(motion.mixes for motion in machine.motions)
         for k, (x, motion) in enumerate(zip(names, machine.motions, strict=True)):
             moved = self._motion(motion, x, f"y{k}" if mixed else x, names)
             about = comment(self._capacitor(k))
@@ -322,14 +328,55 @@ class Core:
         return self.port.machine.capacitors[k]
 
     def _motion(self, motion: Motion, x: str, y: str, names: tuple[str, ...]) -> list[str]:
-        if motion.mixed is None:
+        if motion.whole is None:
             return self._move(motion, x, y)
-        moved = render(motion.mixed, self._ask, lambda leaf: self._mixed(leaf, x, y, names), SYNTAX)
-        return [f"uint16_t {y};", *moved]
+        if motion.scales:
+            return self._scales(motion, x, y)
+        moved = render(motion.whole, self._ask, lambda leaf: self._whole(leaf, x, y, names), SYNTAX)
+        return moved if x == y else [f"uint16_t {y} = {x};", *moved]
+
+    def _scales(self, motion: Motion, x: str, y: str) -> list[str]:
+        """Return one multiplication for all modes, with its numbers chosen before."""
+        assert motion.whole is not None
+        said = [leaf for leaf in leaves(motion.whole) if isinstance(leaf, Affine)]
+        stays, add = f"stays{x[1:]}", f"add{x[1:]}"
+        more = any(leaf.add for leaf in said)
+        same = len({leaf.number for leaf in said}) == 1
+        kept = self._scaled(x, self._ref(said[0].number) if same else stays)
+
+        def choose(leaf: Alone | Mix | Affine) -> list[str]:
+            assert isinstance(leaf, Affine)
+            amount = [f"{add} = {self._ref(leaf.add) if leaf.add else '0u'};"] if more else []
+            return amount + ([] if same else [f"{stays} = {self._ref(leaf.number)};"])
+
+        return [
+            *([] if same else [f"uint16_t {stays};"]),
+            *([f"uint16_t {add};"] if more else []),
+            *([] if x == y else [f"uint16_t {y};"]),
+            *render(motion.whole, self._ask, choose, SYNTAX),
+            f"{y} = (uint16_t)({kept} + {add});" if more else f"{y} = {kept};",
+        ]
+
+    def _scaled(self, x: str, number: str) -> str:
+        return f"{self.name}_scaled({x}, {number})"
+
+    def _affine(self, leaf: Affine, x: str, y: str) -> list[str]:
+        add, ref = leaf.add and self._ref(leaf.add), self._ref(leaf.number)
+        if leaf.kind == "scale":
+            kept = self._scaled(x, ref)
+            lines = [f"{y} = (uint16_t)({kept} + {add});" if add else f"{y} = {kept};"]
+        else:
+            # In one expression: a second statement on the same variable has been miscompiled (SDCC 4.2.0, PDK).
+            gone = f"(uint16_t)({x} >> {ref})"
+            lines = [f"{y} = (uint16_t)({x} - {f'(uint16_t)({gone} - {add})' if add else gone});"]
+        if leaf.guard.number is None:
+            return lines
+        side = "<" if leaf.guard.only == "up" else ">"
+        return branch(f"{x} {side} {self._ref(leaf.guard.number)}", lines, [], SYNTAX)
 
     def _flip(self, flips: Flips, names: tuple[str, ...]) -> list[str]:
         low, high = self._any(flips.low, names), self._any(flips.high, names)
-        turn = ["q ^= 1u;"]
+        turn = ["q ^= 1u;", *self._turn_copy()]
         if low == high:
             return turn if low == "" else branch(low, turn, [], SYNTAX) if low else []
         up, down = (self._turned(text, value) for text, value in ((low, 1), (high, 0)))
@@ -337,10 +384,14 @@ class Core:
             return branch("q != 0u", down, [], SYNTAX)
         return branch("q == 0u", up, down, SYNTAX)
 
+    def _turn_copy(self) -> list[str]:
+        return ["x ^= 0xFFFFu;"] if self.parts.mirrored else []
+
     def _turned(self, condition: str | None, value: int) -> list[str]:
         if condition is None:
             return []
-        return branch(condition, [f"q = {value}u;"], [], SYNTAX) if condition else [f"q = {value}u;"]
+        turn = [f"q = {value}u;", *self._turn_copy()]
+        return branch(condition, turn, [], SYNTAX) if condition else turn
 
     def _any(self, any_of: Any, names: tuple[str, ...]) -> str | None:
         """Return the condition as text; empty where it always holds, None where it never does."""
@@ -419,7 +470,9 @@ class Core:
         test = {"up": f"({x} < {ref})", "down": f"({x} > {ref})"}.get(end.only)
         return f"{test} ? {ref} : {x}" if test else ref
 
-    def _mixed(self, leaf: Alone | Mix, x: str, y: str, names: tuple[str, ...]) -> list[str]:
+    def _whole(self, leaf: Alone | Mix | Affine, x: str, y: str, names: tuple[str, ...]) -> list[str]:
+        if isinstance(leaf, Affine):
+            return self._affine(leaf, x, y)
         if isinstance(leaf, Mix):
             terms = [
                 self._kept(sign, keep, copy, end)
@@ -430,7 +483,7 @@ class Core:
             return [f"{y} = {self.name}_clamp({total});"]
         end = self._target(leaf.end, x)
         if leaf.amount is None:
-            return [f"{y} = {end};"]
+            return [] if leaf.end.number is None else [f"{y} = {end};"]
         return [f"{y} = {self.name}_{leaf.amount.kind}({x}, {end}, {self._ref(leaf.amount.number)});"]
 
     def _kept(self, sign: int, keep: Number, x: str, end: Number) -> str:
@@ -462,7 +515,13 @@ def early(cell: Cell, machine: ChargeParts | CountParts) -> bool:
     """Whether a cell is stored before the copies move, to free its registers for a multiplication."""
     if isinstance(machine, CountParts) or set(copies(machine)) & {field.name for field in cell.fields}:
         return False
-    return any(amount.kind == "rate" for motion in machine.motions for amount in amounts_of(motion))
+    return any(_multiplies(motion) for motion in machine.motions)
+
+
+def _multiplies(motion: Motion) -> bool:
+    if motion.whole is None:
+        return any(amount.kind == "rate" for amount in amounts_of(motion))
+    return any(isinstance(leaf, Affine) and leaf.kind == "scale" for leaf in leaves(motion.whole))
 
 
 def amounts_of(motion: Motion) -> list[Amount]:
@@ -475,7 +534,7 @@ def _type(most: int) -> str:
     return "uint8_t" if most < 256 else "uint16_t"
 
 
-def _meaning(field: Field, port: Port) -> str:
+def _meaning(field: Field, port: Port, mirrored: bool) -> str:
     if field.name == "q":
         return "the latch, 1 = output high"
     if field.name == "was":
@@ -486,7 +545,8 @@ def _meaning(field: Field, port: Port) -> str:
         return f"agreement counter, 0 to {field.most}"
     charge = port.machine
     k = int(field.name[1:] or 0)
-    return f"copy of {charge.capacitors[k]}, {charge.low_v[k]:.9g} V + {charge.scale_v[k]:.9g} V each"  # type: ignore[union-attr]
+    turned = "; 65535 less itself while the latch is 1" if mirrored else ""
+    return f"copy of {charge.capacitors[k]}, {charge.low_v[k]:.9g} V + {charge.scale_v[k]:.9g} V each{turned}"  # type: ignore[union-attr]
 
 
 def _place(field: Field, cell: Cell) -> tuple[int, int]:

@@ -3,14 +3,19 @@
 Every language writes the same parts, so that a merge or a bound is worked out once, here.
 """
 
+import math
 from collections.abc import Callable
 from dataclasses import dataclass, replace
 from itertools import product
 from typing import Literal
 
+import numpy as np
+from numpy.typing import NDArray
+
 from porter.emit.numbers import Number, Numbers
 from porter.emit.trees import LATCH, Leaf, Tree, grow, leaves
-from porter.port.model import U16, Charge, ChargeMode, Count, Move, Port, Test
+from porter.port.model import U16, Charge, ChargeMode, Count, Move, Port, State, Test
+from porter.port.swift import stepper
 
 # --- decisions ---
 
@@ -160,15 +165,43 @@ class Mix:
 
 
 @dataclass(frozen=True, slots=True)
+class Affine:
+    """A copy's next value: what stays of it, and a constant more.
+
+    kind ``scale``: `number` 65536ths stay; ``drain``: one part in two to the power `number` goes.
+    `add` None: nothing more.  `guard`: the end from whose one side alone it moves (None: from both).
+    """
+
+    kind: Literal["scale", "drain"]
+    number: Number
+    add: Number | None
+    guard: End = STAY
+
+
+@dataclass(frozen=True, slots=True)
 class Motion:
     """One copy's motion: where to (`aims`) and how far (`amounts`, where the aims don't say it).
 
-    Where any mode mixes capacitors, `mixed` says it all instead and the other two are empty.
+    Where any mode is a mix, a scale or a drain, `whole` says it all instead and the other two are empty.
     """
 
     aims: Tree[Alone]
     amounts: Tree[Amount]
-    mixed: Tree[Alone | Mix] | None = None
+    whole: Tree[Alone | Mix | Affine] | None = None
+
+    @property
+    def mixes(self) -> bool:
+        """Whether the copy's next value needs the other copies' present ones."""
+        return self.whole is not None and any(isinstance(leaf, Mix) for leaf in leaves(self.whole))
+
+    @property
+    def scales(self) -> bool:
+        """Whether every mode is a free scale, and not all the same one: one multiplication can serve them."""
+        if self.whole is None:
+            return False
+        said = leaves(self.whole)
+        free = all(isinstance(leaf, Affine) and leaf.kind == "scale" and leaf.guard == STAY for leaf in said)
+        return free and len(said) > 1
 
 
 @dataclass(frozen=True, slots=True)
@@ -259,6 +292,13 @@ class Parts:
     answer: Tree[tuple[int, int]]
     recorded: tuple[int, ...]  # buttons whose last reading is kept in the state, for `idle`
     always_idle: bool  # any state is at rest for the reading that led to it
+    mirrored: bool  # while the latch is set, the copy is kept as 65535 less itself
+
+    @property
+    def sees_held(self) -> bool:
+        """Whether `idle` also tells rest with a button held, rather than with all of them open alone."""
+        filtered = len(_filtered(self.machine)) == len(self.port.buttons)
+        return self.always_idle or bool(self.recorded) or filtered
 
 
 def lower(port: Port) -> Parts:
@@ -269,14 +309,15 @@ def lower(port: Port) -> Parts:
     """
     if len(port.buttons) > 8 or len(port.outputs) > 8:
         raise ValueError(f"{port.name}: at most eight buttons and eight outputs fit the step function")
-    numbers = Numbers(port)
-    charge = isinstance(port.machine, Charge)
-    machine = _charge(port, numbers) if charge else _count(port, numbers)
+    numbers, charge, mirrored = Numbers(port), isinstance(port.machine, Charge), is_mirrored(port)
+    as_asked, port = port, stored(port, mirrored) if charge else port
+    machine = _charge(port, numbers, mirrored) if charge else _count(port, numbers)
     answer = grow([(port.answer[0][h], port.answer[1][h]) for h in range(port.held_count)], _buttons(port))
     settled = isinstance(machine, CountParts) and machine.toggle is None and _steady(port)
-    recorded = () if settled else tuple(i for i in _buttons(port) if i not in _filtered(machine))
+    free = settled or tells_itself(as_asked, _filtered(machine))
+    recorded = () if free else tuple(i for i in _buttons(port) if i not in _filtered(machine))
     cells = _cells(_fields(port, machine, recorded))
-    return Parts(port, numbers.all(), cells, machine, answer, recorded, settled)
+    return Parts(port, numbers.all(), cells, machine, answer, recorded, settled, mirrored)
 
 
 def _buttons(port: Port) -> tuple[int, ...]:
@@ -297,14 +338,14 @@ def _steady(port: Port) -> bool:
 # --- charge ---
 
 
-def _charge(port: Port, numbers: Numbers) -> ChargeParts:
+def _charge(port: Port, numbers: Numbers, mirrored: bool) -> ChargeParts:
     charge = port.machine
     assert isinstance(charge, Charge)
     starts = tuple(
         numbers.get(_of("START", k, charge), "", x, f"start.{k}", f"Copy of {name} at power-on.")
         for k, (x, name) in enumerate(zip(charge.start, charge.capacitors, strict=True))
     )
-    decide = grow([_flips(port, h, numbers) for h in range(port.held_count)], _buttons(port))
+    decide = grow([_flips(port, h, numbers, mirrored) for h in range(port.held_count)], _buttons(port))
     motions = tuple(_motion(port, k, numbers) for k in range(len(charge.start)))
     return ChargeParts(starts, decide, motions)
 
@@ -319,19 +360,25 @@ def _modes(port: Port) -> list[tuple[int, int, ChargeMode]]:
     return [(q, h, charge.modes[q][h]) for q, h in product((0, 1), range(port.held_count))]
 
 
-def _flips(port: Port, held: int, numbers: Numbers) -> Flips:
+def _flips(port: Port, held: int, numbers: Numbers, mirrored: bool) -> Flips:
     low, high = (_tests(port, q, held, numbers) for q in (0, 1))
-    return Flips(flips(low, high), flips(high, low))
+    if not mirrored:
+        return Flips(flips(low, high), flips(high, low))
+    # What would flip it back is asked of the copy before it is turned round.
+    low_now, high_now = (_tests(port, q, held, numbers, turned=True) for q in (0, 1))
+    return Flips(flips(low, high_now), flips(high, low_now))
 
 
-def _tests(port: Port, q: int, held: int, numbers: Numbers) -> Tests:
+def _tests(port: Port, q: int, held: int, numbers: Numbers, *, turned: bool = False) -> Tests:
     charge = port.machine
     assert isinstance(charge, Charge)
     mode = charge.modes[q][held]
     return Tests(
         *(
             tuple(
-                _compare(port, test, q, held, f"{kind}.q{q}.h{held}.{i}", numbers)
+                _compare(
+                    port, _turn_test(test) if turned else test, q, held, f"{kind}.q{q}.h{held}.{i}", numbers
+                )
                 for i, test in enumerate(tests)
             )
             for kind, tests in (("flip", mode.flips), ("force", mode.force), ("block", mode.blocks))
@@ -387,9 +434,9 @@ def _about_test(test: Test, q: int, key: str) -> str:
 def _motion(port: Port, k: int, numbers: Numbers) -> Motion:
     asks = (*_buttons(port), LATCH)
     modes = [(q, h, mode.moves[k]) for q, h, mode in _modes(port)]
-    if any(move.kind == "mix" for _, _, move in modes):
-        mixed = [_alone_or_mix(port, k, q, h, move, numbers) for q, h, move in modes]
-        return Motion(Leaf(None), Leaf(None), grow(mixed, asks))
+    if any(move.kind in ("mix", "scale", "drain") for _, _, move in modes):
+        whole = [_whole(port, k, q, h, move, numbers) for q, h, move in modes]
+        return Motion(Leaf(None), Leaf(None), grow(whole, asks))
     if {move.kind for _, _, move in modes} >= {"shift", "multiply"}:
         modes = [(q, h, _as_rate(move)) for q, h, move in modes]
     ends = [_end(port, k, q, h, move, numbers) for q, h, move in modes]
@@ -417,10 +464,23 @@ def _as_rate(move: Move) -> Move:
     return replace(move, kind="multiply", rate=1 << (16 - move.shift), shift=0)
 
 
-def _alone_or_mix(port: Port, k: int, q: int, held: int, move: Move, numbers: Numbers) -> Alone | Mix:
+def _whole(port: Port, k: int, q: int, held: int, move: Move, numbers: Numbers) -> Alone | Mix | Affine:
     if move.kind == "mix":
         return _mix(port, k, q, held, move, numbers)
+    if move.kind in ("scale", "drain"):
+        return _affine(port, k, q, held, move, numbers)
     return Alone(_end(port, k, q, held, move, numbers), _amount(port, k, q, held, move, numbers))
+
+
+def _affine(port: Port, k: int, q: int, held: int, move: Move, numbers: Numbers) -> Affine:
+    top = U16 * move.rate >> 16 if move.kind == "scale" else U16 - (U16 >> move.shift)
+    if top + move.add > U16 or not (move.kind == "scale" or 0 < move.shift < 16):
+        raise ValueError(f"{port.name}: a {move.kind} leaves 16 bits")
+    kind: Literal["scale", "drain"] = "scale" if move.kind == "scale" else "drain"
+    number = _pace_number(port, k, q, held, *_SAID[kind], getattr(move, _SAID[kind][1]), numbers)
+    add = _pace_number(port, k, q, held, "ADD", "add", move.add, numbers) if move.add else None
+    guard = STAY if move.only == "both" else _end(port, k, q, held, move, numbers)
+    return Affine(kind, number, add, guard)
 
 
 def _end(port: Port, k: int, q: int, held: int, move: Move, numbers: Numbers) -> End:
@@ -458,17 +518,29 @@ def _amount(port: Port, k: int, q: int, held: int, move: Move, numbers: Numbers)
     if move.kind == "shift":
         if move.shift > 15:
             raise ValueError(f"{port.name}: a shift of {move.shift} moves a 16-bit copy nowhere")
-        return Amount("shift", _pace_number(port, k, q, held, "SHIFT", move.shift, numbers))
-    return Amount("rate", _pace_number(port, k, q, held, "RATE", move.rate, numbers))
+        return Amount("shift", _pace_number(port, k, q, held, "SHIFT", "shift", move.shift, numbers))
+    return Amount("rate", _pace_number(port, k, q, held, "RATE", "rate", move.rate, numbers))
 
 
-def _pace_number(port: Port, k: int, q: int, held: int, role: str, value: int, numbers: Numbers) -> Number:
+#: Role and field of the number that says how much of a copy stays.
+_SAID = {"scale": ("STAYS", "rate"), "drain": ("GOES", "shift")}
+_ABOUT = {
+    "SHIFT": "Part of its distance that the copy of {} goes in a tick, as a power of two.",
+    "RATE": "Part of its distance that the copy of {} goes in a tick, in 65536ths.",
+    "STAYS": "Part of the copy of {} that stays in a tick, in 65536ths.",
+    "GOES": "Part of the copy of {} that goes in a tick, as a power of two.",
+    "ADD": "What the copy of {} gains in a tick.",
+}
+
+
+def _pace_number(
+    port: Port, k: int, q: int, held: int, role: str, what: str, value: int, numbers: Numbers
+) -> Number:
     charge = port.machine
     assert isinstance(charge, Charge)
-    unit = "as a power of two" if role == "SHIFT" else "in 65536ths"
-    about = f"Part of its distance that the copy of {charge.capacitors[k]} goes in a tick, {unit}."
-    key = f"move.q{q}.h{held}.{k}.{role.lower()}"
-    where = _where(port, numbers, q, held, lambda mode: getattr(mode.moves[k], role.lower()))
+    about = _ABOUT[role].format(charge.capacitors[k])
+    key = f"move.q{q}.h{held}.{k}.{what}"
+    where = _where(port, numbers, q, held, lambda mode: getattr(mode.moves[k], what))
     return numbers.get(_of(role, k, charge), where, value, key, about)
 
 
@@ -489,6 +561,126 @@ def _keep_number(port: Port, k: int, j: int, q: int, held: int, keep: int, numbe
     about = f"What a distance of {pair} after a tick, in 65536ths."
     key = f"move.q{q}.h{held}.{k}.keep.{j}"
     return numbers.get(f"KEEP_{k}_{j}", numbers.place(q, held), abs(keep), key, about)
+
+
+# --- the copy turned round ---
+
+
+def is_mirrored(port: Port) -> bool:
+    """Whether the copy is kept as 65535 less itself while the latch is set.
+
+    So it is where the port's moves ask for it, or where that gives both sides more numbers in common.
+
+    Raises:
+        ValueError: a scale or drain is mirrored with the latch at 0, or only some are with it at 1.
+    """
+    charge = port.machine
+    if not isinstance(charge, Charge):
+        return False
+    fixed = [
+        (q, move.mirror)
+        for q, _, mode in _modes(port)
+        for move in mode.moves
+        if move.kind in ("scale", "drain")
+    ]
+    asked = {mirrored for q, mirrored in fixed if q}
+    alone = len(charge.start) == 1
+    if (0, True) in fixed or len(asked) > 1 or (True in asked and not alone):
+        raise ValueError(f"{port.name}: scales and drains are mirrored in part")
+    return alone and (asked.pop() if asked else _alike(charge, turned=True) > _alike(charge, turned=False))
+
+
+def _alike(charge: Charge, *, turned: bool) -> int:
+    """Count what both sides of the latch have in common, with the upper side turned round or not."""
+    turn = _turn_mode if turned else _plain_mode
+    pairs = [(_plain_mode(low), turn(high)) for low, high in zip(*charge.modes, strict=True)]
+    tests = sum(bool(a.flips) and a.flips == b.flips for a, b in pairs)
+    return tests + sum(a.moves == b.moves for a, b in pairs)
+
+
+def stored(port: Port, mirrored: bool) -> Port:
+    """Return a port whose modes are written for the copy as it is kept."""
+    charge = port.machine
+    assert isinstance(charge, Charge)
+    turn = _turn_mode if mirrored else _plain_mode
+    rows = tuple(map(_plain_mode, charge.modes[0])), tuple(map(turn, charge.modes[1]))
+    start = tuple(U16 - x for x in charge.start) if mirrored and port.start_q else charge.start
+    return replace(port, machine=replace(charge, start=start, modes=rows))
+
+
+def _turn_mode(mode: ChargeMode) -> ChargeMode:
+    turned = (tuple(_turn_test(test) for test in tests) for tests in (mode.flips, mode.force, mode.blocks))
+    flips, force, blocks = turned
+    moves = tuple(replace(m, mirror=False) if m.mirror else _turn_move(m) for m in mode.moves)
+    return ChargeMode(flips, moves, force, blocks)
+
+
+def _plain_mode(mode: ChargeMode) -> ChargeMode:
+    moves = tuple(_turn_move(m) if m.mirror else m for m in mode.moves)
+    return replace(mode, moves=moves)
+
+
+def _turn_test(test: Test) -> Test:
+    """Return a test on 65535 less the copy that holds where *test* does: weights and limit turn over."""
+    weight = test.coeff[0] if test.coeff else 0
+    return replace(test, limit=weight * U16 - test.limit, ge=not test.ge)
+
+
+def _turn_move(move: Move) -> Move:
+    """Return a move that does to 65535 less the copy what *move* does to the copy."""
+    if move.kind in ("hold", "scale", "drain"):
+        return replace(move, mirror=move.kind != "hold" and not move.mirror)
+    only: Literal["both", "up", "down"] = {"both": "both", "up": "down", "down": "up"}[move.only]  # type: ignore[assignment]
+    return replace(move, end=U16 - move.end, only=only, mirror=False)
+
+
+# --- rest ---
+
+_MOST_STATES = 1 << 21
+
+
+def tells_itself(port: Port, filtered: tuple[int, ...]) -> bool:
+    """Whether `idle` can do without the last buttons.
+
+    It then asks whether a step with the buttons open (filtered ones: as their counters say) would
+    change anything; looked at in every state there is: that must never be "no" where one more step
+    with the buttons that led to the state would.
+    """
+    states = _every_state(port)
+    if states is None or len(states.q) * port.held_count > _MOST_STATES:
+        return False
+    return all(_at_rest_is_at_rest(port, states, held, filtered) for held in range(1, port.held_count))
+
+
+def _at_rest_is_at_rest(port: Port, states: State, held: int, filtered: tuple[int, ...]) -> bool:
+    step, same = stepper(port), np.full(len(states.q), held)
+    after, _ = step(states, same)
+    guess = np.zeros(len(states.q), np.int64)
+    if filtered:
+        guess = after.regs[:, len(port.buttons)] & sum(1 << i for i in filtered)
+    said, true = (_stays(step(after, h)[0], after) for h in (guess, same))
+    return not (said & ~true).any()
+
+
+def _stays(a: State, b: State) -> NDArray[np.bool_]:
+    return np.asarray((a.q == b.q) & (a.regs == b.regs).all(axis=1))
+
+
+def _every_state(port: Port) -> State | None:
+    """Return all states of a port, reachable or not; None where there are too many to look at."""
+    machine = port.machine
+    if isinstance(machine, Charge):
+        ranges = [range(U16 + 1)] * len(machine.start)
+    else:
+        n = len(port.buttons)
+        top = [max(p, r) for p, r in zip(machine.press, machine.release, strict=True)]
+        most = max(*machine.toggle.tap, *machine.toggle.hold) if machine.toggle else 0
+        ranges = [*map(range, top), range(1 << n), range(most + 1)]
+    sizes = [2, *map(len, ranges)]
+    if math.prod(sizes) > _MOST_STATES:
+        return None
+    grid = np.indices(sizes).reshape(len(sizes), -1).T.astype(np.int64)
+    return State(grid[:, 0].astype(np.uint8), grid[:, 1:])
 
 
 # --- count ---

@@ -10,6 +10,7 @@ from porter.emit.c99 import amounts_of, suite_rows
 from porter.emit.fold import fold
 from porter.emit.language import Job, banner, microseconds, why
 from porter.emit.lower import (
+    Affine,
     All,
     Alone,
     Amount,
@@ -80,11 +81,12 @@ class Core:
                 for n in self.parts.numbers
                 if _ref(n) in words
             ],
-            "helpers": [h for h in ("part", "kept", "against") if f"_{h}" in words],
+            "helpers": [h for h in ("scaled", "part", "kept", "against") if f"_{h}" in words],
             "state": fold(state, 8),
             "step": fold(step, 8),
             "idle": fold(idle, 8),
             "suite": suite_rows(self.job.suite),
+            "all_seen": self.parts.sees_held,
         }
 
     def _fields(self) -> list[str]:
@@ -136,6 +138,8 @@ class Core:
         names = self._fields()
         if parts.recorded:
             guess = ["was = self._was"]
+        elif not filters:
+            guess = []
         else:
             guess = ["was = 0"]
             for f in filters:
@@ -144,7 +148,8 @@ class Core:
         keep = [f"{name} = self._{name}" for name in names if name != "was"]
         same = " and ".join(f"{name} == self._{name}" for name in names if name != "was")
         back = [f"self._{name} = {name}" for name in names if name != "was"]
-        return [*keep, *guess, "self.step(was)", f"same = {same}", *back, "return same"]
+        open_ = not parts.recorded and not filters
+        return [*keep, *guess, f"self.step({0 if open_ else 'was'})", f"same = {same}", *back, "return same"]
 
     def _settled(self, item: Filter) -> str:
         n = f"self._{filter_name(self.port, item.button)}"
@@ -194,7 +199,7 @@ class Core:
         names = copies(machine)
         decide = render(machine.decide, self._ask, lambda f: self._flip(f, names), SYNTAX)
         lines = ["# Decide with the charge from before this tick.", *decide] if decide else []
-        mixed = any(motion.mixed for motion in machine.motions)
+        mixed = any(motion.mixes for motion in machine.motions)
         for k, (x, motion) in enumerate(zip(names, machine.motions, strict=True)):
             y = f"y{k}" if mixed else x
             moved = self._motion(motion, x, y, names)
@@ -205,14 +210,26 @@ class Core:
     def _flip(self, flips: Flips, names: tuple[str, ...]) -> list[str]:
         low, high = _any(flips.low, names), _any(flips.high, names)
         if low == high:
-            return [] if low is None else branch(low, ["q ^= 1"], [], SYNTAX) if low else ["q ^= 1"]
-        up, down = _turned(low, 1), _turned(high, 0)
+            turn = ["q ^= 1", *self._turn_copy()]
+            return [] if low is None else branch(low, turn, [], SYNTAX) if low else turn
+        up, down = self._turned(low, 1), self._turned(high, 0)
         return branch("q", down, up, SYNTAX) if down else branch("not q", up, [], SYNTAX)
 
+    def _turn_copy(self) -> list[str]:
+        return ["x ^= 65535"] if self.parts.mirrored else []
+
+    def _turned(self, condition: str | None, value: int) -> list[str]:
+        if condition is None:
+            return []
+        turn = [f"q = {value}", *self._turn_copy()]
+        return branch(condition, turn, [], SYNTAX) if condition else turn
+
     def _motion(self, motion: Motion, x: str, y: str, names: tuple[str, ...]) -> list[str]:
-        if motion.mixed:
-            return render(motion.mixed, self._ask, lambda leaf: self._mixed(leaf, x, y, names), SYNTAX)
         opened = [] if x == y else [f"{y} = {x}"]
+        if motion.whole:
+            return opened + render(
+                motion.whole, self._ask, lambda leaf: self._whole(leaf, x, y, names), SYNTAX
+            )
         used = amounts_of(motion)
         if not used:  # only jumps and rests
             return opened + render(motion.aims, self._ask, lambda aim: _jump(aim.end, y), SYNTAX)
@@ -226,7 +243,9 @@ class Core:
             f"{y} = {y} + by if {y} < end else {y} - by",
         ]
 
-    def _mixed(self, leaf: Alone | Mix, x: str, y: str, names: tuple[str, ...]) -> list[str]:
+    def _whole(self, leaf: Alone | Mix | Affine, x: str, y: str, names: tuple[str, ...]) -> list[str]:
+        if isinstance(leaf, Affine):
+            return _affine(leaf, x, y)
         if isinstance(leaf, Mix):
             terms = [
                 _kept(sign, keep, copy, end)
@@ -235,13 +254,23 @@ class Core:
             ]
             return [f"{y} = min(max({' '.join([_ref(leaf.end), *terms])}, 0), 65535)"]
         if leaf.amount is None:
-            return [f"{y} = {_target(leaf.end, x)}"]
+            return [] if leaf.end.number is None else [f"{y} = {_target(leaf.end, x)}"]
         return [
             *_aim(Alone(leaf.end, None), x),
             f"by = end - {x} if {x} < end else {x} - end",
             _part(leaf.amount.kind, _ref(leaf.amount.number)),
             f"{y} = {x} + by if {x} < end else {x} - by",
         ]
+
+
+def _affine(leaf: Affine, x: str, y: str) -> list[str]:
+    add, ref = f" + {_ref(leaf.add)}" if leaf.add else "", _ref(leaf.number)
+    kept = f"_scaled({x}, {ref})" if leaf.kind == "scale" else f"{x} - ({x} >> {ref})"
+    lines = [f"{y} = {kept}{add}"]
+    if leaf.guard.number is None:
+        return lines
+    side = "<" if leaf.guard.only == "up" else ">"
+    return branch(f"{x} {side} {_ref(leaf.guard.number)}", lines, [], SYNTAX)
 
 
 def _ref(number: Number) -> str:
@@ -289,12 +318,6 @@ def _kept(sign: int, keep: Number, x: str, end: Number) -> str:
         if keep.value == 65536
         else f"{mark} _kept({x}, {_ref(end)}, {_ref(keep)})"
     )
-
-
-def _turned(condition: str | None, value: int) -> list[str]:
-    if condition is None:
-        return []
-    return branch(condition, [f"q = {value}"], [], SYNTAX) if condition else [f"q = {value}"]
 
 
 def _any(any_of: Any, names: tuple[str, ...]) -> str | None:

@@ -5,7 +5,7 @@ import textwrap
 from dataclasses import dataclass, field, replace
 
 from porter.emit.names import comment, unique
-from porter.port.model import Constant, Port
+from porter.port.model import U16, Constant, Port
 
 
 @dataclass(frozen=True, slots=True)
@@ -37,7 +37,7 @@ class Numbers:
         keys += [key] if key not in keys else []
         if known is None:
             name = self._free(f"{role}_{where}" if where else role)
-            known = Number(name, value, self._about(key, fallback))
+            known = Number(name, value, self._about(key, fallback, value))
             self.rows[role, value] = known
         return known
 
@@ -69,11 +69,14 @@ class Numbers:
     def _names(self, held: int) -> str:
         return " and ".join(b for i, b in enumerate(self.port.buttons) if held >> i & 1) or "none held"
 
-    def _about(self, key: str, fallback: str) -> tuple[str, ...]:
+    def _about(self, key: str, fallback: str, value: int) -> tuple[str, ...]:
         # The first test of a mode may go without its number.
         keys = (key, key.replace(".0.limit", ".limit"))
         row = next((c for c in self.port.constants if c.key in keys), None)
-        return describe(row) if row else tuple(wrap(fallback))
+        if row is None:
+            return tuple(wrap(fallback))
+        turned = wrap(f"as it is kept: 65535 - {row.value} = {value}") if value == U16 - row.value else []
+        return (*describe(row), *turned)
 
 
 def describe(row: Constant) -> tuple[str, ...]:

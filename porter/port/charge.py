@@ -1,6 +1,7 @@
 """The charge style: an integer copy of each capacitor that matters, moved by the exact one-tick solution."""
 
-from collections.abc import Iterator
+from collections.abc import Iterator, Sequence
+from dataclasses import replace
 from itertools import pairwise
 
 import numpy as np
@@ -9,6 +10,7 @@ from numpy.typing import NDArray
 from porter.circuit.engine import Engine, Ints
 from porter.circuit.network import Mode
 from porter.circuit.values import Floats
+from porter.port.ease import Eased, Flow, distinct, ease, said
 from porter.port.memory import Memory, settled_mode
 from porter.port.model import U16, Charge, ChargeMode, Constant, Move, Test
 from porter.port.origin import Origin
@@ -27,6 +29,7 @@ def plan_charge(circuit: Circuit, mem: Memory, tick_s: float) -> tuple[Charge, l
     origin = Origin(circuit, mem)
     planner = _Planner(mem, tick_s, origin)
     rows = [tuple(planner.mode(q, h) for h in masks) for q in (0, 1)]
+    rows, eased = planner.eased(rows)
     start = _start_copies(mem)
     names = tuple(mem.engine.topo.state_names[k] for k in mem.kept)
     machine = Charge(names, tuple(mem.low_v.tolist()), tuple(mem.scale_v.tolist()), start, (rows[0], rows[1]))
@@ -40,7 +43,7 @@ def plan_charge(circuit: Circuit, mem: Memory, tick_s: float) -> tuple[Charge, l
         )
         for k, value in enumerate(start)
     ]
-    return machine, constants + planner.constants, _said(mem)
+    return machine, constants + planner.constants, [*_said(mem), *eased]
 
 
 def _said(mem: Memory) -> list[str]:
@@ -65,6 +68,7 @@ class _Planner:
     def __init__(self, mem: Memory, tick_s: float, origin: Origin) -> None:
         self.mem, self.tick_s, self.origin = mem, tick_s, origin
         self.constants: list[Constant] = []
+        self.flows: list[Flow] = []
 
     def mode(self, q: int, held: int) -> ChargeMode:
         if len(self.mem.kept) == 1:
@@ -124,8 +128,40 @@ class _Planner:
         self.constants.append(self.origin.end(f"{key}.end", to, q, held, at, end_v))
         if step > U16:
             return Move("jump", to)
-        self.constants.append(self.origin.rate(f"{key}.rate", step, q, held, at, rate, self.tick_s))
+        self.flows.append(Flow(q, held, at, 1.0 - float(share), end, end_v, rate, only))
         return Move("multiply", to, rate=step, only=only)  # type: ignore[arg-type]
+
+    def eased(self, rows: list[tuple[ChargeMode, ...]]) -> tuple[list[tuple[ChargeMode, ...]], list[str]]:
+        """Return the modes with the cheapest arithmetic, and sentences on it."""
+        plain, turned = self._eased(mirrored=False), self._eased(mirrored=True)
+        mirrored = len(self.mem.kept) == 1 and is_upside_down(rows) and distinct(turned) <= distinct(plain)
+        chosen = turned if mirrored else plain
+        moves = {(e.flow.q, e.flow.held, e.flow.at): e.move for e in chosen}
+        self.constants += [c for each in chosen for c in self._numbers(each)]
+        changed = [
+            tuple(_with_moves(mode, q, h, moves) for h, mode in enumerate(row)) for q, row in enumerate(rows)
+        ]
+        return changed, said(chosen, mirrored, self.mem.scale_v)
+
+    def _eased(self, *, mirrored: bool) -> list[Eased]:
+        copies = range(len(self.mem.kept))
+        return [e for at in copies for e in ease([flow for flow in self.flows if flow.at == at], mirrored)]
+
+    def _numbers(self, eased: Eased) -> list[Constant]:
+        flow, move = eased.flow, eased.move
+        where = (flow.q, flow.held, flow.at)
+        numbers = [
+            self.origin.stays(
+                f"{flow.key}.{'rate' if move.kind == 'scale' else 'shift'}",
+                move,
+                *where,
+                flow.rate,
+                self.tick_s,
+            )
+        ]
+        if move.add:
+            numbers.append(self.origin.add(f"{flow.key}.add", move, *where, flow.stays, flow.end))
+        return numbers
 
     # --- more capacitors ---
 
@@ -148,6 +184,20 @@ class _Planner:
         for j, value in enumerate(row):
             self.constants.append(self.origin.keep(f"{key}.keep.{j}", value, q, held, k, j, self.tick_s))
         return Move("mix", whole[k], keep=row, ends=whole)
+
+
+def is_upside_down(rows: Sequence[tuple[ChargeMode, ...]]) -> bool:
+    """Whether the latch flips up where 65535 less the copy would make it flip down, to one copy."""
+    pairs = [(low.flips, high.flips) for low, high in zip(*rows, strict=True) if low.flips and high.flips]
+    return bool(pairs) and all(len(a) == len(b) == 1 and _mirrors(a[0], b[0]) for a, b in pairs)
+
+
+def _mirrors(low: Test, high: Test) -> bool:
+    return low.ge != high.ge and abs(low.limit - (U16 - high.limit)) <= 1
+
+
+def _with_moves(mode: ChargeMode, q: int, held: int, moves: dict[tuple[int, int, int], Move]) -> ChargeMode:
+    return replace(mode, moves=tuple(moves.get((q, held, at), move) for at, move in enumerate(mode.moves)))
 
 
 def one_tick(mem: Memory, mode: Mode, tick_s: float) -> tuple[Floats, Floats]:

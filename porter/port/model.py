@@ -63,8 +63,16 @@ class Move:
     kind ``jump``: ``X = end``.
     kind ``shift``: moves toward `end` by ``(|X - end| + (1 << shift >> 1)) >> shift``.
     kind ``multiply``: moves toward `end` by ``(|X - end| * rate + 32768) >> 16`` (rate 1..65535).
-    `only` limits ``shift`` and ``multiply``: ``up`` moves only while ``X < end``, ``down`` only while
+    kind ``scale``: ``X = (X * rate >> 16) + add``, the same motion with no distance to take: `rate`
+    65536ths of the copy stay (0..65535) and `add` brings it to `end`; one multiplication, no sign.
+    kind ``drain``: ``X = X - (X >> shift) + add``, a scale by a power of two (shift 1..15).
+    `add` of both is such that no copy leaves 0..65535.
+    `only` limits these four: ``up`` moves only while ``X < end``, ``down`` only while
     ``X > end`` (an output that only sources or only sinks); elsewhere the copy stays.
+
+    `mirror` True: the whole move is made with ``65535 - X`` in place of ``X`` (not for ``mix``).
+    Where both sides of a latch work alike but upside down, a port that stores ``65535 - X`` while q
+    is 1 has one code for both; flipping is then a complement.
 
     kind ``mix`` (more than one capacitor): ``X = clamp(end + sum over j of
     sgn(d_j) * sgn(keep_j) * ((|d_j| * |keep_j| + 32768) >> 16), 0, 65535)`` with
@@ -72,13 +80,15 @@ class Move:
     `keep` of 65536 means exactly one (``d_j`` itself) and `ends` the ends of all capacitors.
     """
 
-    kind: Literal["hold", "jump", "shift", "multiply", "mix"]
+    kind: Literal["hold", "jump", "shift", "multiply", "scale", "drain", "mix"]
     end: int
     shift: int = 0
     rate: int = 0
     keep: tuple[int, ...] = ()
     ends: tuple[int, ...] = ()
     only: Literal["both", "up", "down"] = "both"
+    add: int = 0
+    mirror: bool = False
 
 
 @dataclass(frozen=True, slots=True)

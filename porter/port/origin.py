@@ -8,7 +8,7 @@ from porter.circuit.engine import Engine
 from porter.circuit.network import Mode
 from porter.circuit.values import Floats
 from porter.port.memory import Memory, settled_mode
-from porter.port.model import U16, Constant, Test
+from porter.port.model import U16, Constant, Move, Test
 from porter.spec.model import Circuit
 
 _NUDGE = 1.01
@@ -63,6 +63,33 @@ class Origin:
         working = f"({end_v:.6g} V - {low:.6g} V) / {scale * U16:.6g} V * 65535 = {(end_v - low) / scale:.2f}"
         meaning = f"{name} settles here; {self._held(q, held)} ({end_v / supply:.4f} of the supply)"
         return self.constant(key, value, meaning, working, self._moved_by(volts))
+
+    def stays(self, key: str, move: Move, q: int, held: int, at: int, rate: float, tick_s: float) -> Constant:
+        """How much of a copy stays in one tick."""
+        k, name = self._state(at)
+        A, _ = _dynamics(self._mode(q, held))
+        times = f"{tick_s * 1e3:g} ms / {1e3 / rate:.6g} ms"
+        stays = float(np.exp(-rate * tick_s))
+        if move.kind == "drain":
+            exact = f"-log2(1 - exp(-T/tau)) = -log2(1 - exp(-{times})) = {-np.log2(1 - stays):.4f}"
+            meaning = f"of {name} one part in 2 to the power of this goes in a tick; {self._held(q, held)}"
+            return self.constant(key, move.shift, meaning, exact, self._moved_by(A[:, k, k]))
+        exact = f"65536 * exp(-T/tau) = 65536 * exp(-{times}) = {65536 * stays:.2f}"
+        meaning = f"65536ths of {name} that stay in a tick; {self._held(q, held)}"
+        return self.constant(key, move.rate, meaning, exact, self._moved_by(A[:, k, k]))
+
+    def add(self, key: str, move: Move, q: int, held: int, at: int, stays: float, end: float) -> Constant:
+        """What a copy gains in one tick, so that it settles at its end."""
+        k, name = self._state(at)
+        to, of = (U16 - end, f"65535 less {name}") if move.mirror else (end, name)
+        working = (
+            f"end * (1 - exp(-T/tau)) = {to:.2f} * {1 - stays:.6f} = {to * (1 - stays):.2f}, "
+            "and half of what is lost in rounding down"
+        )
+        meaning = f"what {of} gains in a tick; {self._held(q, held)}"
+        A, b = _dynamics(self._mode(q, held))
+        columns = self._moved_by(b[:, k]) + self._moved_by(A[:, k, k])
+        return self.constant(key, move.add, meaning, working, columns)
 
     def rate(self, key: str, value: int, q: int, held: int, at: int, rate: float, tick_s: float) -> Constant:
         """The share of its way that a copy goes in one tick."""

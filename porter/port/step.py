@@ -34,10 +34,10 @@ def step(port: Port, state: State, held: NDArray[np.integer]) -> tuple[State, ND
     Returns:
         The state after the tick and the outputs' bits of the tick, shape (B,) uint8.
     """
-    held = held.astype(np.int64)
+    masks: Ints = held.astype(np.int64)
     stepper = _step_charge if isinstance(port.machine, Charge) else _step_count
-    after = stepper(port, state, held)
-    return after, np.array(port.answer, np.uint8)[after.q, held]
+    after = stepper(port, state, masks)
+    return after, np.array(port.answer, np.uint8)[after.q, masks]
 
 
 def run(port: Port, held: NDArray[np.integer]) -> NDArray[np.uint8]:
@@ -56,7 +56,7 @@ def idle(port: Port, state: State, held: NDArray[np.integer]) -> Mask:
     fixed point, since the step is a function of state and held alone.
     """
     after, _ = step(port, state, held)
-    return (after.q == state.q) & (after.regs == state.regs).all(axis=1)
+    return np.asarray((after.q == state.q) & (after.regs == state.regs).all(axis=1))
 
 
 # --- charge ---
@@ -112,21 +112,34 @@ def _move(machine: Charge, q: NDArray[np.uint8], regs: Ints, held: Ints) -> Ints
 
 def move_copies(move: Move, k: int, regs: Ints) -> Ints:
     """Return copy *k* of each lane after one tick of *move*; `regs` has shape (B, copies)."""
+    if move.kind == "mix":
+        return _mix(move, regs)
     X = regs[:, k]
+    return U16 - _moved(move, U16 - X) if move.mirror else _moved(move, X)
+
+
+def _moved(move: Move, X: Ints) -> Ints:
     if move.kind == "hold":
         return X
     if move.kind == "jump":
         return np.full_like(X, move.end)
-    if move.kind == "mix":
-        return _mix(move, regs)
+    if move.kind == "scale":
+        return _allowed(move, X, (X * move.rate >> 16) + move.add)
+    if move.kind == "drain":
+        return _allowed(move, X, X - (X >> move.shift) + move.add)
     far = np.abs(X - move.end)
     if move.kind == "shift":
         by = (far + ((1 << move.shift) >> 1)) >> move.shift
     else:
         by = (far * move.rate + 32768) >> 16
-    up = (X < move.end) & (move.only != "down")
-    down = (X > move.end) & (move.only != "up")
-    return np.where(up, X + by, np.where(down, X - by, X))
+    return _allowed(move, X, np.where(X < move.end, X + by, X - by))
+
+
+def _allowed(move: Move, X: Ints, to: Ints) -> Ints:
+    """Return *to*, but X itself on the side of the end from which the move does nothing."""
+    if move.only == "both":
+        return to
+    return np.where(X < move.end if move.only == "up" else X > move.end, to, X)
 
 
 def _mix(move: Move, regs: Ints) -> Ints:

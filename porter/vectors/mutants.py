@@ -263,18 +263,32 @@ def _of_test(test: Test) -> Iterator[tuple[str, Test]]:
 
 def _of_move(move: Move) -> Iterator[tuple[str, Move]]:
     """Yield wrong moves: the numbers that the move's kind looks at, and standing still or jumping."""
+    affine = move.kind in ("scale", "drain")
     if move.kind != "hold":
         yield "stands still", Move("hold", move.end)
-        for what, end in _nudged((move.end,), 0, U16):
+        for what, end in () if affine else _nudged((move.end,), 0, U16):
             yield f"end{what}", replace(move, end=end[0])
-    if move.kind in ("shift", "multiply", "mix"):
-        yield "jumps", Move("jump", move.end)
+        for what, add in _nudged((move.add,), 0, U16) if affine else ():
+            if _fits(wrong := replace(move, add=add[0])):
+                yield f"add{what}", wrong
+    if move.kind in ("shift", "multiply", "scale", "drain", "mix"):
+        yield "jumps", replace(move, kind="jump", only="both")
     if move.only != "both":
         yield "moves both ways", replace(move, only="both")
     if move.kind == "shift":
         yield from ((f"shift{what}", replace(move, shift=n[0])) for what, n in _nudged((move.shift,), 0, 15))
-    if move.kind == "multiply":
-        yield from ((f"rate{what}", replace(move, rate=n[0])) for what, n in _nudged((move.rate,), 1, 65535))
+    if move.kind == "drain":
+        shifts = ((f"shift{what}", replace(move, shift=n[0])) for what, n in _nudged((move.shift,), 1, 15))
+        yield from ((what, wrong) for what, wrong in shifts if _fits(wrong))
+    if move.kind in ("multiply", "scale"):
+        rates = ((f"rate{what}", replace(move, rate=n[0])) for what, n in _nudged((move.rate,), 1, 65535))
+        yield from ((what, wrong) for what, wrong in rates if _fits(wrong))
     if move.kind == "mix":
         yield from ((f"keep{what}", replace(move, keep=n)) for what, n in _nudged(move.keep, -65536, 65536))
         yield from ((f"ends{what}", replace(move, ends=n)) for what, n in _nudged(move.ends, 0, U16))
+
+
+def _fits(move: Move) -> bool:
+    """Whether a scale or drain keeps every copy within its range; true for the other kinds."""
+    top = {"scale": U16 * move.rate >> 16, "drain": U16 - (U16 >> move.shift)}.get(move.kind, 0)
+    return top + move.add <= U16

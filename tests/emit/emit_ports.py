@@ -1,5 +1,6 @@
 """Ports made by hand, and strategies that make more: what the planner could hand to the emit room."""
 
+from dataclasses import replace
 from functools import cache
 from itertools import pairwise, product
 
@@ -100,6 +101,41 @@ def toggle_multiply():
     return _one_cap(opened, held, "rate_toggle")
 
 
+def _upside_down(name, opened, held):
+    """The one-button circuit with both sides alike: the copy counts from the rail that is driven."""
+    flip = (Test((1,), False, 21845),), (Test((1,), True, 43690),)
+    modes = tuple(
+        (
+            ChargeMode((), (replace(opened, mirror=q == 1),)),
+            ChargeMode(flip[q], (replace(held, mirror=q == 1),)),
+        )
+        for q in (0, 1)
+    )
+    return port(name, Charge(("mem",), (0.0,), (1e-4,), (0,), modes), ("PUSH",))
+
+
+def toggle_drain():
+    """Both sides alike, decays that are powers of two."""
+    return _upside_down("soft_toggle", Move("drain", 0, 8), Move("drain", 31507, 3, add=3939))
+
+
+def toggle_scale():
+    """Both sides alike, any decays."""
+    return _upside_down(
+        "even_toggle", Move("scale", 0, rate=64668), Move("scale", 31507, rate=46337, add=9230)
+    )
+
+
+def one_way():
+    """Scales and drains that a rectifier stops, beside kinds that know their distance."""
+    low = ChargeMode((Test((1,), True, 60000),), (Move("scale", 123, rate=64905, add=1, only="down"),))
+    pressed = ChargeMode((Test((1,), True, 60000),), (Move("drain", 65000, 5, add=2031, only="up"),))
+    high = ChargeMode((Test((1,), False, 9000),), (Move("multiply", 300, rate=800),))
+    return port(
+        "sink_latch", Charge(("mem",), (0.0,), (1e-4,), (50000,), ((low, pressed), (high, high))), ("PUSH",)
+    )
+
+
 def two_caps():
     """Two capacitors that share modes."""
     ends = (50000, 40000)
@@ -117,7 +153,18 @@ def two_caps():
     return port("pair_latch", charge, ("PUSH",))
 
 
-HAND_MADE = (two_button, filtered, toggle_count, toggle_sides, toggle_shift, toggle_multiply, two_caps)
+HAND_MADE = (
+    two_button,
+    filtered,
+    toggle_count,
+    toggle_sides,
+    toggle_shift,
+    toggle_multiply,
+    toggle_drain,
+    toggle_scale,
+    one_way,
+    two_caps,
+)
 
 
 def stimulus(made: Port, ticks: int, seed: int) -> np.ndarray:
@@ -210,6 +257,7 @@ def _move(caps: int) -> st.SearchStrategy[Move]:
             ONLY,
         ),
     )
+    plain = st.one_of(plain, _affine())
     if caps == 1:
         return plain
     keep = st.one_of(st.sampled_from((0, 65536)), st.integers(-65535, 65535))
@@ -220,6 +268,22 @@ def _move(caps: int) -> st.SearchStrategy[Move]:
         st.tuples(*[COPY] * caps),
     )
     return st.one_of(plain, mix)
+
+
+@st.composite
+def _affine(draw) -> Move:
+    """A scale or a drain that keeps every copy within its range."""
+    if draw(st.booleans()):
+        rate = draw(st.one_of(st.sampled_from((0, 65535)), st.integers(0, 65535)))
+        add = draw(st.integers(0, 65535 - (65535 * rate >> 16)))
+        return Move("scale", draw(COPY), rate=rate, add=add, only=draw(ONLY))
+    shift = draw(st.integers(1, 15))
+    return Move("drain", draw(COPY), shift, add=draw(st.integers(0, 65535 >> shift)), only=draw(ONLY))
+
+
+def _mirrored(mode: ChargeMode) -> ChargeMode:
+    moves = tuple(replace(m, mirror=True) if m.kind in ("scale", "drain") else m for m in mode.moves)
+    return replace(mode, moves=moves)
 
 
 def _test(caps: int) -> st.SearchStrategy[Test]:
@@ -250,10 +314,10 @@ def charge_ports(draw, most_caps: int = 3) -> Port:
     )
     pool = st.sampled_from(draw(st.lists(mode, min_size=1, max_size=4)))
     half = st.tuples(*[pool] * (1 << n))
-    start = draw(st.tuples(*[COPY] * caps))
-    charge = Charge(
-        tuple(f"node{k}" for k in range(caps)), (0.0,) * caps, (1e-4,) * caps, start, (draw(half), draw(half))
-    )
+    start, low, high = draw(st.tuples(*[COPY] * caps)), draw(half), draw(half)
+    if caps == 1 and draw(st.booleans()):
+        high = tuple(map(_mirrored, high))
+    charge = Charge(tuple(f"node{k}" for k in range(caps)), (0.0,) * caps, (1e-4,) * caps, start, (low, high))
     return _dressed(draw, charge, n)
 
 

@@ -9,7 +9,17 @@ from pathlib import Path
 from types import SimpleNamespace
 
 import pytest
-from emit_ports import HAND_MADE, suite, toggle_count, toggle_shift, toggle_sides, two_button, two_caps
+from emit_ports import (
+    HAND_MADE,
+    suite,
+    toggle_count,
+    toggle_drain,
+    toggle_scale,
+    toggle_shift,
+    toggle_sides,
+    two_button,
+    two_caps,
+)
 from emit_run import micropython
 from hypothesis import given, settings
 from hypothesis import strategies as st
@@ -256,7 +266,7 @@ def test_equal_modes_share_their_code():
     assert text.count(">> 1u);") - text.count("bits >> 1u);") == 1
 
 
-@pytest.mark.parametrize("make", [two_button, toggle_count, toggle_shift])
+@pytest.mark.parametrize("make", [two_button, toggle_count, toggle_shift, toggle_drain, toggle_scale])
 @pytest.mark.parametrize(
     "path",
     [

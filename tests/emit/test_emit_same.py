@@ -10,6 +10,7 @@ from hypothesis import HealthCheck, Phase, given, settings
 from hypothesis import strategies as st
 
 from porter.emit import emit
+from porter.emit.lower import lower
 from porter.port import step as reference
 from porter.port.model import Charge, Port, State
 
@@ -50,11 +51,19 @@ def walk(port: Port, core: Core) -> int:
         ours, expected = reference.step(port, ours, held)
         theirs, answers, rest = core.step(np.repeat(theirs, port.held_count), held)
         np.testing.assert_array_equal(expected, answers)
-        np.testing.assert_array_equal(reference.idle(port, ours, held), rest)
+        check_rest(port, ours, held, rest)
         ours, theirs = _new(ours, theirs, seen)
         if len(seen) > MOST_STATES:
             break
     return len(seen)
+
+
+def check_rest(port: Port, state: State, held: np.ndarray, rest: np.ndarray) -> None:
+    """`idle` never says more than is true; with the buttons open, or where it keeps them, it says all."""
+    true = reference.idle(port, state, held)
+    assert not (rest & ~true).any()
+    seen = np.full(len(held), lower(port).sees_held) | (held == 0)
+    np.testing.assert_array_equal(true[seen], rest[seen])
 
 
 def _new(ours: State, theirs: np.ndarray, seen: set[bytes]) -> tuple[State, np.ndarray]:
@@ -75,7 +84,7 @@ def follow(port: Port, core: Core, ticks: int) -> None:
         ours, expected = reference.step(port, ours, held[:, tick])
         theirs, answers, rest = core.step(theirs, held[:, tick])
         np.testing.assert_array_equal(expected, answers)
-        np.testing.assert_array_equal(reference.idle(port, ours, held[:, tick]), rest)
+        check_rest(port, ours, held[:, tick], rest)
 
 
 def test_hand_made_ports_are_the_same_in_every_state(tmp_path, cache):
@@ -149,7 +158,7 @@ def test_python_is_the_same(port):
         now = np.array([held])
         state, expected = reference.step(port, state, now)
         assert int(expected[0]) == latch.step(int(held))
-        assert bool(reference.idle(port, state, now)[0]) == bool(latch.idle())
+        check_rest(port, state, now, np.array([bool(latch.idle())]))
 
 
 def test_micropython_runs_without_the_heap():

@@ -46,13 +46,13 @@
 void memo_toggle_init(memo_toggle_t *m)
 {
     m->x = MEMO_TOGGLE_START;
-    m->bits = 0u;
+    m->q = 0u;
 }
 
 uint8_t memo_toggle_step(memo_toggle_t *m, uint8_t held)
 {
     uint16_t x = m->x;
-    uint8_t q = (uint8_t)(m->bits & 1u);
+    uint8_t q = (uint8_t)(m->q & 1u);
 
     /* Decide with the charge from before this tick. */
     if ((held & MEMO_TOGGLE_BUTTON_PUSH) != 0u) {
@@ -90,7 +90,7 @@ uint8_t memo_toggle_step(memo_toggle_t *m, uint8_t held)
     x = (x < end) ? (uint16_t)(x + by) : (uint16_t)(x - by);
 
     m->x = x;
-    m->bits = (uint8_t)(q | (uint8_t)(held << 1u));
+    m->q = q;
 
     return q;
 }
@@ -98,10 +98,9 @@ uint8_t memo_toggle_step(memo_toggle_t *m, uint8_t held)
 bool memo_toggle_idle(const memo_toggle_t *m)
 {
     memo_toggle_t next;
-    uint8_t was = (uint8_t)(m->bits >> 1u);
 
     next.x = m->x;
-    next.bits = m->bits;
-    (void)memo_toggle_step(&next, was);
-    return (next.x == m->x) && (next.bits == m->bits);
+    next.q = m->q;
+    (void)memo_toggle_step(&next, 0u);
+    return (next.x == m->x) && (next.q == m->q);
 }

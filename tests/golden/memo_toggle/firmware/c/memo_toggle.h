@@ -26,8 +26,8 @@
 typedef struct {
     /* copy of mem, 0 V + 0.0001 V each. */
     uint16_t x;
-    /* bit 0: the latch, 1 = output high; bits 1 to 7: the buttons of the last step. */
-    uint8_t bits;
+    /* the latch, 1 = output high. */
+    uint8_t q;
 } memo_toggle_t;
 
 /* Set the power-on state; before anything else. */
@@ -41,6 +41,7 @@ uint8_t memo_toggle_step(memo_toggle_t *m, uint8_t held);
 
 /* True: stepping again with the `held` of the last step would change neither the state nor the
  * answer, for ever. The controller may sleep until a button changes. Step once before the first call.
+ * It says so only with the buttons open: to see it with one held would cost the state its last reading.
  */
 bool memo_toggle_idle(const memo_toggle_t *m);
 

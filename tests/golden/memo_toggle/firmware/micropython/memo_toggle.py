@@ -64,7 +64,6 @@ class MemoToggle:
     def __init__(self):
         self._x = _START
         self._q = 0
-        self._was = 0
 
     def step(self, held):
         """Advance by one tick.
@@ -98,15 +97,16 @@ class MemoToggle:
         x = x + by if x < end else x - by
         self._x = x
         self._q = q
-        self._was = held
         return q
 
     def idle(self):
-        """True: stepping again with the last `held` would change nothing, for ever. Step once before."""
+        """True: stepping again with the last `held` would change nothing, for ever. Step once before.
+
+        Said only with the buttons open: to see it with one held would cost the state its last reading.
+        """
         x = self._x
         q = self._q
-        was = self._was
-        self.step(was)
+        self.step(0)
         same = x == self._x and q == self._q
         self._x = x
         self._q = q

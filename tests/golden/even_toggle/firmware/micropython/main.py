@@ -1,0 +1,65 @@
+# A test latch: example pin layer.
+#
+# Written by porter 0.1.0 from even_toggle.yaml, SHA-256
+# 0000000000000000000000000000000000000000000000000000000000000000
+# Don't edit; remake it with: porter port even_toggle.yaml -o DIR
+#
+# Same as the circuit for every sequence of any length.
+
+# Fit the pin numbers and polarities below to your board; the rest can stay.
+# An output needs an external resistor to its safe level: until this file runs, and after a
+# reset, the pins float.
+import time
+
+from machine import Pin, WDT
+
+from even_toggle import TICK_US, EvenToggle
+
+# (pin number, level while the button is pressed); a contact to ground reads 0 while pressed.
+BUTTONS = (
+    (2, 0),  # PUSH
+)
+# (pin number, level while the output is active).
+OUTPUTS = (
+    (10, 1),  # lamp
+)
+WATCHDOG_MS = 2000
+
+
+def read(pins):
+    held = 0
+    for i in range(len(pins)):
+        if pins[i].value() == BUTTONS[i][1]:
+            held |= 1 << i
+    return held
+
+
+def write(pins, active):
+    for j in range(len(pins)):
+        level = OUTPUTS[j][1]
+        pins[j].value(level if active >> j & 1 else 1 - level)
+
+
+def main():
+    latch = EvenToggle()
+    inputs = [Pin(number, Pin.IN, Pin.PULL_DOWN if level else Pin.PULL_UP) for number, level in BUTTONS]
+    # The level is set before the direction, so that the output never shows the wrong one.
+    first = latch.step(read(inputs))
+    outputs = [
+        Pin(number, Pin.OUT, value=level if first >> j & 1 else 1 - level)
+        for j, (number, level) in enumerate(OUTPUTS)
+    ]
+    dog = WDT(timeout=WATCHDOG_MS)
+    due = time.ticks_add(time.ticks_us(), TICK_US)
+    while True:
+        # Differences of ticks survive the counter's wrap; a plain comparison would not.
+        wait = time.ticks_diff(due, time.ticks_us())
+        if wait > 0:
+            time.sleep_us(wait)
+        due = time.ticks_add(due, TICK_US)
+        write(outputs, latch.step(read(inputs)))
+        dog.feed()
+
+
+if __name__ == "__main__":
+    main()
