@@ -350,6 +350,12 @@ def _notes(engine: Engine, drawn: Population, published: Population) -> Iterator
             else "the corners that each result's own slopes point to, and a fixed draw of others"
         )
         yield f"{name}: {len(group.moving)} values move something; {how}, {len(group.rows)} units"
+        mixed = [w for w in group.measures.windows.values() if np.isinf(w).any() and np.isfinite(w).any()]
+        if mixed:
+            yield (
+                f"{name}: {len(mixed)} windows are there in some units only; such a window ends where it ceases "
+                "to be, which need not be at a corner"
+            )
     yield from _strained(engine)
     if engine.topo.states > 1:
         yield "more than one capacitor: the corners are the rule here, not a proof of the extremes"
