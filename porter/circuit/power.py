@@ -21,7 +21,7 @@ from itertools import pairwise
 
 import numpy as np
 
-from porter.circuit.engine import Engine, Ints, Lanes, Listener, Mask
+from porter.circuit.engine import Engine, Ints, Lanes, Listener, Mask, Watcher
 from porter.circuit.family import FAMILIES
 from porter.circuit.network import Mode, Topology, solve_mode, topology
 from porter.circuit.values import Columns, Floats, columns
@@ -29,6 +29,7 @@ from porter.spec.model import Circuit
 
 #: In place of a latch value: the chip is not working.
 _ASLEEP = 2
+_BEATS = 256  # times that an oscillator is pushed on within one stretch
 _PIECES = 10_000  # a profile with more stretches than this is no power-up
 
 
@@ -248,7 +249,7 @@ def follow(
     """
     least = works_from(engine.circuit)
     cut = [pieces(p, least) for p in profiles]
-    asleep = lanes.x[:, -1] < least
+    asleep = lanes.x[:, -1] < least * (1 - 1e-12)
     slept = asleep.copy()
     for k in range(max(map(len, cut))):
         rows = np.array([i for i in range(len(lanes)) if k < len(cut[i])], np.int64)
@@ -290,5 +291,26 @@ def _stretch(
         on_wake(rows[new], engine.guards(some)[new])
     seconds = np.minimum([p.seconds for p in part], np.maximum(end_s - some.clock_s, 0.0))
     told = None if listener is None else (lambda at, when, q: listener(rows[at], when, q))
+    ends = some.clock_s + seconds
     engine.run(some, seconds, frozen=not awake, listener=told)
+    beat_on(engine, some, ends, told)
     lanes.put(rows, some)
+
+
+def beat_on(
+    engine: Powered,
+    lanes: Lanes,
+    ends: Floats,
+    listener: Listener | None = None,
+    watcher: Watcher | None = None,
+) -> None:
+    """Let lanes that oscillate go on to the end (time, shape (B,)) of their piece, where it has one."""
+    for _ in range(_BEATS):
+        rows = np.flatnonzero(lanes.busy & (lanes.period_s > 0) & np.isfinite(ends) & (lanes.clock_s < ends))
+        if not len(rows):
+            return
+        some = lanes.take(rows)
+        some.busy[:], some.flips[:] = False, 0
+        told = None if listener is None else (lambda at, when, q, rows=rows: listener(rows[at], when, q))
+        engine.run(some, ends[rows] - some.clock_s, listener=told, watcher=watcher)
+        lanes.put(rows, some)

@@ -12,6 +12,7 @@ from porter.behaviour.model import Behaviour, PowerRow
 from porter.circuit.power import Powered, Profile, dip, follow, pieces, ramp, step
 from porter.show.machine import derived
 from porter.spec.read import read_text
+from porter.supply_run import simulate_supply
 
 ON_RESET = {"CR": "{capacitor: 1u, between: [clear, gnd]}"}
 SLOW = latch(ON_RESET, supply="10 V", family="cmos", values=IDEAL)
@@ -185,3 +186,65 @@ def test_shipped_door_latch() -> None:
     ]
     assert row(behaviour, "dropout 100 ms", start="low").output == "high"
     assert row(behaviour, "dropout 1 s", start="high").output == "low"
+
+
+# --- one run ---
+
+
+def test_run_on_a_ramp_shows_voltages_and_edges() -> None:
+    """Nodes lag a ramp of 100 V/s by ``s RC (1 - exp(-t / RC))``; a press on the way is seen."""
+    circuit = read_text(SLOW, "piece.yaml")
+    times = np.array([0.01, 0.05, 0.09, 0.5])
+    result = simulate_supply(
+        circuit,
+        ramp(10, 0.1),
+        [(0.0, []), (0.2, ["SET"]), (0.3, [])],
+        1.0,
+        nodes=("clear", "vcc"),
+        times=times,
+    )
+
+    up = 100 * (times[:3] - 10e-3 * -np.expm1(-times[:3] / 10e-3))
+    assert result.volts[0, :3] == pytest.approx(up, rel=1e-9)
+    assert result.volts[1] == pytest.approx([1, 5, 9, 10])
+    assert result.edges == ((0.0, 0), (0.2, 1))
+
+
+def test_run_through_a_dropout_loses_the_output_and_a_button_brings_it_back() -> None:
+    circuit = read_text(SLOW, "piece.yaml")
+    supply = Profile(((0.0, 10.0), (0.1, 10.0), (0.1, 0.0), (0.2, 0.0), (0.2, 10.0)))
+    result = simulate_supply(circuit, supply, [(0.0, []), (0.15, ["SET"]), (0.4, [])], 1.0, start="high")
+
+    # The reset capacitor, emptied for ten time constants, passes 1 V.
+    released = 0.2 + 10e-3 * math.log((10 - 10 * math.exp(-10)) / 9)
+    assert result.edges[:2] == ((0.0, 1), (0.1, 0))
+    assert result.edges[2] == (pytest.approx(released, rel=1e-6), 1)
+
+
+@pytest.mark.parametrize("wakes", ["low", "high"])
+def test_run_comes_up_as_it_is_told_where_nothing_forces_it(wakes: str) -> None:
+    circuit = read_text(latch(family="cmos"), "piece.yaml")
+    edges = simulate_supply(circuit, ramp(12, 0.6), [(0.0, [])], 2.0, wakes=wakes).edges  # type: ignore[arg-type]
+
+    assert edges == (((0.0, 0),) if wakes == "low" else ((0.0, 0), (pytest.approx(0.1), 1)))
+
+
+def test_oscillator_goes_on_beating_while_the_supply_rises() -> None:
+    """Its period is ln 2 of the time constants at any supply; on a slow ramp nearly so."""
+    parts = {
+        "RA": None, "RB": None, "RF": "{resistor: 10k, between: [out, mid]}",
+        "CM": "{capacitor: 100n, between: [mid, gnd]}",
+    }  # fmt: skip
+    text = toggle(parts, {"PUSH": "{between: [mid, gnd]}"})
+    result = simulate_supply(read_text(text, "piece.yaml"), ramp(5, 1.0), [(0.0, [])], 1.2)
+    rising = np.array([t for t, q in result.edges if q])
+
+    assert result.oscillates
+    assert np.diff(rising[rising > 1.0]) == pytest.approx(2 * math.log(2) * 1e-3, rel=1e-6)
+    assert np.diff(rising[rising < 1.0])[1:] == pytest.approx(2 * math.log(2) * 1e-3, rel=0.02)
+    assert len(rising) > 500
+
+
+def test_run_needs_a_schedule_from_zero_on() -> None:
+    with pytest.raises(ValueError, match="begin at time 0"):
+        simulate_supply(read_text(SLOW, "piece.yaml"), step(10), [(1.0, [])], 2.0)

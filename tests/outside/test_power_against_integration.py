@@ -18,6 +18,7 @@ from scipy.integrate import solve_ivp
 
 from porter.circuit.power import Powered, Profile, dip, follow, ramp, step
 from porter.spec.read import read_text
+from porter.supply_run import simulate_supply
 
 LEAST = 2.0  # V, the least published supply of the class (TI SLFS043C)
 OUT_OHM, RESET_V = 50.0, 0.7
@@ -106,8 +107,9 @@ class Reference:
         return M, rail
 
     def levels(self, v: np.ndarray, V: float) -> np.ndarray:
-        at = [self.net.nodes.index(self.net.pins[p]) for p in ("trigger", "threshold", "reset")]
-        return np.array([v[at[0]] - V / 3, v[at[1]] - 2 * V / 3, v[at[2]] - RESET_V])
+        volts = dict(zip(self.net.nodes, v, strict=True)) | {"vcc": V}
+        at = [volts[self.net.pins[p]] for p in ("trigger", "threshold", "reset")]
+        return np.array([at[0] - V / 3, at[1] - 2 * V / 3, at[2] - RESET_V])
 
     def decide(self, v: np.ndarray, V: float, q: int, slope: np.ndarray | None = None) -> int:
         f = self.levels(v, V)
@@ -236,3 +238,35 @@ def test_random_networks_on_a_moving_supply(net: Net, driven: tuple[float, Profi
 @given(net=nets(), driven=profiles(), q=st.sampled_from((0, 1)))
 def test_many_random_networks_on_a_moving_supply(net: Net, driven: tuple[float, Profile], q: int) -> None:
     compare(net, *driven, q)
+
+
+@settings(max_examples=15, deadline=None, suppress_health_check=CHECKS)
+@given(
+    ohm=decades(4, 5),
+    up=decades(4, 6),
+    farad=decades(-8, -7),
+    periods=st.floats(2.0, 5.0),
+    low=st.sampled_from((0.5, 0.7, 0.95)),
+)
+def test_oscillators_on_a_moving_supply(
+    ohm: float, up: float, farad: float, periods: float, low: float
+) -> None:
+    """Their levels move with the supply while they beat: many edges a run."""
+    net = Net(
+        ("n0", "out"),
+        (("out", "n0", ohm), ("vcc", "n0", 10 * up), ("vcc", "out", 1e6)),
+        (("n0", "gnd", farad), ("n0", "vcc", farad / 10), ("out", "gnd", 1e-10)),
+        {"trigger": "n0", "threshold": "n0", "reset": "vcc"},
+    )
+    last = periods * 1.4 * ohm * farad
+    profile = Profile(
+        ((0.0, 0.0), (last, 5.0), (1.2 * last, 5.0), (1.4 * last, 5.0 * low), (1.6 * last, 5.0))
+    )
+    ref, v, q = by_integration(net, profile, np.zeros(2), 0, last / 10)
+    assume(ref.closest > 1e-6 and len(ref.edges) >= 2)
+    result = simulate_supply(read_text(spec(net, 5.0), "checked.yaml"), profile, [(0.0, [])], 1.7 * last)
+    mine = [e for e in result.edges[1:] if min(abs(e[0] - t) for t in ref.wakes) > 1e-12 * e[0]]
+
+    assert [n for _, n in mine] == [n for _, n in ref.edges]
+    assert [t for t, _ in mine] == pytest.approx([t for t, _ in ref.edges], rel=1e-6)
+    assert mine[-1][1] == q and np.isfinite(v).all()
