@@ -84,7 +84,7 @@ def suite(port: Port, ticks: int = 20_000, cases: int = 2) -> Suite:
 
 def _presses(port: Port, ticks: int, seed: int) -> tuple[tuple[int, int], ...]:
     random = np.random.default_rng(seed)
-    lengths = np.exp(random.uniform(0, 6.5, ticks // 20)).astype(np.int64)
+    lengths = np.exp(random.uniform(0, 8.2, ticks // 20)).astype(np.int64)
     edges = np.minimum(np.append(0, lengths.cumsum()), ticks)
     masks = random.integers(port.held_count, size=len(lengths))
     runs = [(int(b - a), int(m)) for (a, b), m in zip(pairwise(edges), masks, strict=True) if b > a]

@@ -1,59 +1,22 @@
 """Every vector on every processor: emitted cores, compiled and run, against the reference tick by tick."""
 
-from functools import lru_cache
 from pathlib import Path
 
 import numpy as np
 import pytest
-from backends.rows import shift_charge
-from backends.rows import suite as random_suite
-from backends.targets import BACKENDS, HOSTS, PDK14, Avr, Backend, CortexM0, Host, RiscV
+from backends.targets import BACKENDS, HOSTS, PDK14, Avr, Backend, CortexM0, Host, MicroPython, RiscV
 from backends.work import ASK, INIT, KEPT, Work, first_difference, outputs, rests, without_rest, work
+from circuits import ALL, planned
 
-import porter
 from porter.port.model import Port
-from porter.port.plan import plan
-from porter.vectors import build_vectors
 from porter.vectors.drive import drive
 from porter.vectors.model import Case, Suite
 
 pytestmark = pytest.mark.system
 
-SPECS = Path(porter.__file__).parents[1] / "specs"
-#: Short names for the circuits of each kind, with the spec and what is changed in its text.
-KINDS = {
-    "two_button": ("kiln_vent", ("", "")),
-    "charge_multiply": ("map_lamp", ("", "")),
-    "forced_count": ("map_lamp", ("tick: 1 ms", "tick: 1 ms\n  style: count")),
-    "one_shot": ("soap_dose", ("", "")),
-    "two_capacitors": ("wash_door", ("", "")),
-}
-ALL = (*KINDS, "charge_shift")
 #: Those without a multiplication.
 SMALL = ("two_button", "forced_count", "charge_shift")
 every_backend = pytest.mark.parametrize("backend", BACKENDS, ids=lambda b: b.name)
-
-
-@lru_cache(maxsize=8)
-def planned(kind: str, folder: Path) -> tuple[Port, Suite]:
-    """Return port and suite of a kind of circuit; *folder* takes the changed spec."""
-    if kind == "charge_shift":
-        port = shift_charge()
-        return port, random_suite(port)
-    name, (old, new) = KINDS[kind]
-    text = (SPECS / f"{name}.yaml").read_text("utf-8")
-    spec = folder / f"{name}.yaml"
-    spec.write_text(text.replace(old, new) if old else text, "utf-8")
-    circuit = porter.read(spec)
-    behaviour = porter.derive(circuit)
-    port = plan(circuit, behaviour)
-    return port, build_vectors(behaviour, port)
-
-
-@pytest.fixture(scope="session")
-def specs(tmp_path_factory) -> Path:
-    """A folder for changed specs."""
-    return tmp_path_factory.mktemp("specs")
 
 
 @pytest.fixture(scope="session")
@@ -80,8 +43,8 @@ def test_all_vectors(backend: Backend, kind: str, jobs, tmp_path):
     if backend is PDK14 and kind not in SMALL:
         pytest.skip("more RAM than the part has; runs on its larger sister")
     whole, short, here = jobs(kind)
-    # Processors that run at the speed of this machine take the long rests too.
-    asked = whole if isinstance(backend, Host | Avr | CortexM0 | RiscV) else short
+    # What runs fast takes the long rests too.
+    asked = whole if isinstance(backend, Host | Avr | CortexM0 | RiscV | MicroPython) else short
     answers = backend.run(asked, tmp_path)
     assert first_difference(asked, answers) is None
     if asked is short:
@@ -143,11 +106,12 @@ def test_a_wrong_answer_is_named_with_its_case(specs):
 
 @pytest.mark.parametrize("backend", [HOSTS[0], Avr()], ids=lambda b: b.name)
 def test_a_wrong_core_is_found(backend: Backend, specs, tmp_path):
-    """A core with one limit off by one fails on the vectors."""
+    """A core whose threshold is a hundredth off fails on the vectors."""
     port, suite = planned("charge_multiply", specs)
     asked = work(port, suite)
     limit = str(port.machine.modes[0][1].flips[0].limit)
-    core = asked.texts[f"{port.name}.c"].replace(f" {limit}u", f" {int(limit) - 1}u")
+    core = asked.texts[f"{port.name}.c"].replace(f" {limit}u", f" {int(limit) * 99 // 100}u")
+    assert core != asked.texts[f"{port.name}.c"]
     broken = Work(port, {**asked.texts, f"{port.name}.c": core}, asked.stimulus, asked.expected)
     assert first_difference(asked, backend.run(broken, tmp_path)) is not None
 
