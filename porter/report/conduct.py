@@ -78,9 +78,27 @@ def power_on_section(circuit: Circuit, behaviour: Behaviour, port: Port) -> Sect
         row("port", "high" if port.start_q else "low"),
     )
     table = Table("Output after the supply steps up with no button held", ("Side", "Output"), rows)
-    return Section(
-        "power-on", "Power-on", (table, Text(sentence(power.why)) if power.why else Text("No reason given."))
+    why = Text(sentence(power.why)) if power.why else Text("No reason given.")
+    return Section("power-on", "Power-on", (table, why, *_courses(behaviour)))
+
+
+def _courses(behaviour: Behaviour) -> tuple[Block, ...]:
+    """Return the table of what comes of each course of the supply, nothing where none was followed."""
+    if not behaviour.power:
+        return ()
+    rows = tuple(
+        row(
+            r.profile,
+            together(r.held) if r.held else "–",
+            r.start or "off",
+            _settled(r.output),
+            sentence(r.why),
+            r.port,
+        )
+        for r in behaviour.power
     )
+    heads = ("Supply", "Held", "Before", "Output once settled", "Why", "Port")
+    return (Table("What comes of each course of the supply", heads, rows, "No rows."),)
 
 
 # --- windows ---
