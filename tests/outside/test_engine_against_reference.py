@@ -53,7 +53,7 @@ def parts(draw: Draw, nodes: tuple[str, ...]) -> dict[str, Any]:
     for a, b in draw(st.lists(ends, min_size=1, max_size=4)):
         resistors.append((a, b, draw(ohms)))
     between = st.tuples(st.sampled_from(nodes), st.sampled_from(("gnd", "gnd", "vcc", *nodes)))
-    pairs = draw(st.lists(between.filter(lambda p: p[0] != p[1]), min_size=1, max_size=4))
+    pairs = draw(st.lists(between.filter(lambda p: p[0] != p[1]), min_size=1, max_size=5))
     capacitors = tuple((a, b, draw(farads)) for a, b in pairs)
     diodes: tuple[tuple[str, str, float, float], ...] = ()
     if draw(st.booleans()):
@@ -93,7 +93,7 @@ def chips(draw: Draw, nodes: tuple[str, ...]) -> Chip:
 
 @st.composite
 def cases(draw: Draw) -> Case:
-    """A random network of 1 to 4 capacitors and 1 to 3 buttons, and a random schedule of presses."""
+    """A random network of 1 to 5 capacitors and 1 to 3 buttons, and a random schedule of presses."""
     nodes = (*(f"n{k}" for k in range(draw(st.integers(1, 4)))), "out")
     contacts = {}
     ends = st.lists(st.sampled_from(("vcc", "gnd", *nodes)), min_size=2, max_size=2, unique=True)
