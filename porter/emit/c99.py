@@ -1,6 +1,7 @@
 """Writes a port in C99: fits 8-bit parts, and means the same with an ``int`` of 16 bits as with one of 32."""
 
 import re
+from collections.abc import Callable
 from typing import ClassVar
 
 from porter.emit.fold import fold
@@ -28,7 +29,7 @@ from porter.emit.lower import (
 )
 from porter.emit.names import comment, string, unique
 from porter.emit.numbers import Number, wrap
-from porter.emit.trees import LATCH, Leaf, Syntax, branch, leaves, render
+from porter.emit.trees import LATCH, Leaf, Node, Syntax, branch, choose, leaves, render
 from porter.port.model import Charge, Port
 from porter.vectors.model import Case, Suite
 
@@ -310,6 +311,8 @@ class Core:
 
     def _charge(self, machine: ChargeParts) -> list[str]:
         names = copies(machine)
+        if fused(machine):
+            return self._fused(machine, names)
         decide = render(machine.decide, self._ask, lambda f: self._flip(f, names), SYNTAX)
         lines = ["", "/* Decide with the charge from before this tick. */", *decide] if decide else []
         stored = [self._pack(cell) for cell in self.parts.cells if early(cell, machine)]
@@ -323,6 +326,24 @@ class Core:
             lines += ["", *(f"{x} = y{k};" for k, x in enumerate(names))]
         return lines
 
+    def _fused(self, machine: ChargeParts, names: tuple[str, ...]) -> list[str]:
+        """Return decision and motion under one question."""
+        decide, (motion,) = machine.decide, machine.motions
+        whole = motion.whole
+        assert isinstance(decide, Node) and isinstance(whole, Node)
+        opened, act, closed = self._ways(motion, "x", "x", names)
+        yes, no = (
+            [
+                *render(flips, self._ask, lambda f: self._flip(f, names), SYNTAX),
+                *render(moves, self._ask, act, SYNTAX),
+            ]
+            for flips, moves in ((decide.yes, whole.yes), (decide.no, whole.no))
+        )
+        stored = [self._pack(cell) for cell in self.parts.cells if early(cell, machine)]
+        about = f"/* Decide with the charge from before this tick; move the copy of {comment(self._capacitor(0))}. */"
+        chain = choose(decide, *self._ask(decide.ask), yes, no, SYNTAX)
+        return ["", about, *opened, *chain, *(["", *stored] if stored else []), *closed]
+
     def _capacitor(self, k: int) -> str:
         assert isinstance(self.port.machine, Charge)
         return self.port.machine.capacitors[k]
@@ -330,12 +351,21 @@ class Core:
     def _motion(self, motion: Motion, x: str, y: str, names: tuple[str, ...]) -> list[str]:
         if motion.whole is None:
             return self._move(motion, x, y)
+        opened, act, closed = self._ways(motion, x, y, names)
+        return [*opened, *render(motion.whole, self._ask, act, SYNTAX), *closed]
+
+    def _ways(
+        self, motion: Motion, x: str, y: str, names: tuple[str, ...]
+    ) -> tuple[list[str], Callable[[Alone | Mix | Affine], list[str]], list[str]]:
+        """Return what to write before the modes' tree, for each of its leaves, and after it."""
         if motion.scales:
             return self._scales(motion, x, y)
-        moved = render(motion.whole, self._ask, lambda leaf: self._whole(leaf, x, y, names), SYNTAX)
-        return moved if x == y else [f"uint16_t {y} = {x};", *moved]
+        opened = [] if x == y else [f"uint16_t {y} = {x};"]
+        return opened, lambda leaf: self._whole(leaf, x, y, names), []
 
-    def _scales(self, motion: Motion, x: str, y: str) -> list[str]:
+    def _scales(
+        self, motion: Motion, x: str, y: str
+    ) -> tuple[list[str], Callable[[Alone | Mix | Affine], list[str]], list[str]]:
         """Return one multiplication for all modes, with its numbers chosen before."""
         assert motion.whole is not None
         said = [leaf for leaf in leaves(motion.whole) if isinstance(leaf, Affine)]
@@ -344,18 +374,17 @@ class Core:
         same = len({leaf.number for leaf in said}) == 1
         kept = self._scaled(x, self._ref(said[0].number) if same else stays)
 
-        def choose(leaf: Alone | Mix | Affine) -> list[str]:
+        def numbers(leaf: Alone | Mix | Affine) -> list[str]:
             assert isinstance(leaf, Affine)
             amount = [f"{add} = {self._ref(leaf.add) if leaf.add else '0u'};"] if more else []
             return amount + ([] if same else [f"{stays} = {self._ref(leaf.number)};"])
 
-        return [
+        opened = [
             *([] if same else [f"uint16_t {stays};"]),
             *([f"uint16_t {add};"] if more else []),
             *([] if x == y else [f"uint16_t {y};"]),
-            *render(motion.whole, self._ask, choose, SYNTAX),
-            f"{y} = (uint16_t)({kept} + {add});" if more else f"{y} = {kept};",
         ]
+        return opened, numbers, [f"{y} = (uint16_t)({kept} + {add});" if more else f"{y} = {kept};"]
 
     def _scaled(self, x: str, number: str) -> str:
         return f"{self.name}_scaled({x}, {number})"
@@ -515,7 +544,17 @@ def early(cell: Cell, machine: ChargeParts | CountParts) -> bool:
     """Whether a cell is stored before the copies move, to free its registers for a multiplication."""
     if isinstance(machine, CountParts) or set(copies(machine)) & {field.name for field in cell.fields}:
         return False
+    if fused(machine) and not machine.motions[0].scales:
+        return False
     return any(_multiplies(motion) for motion in machine.motions)
+
+
+def fused(machine: ChargeParts) -> bool:
+    """Whether decision and motion hang on the same button, so that it need be asked but once."""
+    if len(machine.motions) > 1:
+        return False
+    decide, whole = machine.decide, machine.motions[0].whole
+    return isinstance(decide, Node) and isinstance(whole, Node) and decide.ask == whole.ask != LATCH
 
 
 def _multiplies(motion: Motion) -> bool:

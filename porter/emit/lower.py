@@ -178,6 +178,10 @@ class Affine:
     guard: End = STAY
 
 
+#: Up to so many sorts of scale are written out one by one: the call is shorter than choosing its numbers.
+SORTS = 4
+
+
 @dataclass(frozen=True, slots=True)
 class Motion:
     """One copy's motion: where to (`aims`) and how far (`amounts`, where the aims don't say it).
@@ -196,12 +200,12 @@ class Motion:
 
     @property
     def scales(self) -> bool:
-        """Whether every mode is a free scale, and not all the same one: one multiplication can serve them."""
+        """Whether every mode is a free scale, of more than two sorts: one multiplication then serves all."""
         if self.whole is None:
             return False
         said = leaves(self.whole)
         free = all(isinstance(leaf, Affine) and leaf.kind == "scale" and leaf.guard == STAY for leaf in said)
-        return free and len(said) > 1
+        return free and len(said) > SORTS
 
 
 @dataclass(frozen=True, slots=True)

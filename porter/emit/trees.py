@@ -95,12 +95,13 @@ def render(
         yes, no = yes[: len(yes) - len(shared)], no[: len(no) - len(shared)]
     if not yes and not no:
         return shared
-    return [*_choice(tree, positive, negative, yes, no, syntax), *shared]
+    return [*choose(tree, positive, negative, yes, no, syntax), *shared]
 
 
-def _choice(
+def choose(
     tree: Node[V], positive: str, negative: str, yes: list[str], no: list[str], syntax: Syntax
 ) -> list[str]:
+    """Return the lines for both sides of a node, either of which may have none."""
     if not yes:
         return branch(negative, no, [], syntax)
     if not no:

@@ -47,29 +47,19 @@ uint8_t even_toggle_step(even_toggle_t *m, uint8_t held)
     uint16_t x = m->x;
     uint8_t q = (uint8_t)(m->q & 1u);
 
-    /* Decide with the charge from before this tick. */
+    /* Decide with the charge from before this tick; move the copy of mem. */
     if ((held & EVEN_TOGGLE_BUTTON_PUSH) != 0u) {
         if (x <= EVEN_TOGGLE_LIMIT_LOW_PUSH) {
             q ^= 1u;
             x ^= 0xFFFFu;
         }
-    }
-
-    m->q = q;
-
-    /* Move the copy of mem by one tick. */
-    uint16_t stays;
-    uint16_t add;
-    if ((held & EVEN_TOGGLE_BUTTON_PUSH) != 0u) {
-        add = EVEN_TOGGLE_ADD_PUSH;
-        stays = EVEN_TOGGLE_STAYS_PUSH;
+        x = (uint16_t)(even_toggle_scaled(x, EVEN_TOGGLE_STAYS_PUSH) + EVEN_TOGGLE_ADD_PUSH);
     } else {
-        add = 0u;
-        stays = EVEN_TOGGLE_STAYS_OPEN;
+        x = even_toggle_scaled(x, EVEN_TOGGLE_STAYS_OPEN);
     }
-    x = (uint16_t)(even_toggle_scaled(x, stays) + add);
 
     m->x = x;
+    m->q = q;
 
     return q;
 }

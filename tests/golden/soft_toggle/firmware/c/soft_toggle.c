@@ -41,16 +41,12 @@ uint8_t soft_toggle_step(soft_toggle_t *m, uint8_t held)
     uint16_t x = m->x;
     uint8_t q = (uint8_t)(m->q & 1u);
 
-    /* Decide with the charge from before this tick. */
+    /* Decide with the charge from before this tick; move the copy of mem. */
     if ((held & SOFT_TOGGLE_BUTTON_PUSH) != 0u) {
         if (x <= SOFT_TOGGLE_LIMIT_LOW_PUSH) {
             q ^= 1u;
             x ^= 0xFFFFu;
         }
-    }
-
-    /* Move the copy of mem by one tick. */
-    if ((held & SOFT_TOGGLE_BUTTON_PUSH) != 0u) {
         x = (uint16_t)(x
             - (uint16_t)((uint16_t)(x >> SOFT_TOGGLE_GOES_PUSH) - SOFT_TOGGLE_ADD_PUSH));
     } else {
