@@ -8,6 +8,7 @@ import numpy as np
 
 from porter.behaviour.model import Behaviour
 from porter.circuit.engine import Engine
+from porter.circuit.power import Profile, works_from
 from porter.circuit.values import Floats
 from porter.port.memory import Memory, memory
 from porter.port.model import U16, Charge, Port, State
@@ -16,6 +17,7 @@ from porter.port.step import start as port_start
 from porter.port.swift import stepper
 from porter.single_run import Schedule, held_mask, simulate
 from porter.spec.model import RAILS, Circuit
+from porter.supply_run import simulate_supply
 from porter.trace import Changes, Trace, Wave
 
 _POINTS = 400  # samples of a drawn voltage
@@ -32,12 +34,14 @@ def run_trace(
     start: Literal["empty", "settled"] = "empty",
     output: Literal["low", "high"] = "low",
     engine: Engine | None = None,
+    supply: Profile | None = None,
 ) -> Trace:
     """Run circuit (and port) through a press schedule.
 
     Args:
         schedule: ``((time_s, held names), ...)``, the first at 0.
         start, output: as in `simulate`; the port begins in the same state.
+        supply: its course; the port then starts anew, and is dark, wherever the timer can't work.
 
     Raises:
         ValueError: the schedule does not begin at 0 or names an unknown button.
@@ -46,14 +50,24 @@ def run_trace(
     steps = [(float(at), tuple(names)) for at, names in schedule]
     nodes = _shown_nodes(circuit, engine)
     times = _sample_times([at for at, _ in steps], end_s).tolist()
-    run = simulate(circuit, steps, end_s, start=start, output=output, nodes=nodes, times=times, engine=engine)
+    if supply is None:
+        run = simulate(
+            circuit, steps, end_s, start=start, output=output, nodes=nodes, times=times, engine=engine
+        )
+    else:
+        begin: Literal["off", "low", "high"] = "off" if start == "empty" else output
+        run = simulate_supply(
+            circuit, supply, steps, end_s, start=begin, wakes=output, nodes=nodes, times=times
+        )
     waves = tuple(Wave(n, tuple(times), tuple(v.tolist())) for n, v in zip(nodes, run.volts, strict=True))
     return Trace(
         title=title,
         end_s=end_s,
         buttons=_button_changes(circuit, steps),
         circuit=_output_changes(circuit, engine, run.edges, steps),
-        port=None if port is None else _port_changes(circuit, port, engine, steps, end_s, start, output),
+        port=None
+        if port is None
+        else _port_changes(circuit, port, engine, steps, end_s, start, output, supply),
         latch=tuple(run.edges),
         waves=waves,
         levels=_levels(engine),
@@ -120,6 +134,7 @@ def _port_changes(
     end_s: float,
     start: str,
     output: str,
+    supply: Profile | None = None,
 ) -> dict[str, Changes]:
     state = port_start(port) if start == "empty" else _settled(port, memory(engine), int(output == "high"))
     ticks = int(np.floor(end_s / port.tick_s + 1e-9)) + 1
@@ -127,9 +142,10 @@ def _port_changes(
     at = np.array([t for t, _ in steps])
     masks = np.array([held_mask(circuit, names) for _, names in steps])
     held = masks[np.searchsorted(at, times + 1e-9 * port.tick_s, side="right") - 1]
+    fed = np.ones(ticks, bool) if supply is None else supply.at(times) >= works_from(circuit)
     bits, step = [], stepper(port)
-    for h in held:
-        state, out = step(state, np.array([h]))
+    for h, works in zip(held, fed, strict=True):
+        state, out = step(state, np.array([h])) if works else (port_start(port), np.zeros(1, int))
         bits.append(int(out[0]))
     return _by_output(circuit, times.tolist(), bits)
 

@@ -245,6 +245,11 @@ def prove(spec: str, save: Path | None, as_json: bool) -> int:
     help="At rest with that output, or power-on. Default: at rest as the port starts; power-on for vectors.",
 )
 @click.option("--until", metavar="TIME", help="End of the run. Default: 1 s after the last change.")
+@click.option(
+    "--supply",
+    metavar="TIME:VOLTS,...",
+    help="The supply over time, such as 0:0,10ms:12 for a ramp; two of one time are a step.",
+)
 @click.option("--csv", "as_csv", is_flag=True, help="Print every change as CSV.")
 @_as_json
 def trace(
@@ -254,6 +259,7 @@ def trace(
     case: str | None,
     start: str | None,
     until: str | None,
+    supply: str | None,
     as_csv: bool,
     as_json: bool,
 ) -> int:
@@ -265,12 +271,13 @@ def trace(
     from porter.port.plan import plan
     from porter.show import lanes, play
 
-    if (presses is None) == (not written):
+    if (presses is not None and written) or not (presses or written or supply):
         raise click.UsageError("name a file of presses or give --press, one of the two")
     circuit, behaviour = _judged(spec)
     port = plan(circuit, behaviour)
     tape = play.read_file(presses, circuit, port, case) if presses else play.read_words(written, circuit)
-    run = play.play(circuit, port, tape, start, until)
+    course = None if supply is None else play.read_supply(supply)
+    run = play.play(circuit, port, tape, start, until, course)
     if as_json:
         _print(play.as_json(run))
     elif as_csv:

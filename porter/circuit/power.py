@@ -52,6 +52,15 @@ class Profile:
         if any(not 0 <= v < np.inf for _, v in self.points) or times[-1] == np.inf:
             raise ValueError("the supply must be at 0 V or above at every time")
 
+    def at(self, times: Floats) -> Floats:
+        """Return the voltage at some times, after a step that happens then."""
+        when, volts = (np.array(column) for column in zip(*self.points, strict=True))
+        k = np.searchsorted(when, times, side="right") - 1
+        after = np.minimum(k + 1, len(when) - 1)
+        length = when[after] - when[k]
+        part = np.where(length > 0, (times - when[k]) / np.where(length > 0, length, 1.0), 0.0)
+        return np.asarray(volts[k] + (volts[after] - volts[k]) * part)
+
 
 def step(volts: float) -> Profile:
     """The supply is there at once."""

@@ -11,6 +11,7 @@ from pathlib import Path
 
 from porter.charts import run_trace
 from porter.circuit.engine import Engine
+from porter.circuit.power import Profile
 from porter.findings import Finding, PorterError, Position, SpecError
 from porter.port.model import Port
 from porter.report.lanes import level_at
@@ -324,34 +325,65 @@ def save_changes(changes: Iterable[tuple[int, tuple[str, ...]]], port: Port, fil
 # --- running ---
 
 
-def play(circuit: Circuit, port: Port, tape: Tape, start: str | None, until: str | None) -> Run:
+def read_supply(text: str) -> Profile:
+    """Return the course of the supply that ``--supply`` gives, such as ``0:0,10ms:12,1:12,1:0,1.1:12``.
+
+    Raises:
+        PressError: it can't be read.
+    """
+    try:
+        pairs = [part.split(":") for part in text.split(",")]
+        points = tuple((float(seconds_of(at)), _volts(volts)) for at, volts in pairs)
+        return Profile(points)
+    except ValueError as error:
+        said = str(error) if "unpack" not in str(error) else f"`{text}` is not a list of TIME:VOLTS"
+        raise PressError(f"--supply: {said}; write TIME:VOLTS, such as `0:0,10ms:12` for a ramp") from None
+
+
+def _volts(text: str) -> float:
+    try:
+        return float(text.strip().removesuffix("V"))
+    except ValueError:
+        raise ValueError(f"`{text.strip()}` is not a voltage such as `12` or `4.5 V`") from None
+
+
+def play(
+    circuit: Circuit,
+    port: Port,
+    tape: Tape,
+    start: str | None,
+    until: str | None,
+    supply: Profile | None = None,
+) -> Run:
     """Run circuit and port through a sequence.
 
     Args:
         start: ``low`` or ``high``: at rest with that output, no button held; ``power-on``; None = as the
             tape says, else at rest as the port starts.
         until: end of the run as text, None = the tape's.
+        supply: its course, None = always there.
 
     Raises:
         PressError: the circuit doesn't rest at the start, or the end can't be used.
     """
-    end = _end(tape, until, port)
+    end = _end(tape, until, port, 0.0 if supply is None else supply.points[-1][0])
     q = port.start_q if start in (None, "power-on") else _LEVELS.index(start)
-    empty = start == "power-on" or (start is None and tape.power_on)
+    off = supply is not None and supply.points[0][1] == 0
+    empty = start == "power-on" or off or (start is None and tape.power_on)
     engine = Engine(circuit)
     if not empty and not engine.rest(q)[1][0]:
         raise PressError(f"the circuit doesn't stay {_LEVELS[q]} with no button held: give another --start")
     schedule = [(float(at), names) for at, names in tape.changes if at <= end]
     if not schedule or schedule[0][0] > 0:
         schedule.insert(0, (0.0, ()))
-    how = {"start": "empty" if empty else "settled", "output": _LEVELS[q], "engine": engine}
+    how = {"start": "empty" if empty else "settled", "output": _LEVELS[q], "engine": engine, "supply": supply}
     trace = run_trace(circuit, port, schedule, float(end), tape.title, **how)  # type: ignore[arg-type]
     bare = run_trace(circuit, _latch_only(port), schedule, float(end), "", **how)  # type: ignore[arg-type]
     return Run(trace, _from(q, trace.latch, empty), _from(q, _latch(bare), empty))
 
 
-def _end(tape: Tape, until: str | None, port: Port) -> Fraction:
-    last = tape.changes[-1][0] if tape.changes else Fraction(0)
+def _end(tape: Tape, until: str | None, port: Port, supply_s: float) -> Fraction:
+    last = max(tape.changes[-1][0] if tape.changes else Fraction(0), Fraction(supply_s))
     try:
         end = tape.end or last + 1 if until is None else seconds_of(until)
     except ValueError as error:

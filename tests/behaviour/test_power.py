@@ -6,11 +6,14 @@ import math
 import numpy as np
 import pytest
 from behaviour_circuits import IDEAL, derive, latch, toggle
+from click.testing import CliRunner
 
 import porter
 from porter.behaviour.model import Behaviour, PowerRow
 from porter.circuit.power import Powered, Profile, dip, follow, pieces, ramp, step
+from porter.cli import cli
 from porter.show.machine import derived
+from porter.show.play import PressError, read_supply
 from porter.spec.read import read_text
 from porter.supply_run import simulate_supply
 
@@ -248,3 +251,33 @@ def test_oscillator_goes_on_beating_while_the_supply_rises() -> None:
 def test_run_needs_a_schedule_from_zero_on() -> None:
     with pytest.raises(ValueError, match="begin at time 0"):
         simulate_supply(read_text(SLOW, "piece.yaml"), step(10), [(1.0, [])], 2.0)
+
+
+# --- traced from the command line ---
+
+
+def trace(*words: str) -> dict[str, list[list[object]]]:
+    result = CliRunner().invoke(cli, ["trace", "specs/wash_door.yaml", *words, "--json"])
+    assert result.exit_code == 0, result.output
+    return json.loads(result.stdout)
+
+
+def test_trace_follows_the_supply_with_circuit_and_port() -> None:
+    """A dropout of 100 ms leaves the reset filter charged and empties the trigger's: the bolt comes back on."""
+    both = trace("--press", "LOCK@2+100ms", "--supply", "0:0,1ms:5,3:5,3:0,3.1:0,3.1:5", "--until", "6")
+    pressed = 2 + 4.7e-3 * math.log(3)
+
+    assert [q for _, q in both["circuit"]] == ["low", "high", "low", "high"]
+    assert [t for t, _ in both["circuit"]] == pytest.approx([0, pressed, 3.0, 3.1], abs=1e-4)
+    assert [q for _, q in both["port"]] == ["low", "high", "low"]
+    assert [t for t, _ in both["port"]] == pytest.approx([0, 2.006, 3.0], abs=1e-9)
+
+
+def test_trace_of_a_supply_needs_no_press() -> None:
+    assert trace("--supply", "0:0,10ms:5 V") == {"circuit": [[0.0, "low"]], "port": [[0.0, "low"]]}
+
+
+@pytest.mark.parametrize("text", ["0:0,1ms", "1:5", "0:0,2:5,1:0", "0:-1", "a:5", "0:five", ""])
+def test_supply_that_cannot_be_read(text: str) -> None:
+    with pytest.raises(PressError, match="^--supply: .*write TIME:VOLTS"):
+        read_supply(text)
