@@ -138,11 +138,13 @@ def _port_changes(
 ) -> dict[str, Changes]:
     state = port_start(port) if start == "empty" else _settled(port, memory(engine), int(output == "high"))
     ticks = int(np.floor(end_s / port.tick_s + 1e-9)) + 1
-    times = np.arange(ticks) * port.tick_s
+    times = np.arange(ticks, dtype=float) * port.tick_s
     at = np.array([t for t, _ in steps])
     masks = np.array([held_mask(circuit, names) for _, names in steps])
     held = masks[np.searchsorted(at, times + 1e-9 * port.tick_s, side="right") - 1]
-    fed = np.ones(ticks, bool) if supply is None else supply.at(times) >= works_from(circuit)
+    fed = (
+        np.ones(ticks, bool) if supply is None else supply.at(np.asarray(times, float)) >= works_from(circuit)
+    )
     bits, step = [], stepper(port)
     for h, works in zip(held, fed, strict=True):
         state, out = step(state, np.array([h])) if works else (port_start(port), np.zeros(1, int))

@@ -279,5 +279,5 @@ def test_trace_of_a_supply_needs_no_press() -> None:
 
 @pytest.mark.parametrize("text", ["0:0,1ms", "1:5", "0:0,2:5,1:0", "0:-1", "a:5", "0:five", ""])
 def test_supply_that_cannot_be_read(text: str) -> None:
-    with pytest.raises(PressError, match="^--supply: .*write TIME:VOLTS"):
+    with pytest.raises(PressError, match=r"^--supply: .*write TIME:VOLTS"):
         read_supply(text)
