@@ -197,6 +197,14 @@ def power_notes(rows: Sequence[PowerRow]) -> Iterator[str]:
         yield f"the start depends on how fast the supply comes: {said}"
 
 
+    turned: dict[tuple[Level, str], list[str]] = {}
+    for row in rows:
+        if row.start is not None and row.output in _LEVELS and row.output != row.start:
+            turned.setdefault((row.start, row.output), []).append(row.profile)
+    for (start, output), names in turned.items():
+        yield f"a {start} output is {output} after: {', '.join(names)}"
+
+
 def _first_last(names: Sequence[str]) -> str:
     return names[0] if len(names) == 1 else f"{names[0]} to {names[-1]}"
 

@@ -132,6 +132,7 @@ def test_rows_tell_of_a_dip_that_is_answered() -> None:
     assert answered.output == "high"
     assert "lagging voltages turn it high" in answered.why
     assert answered.port == "keeps low while its own supply holds, else starts low"
+    assert any(n.startswith("a low output is high after: ") and answered.profile in n for n in behaviour.notes)
     assert row(derive(toggle()), "dip to 60% for 1 ms", start="low").output == "low"
 
 
