@@ -56,7 +56,7 @@ def derive(circuit: Circuit) -> Behaviour:
     keys = tuple(nominal.margins)
     drawn = population(circuit, cols, False, keys)
     published = population(circuit, cols, True, keys)
-    power_on = _power_on(engine)
+    power_on = _power_on(engine, drawn, published)
     power = tuple(power_rows(circuit, cols, nominal, starts_at(circuit, power_on)))
     base = Behaviour(
         circuit=circuit.title,
@@ -170,23 +170,35 @@ def _after_releases(engine: Engine, order: Sequence[int]) -> Settled:
     return seen.pop() if len(seen) == 1 else "oscillates" if "oscillates" in seen else "keeps"
 
 
-def _power_on(engine: Engine) -> PowerOn:
-    outcomes, at_once = [], []
+def _power_on(engine: Engine, drawn: Population, published: Population) -> PowerOn:
+    found = _nominal_start(engine)
+    parts, guaranteed = (
+        _alike(_start_of(Engine(engine.circuit, group.rows, engine.columns))) for group in (drawn, published)
+    )
+    return dataclasses.replace(found, corners=parts, guaranteed=guaranteed)
+
+
+def _start_of(engine: Engine) -> Ints:
+    """Return each unit's output after a step of the supply: LOW, HIGH, OSCILLATES, or -1 where it keeps."""
+    ends = []
     for q in (0, 1):
         lanes = engine.empty(q)
-        engine.resolve(lanes)
-        at_once.append(int(lanes.q[0]))
         engine.run(lanes, np.inf)
-        outcomes.append(OSCILLATES if lanes.busy[0] else int(lanes.q[0]))
-    if outcomes[0] != outcomes[1]:
+        ends.append(np.where(lanes.busy, OSCILLATES, lanes.q))
+    return np.where(ends[0] == ends[1], ends[0], -1)
+
+
+def _nominal_start(engine: Engine) -> PowerOn:
+    outcome = int(_start_of(engine)[0])
+    if outcome == -1:
         why = (
             "no input forces the latch when the supply steps up over empty capacitors: "
             "it keeps what it came up with"
         )
         return PowerOn("undetermined", why)
-    if outcomes[0] == OSCILLATES:
+    if outcome == OSCILLATES:
         return PowerOn("undetermined", "the circuit oscillates with no button held")
-    return PowerOn(_LEVELS[outcomes[0]], _power_why(engine, at_once, outcomes[0]))
+    return PowerOn(_LEVELS[outcome], _forcing(engine, outcome))
 
 
 def starts_at(circuit: Circuit, power_on: PowerOn) -> int:
@@ -196,15 +208,18 @@ def starts_at(circuit: Circuit, power_on: PowerOn) -> int:
     return int(power_on.output == "high")
 
 
-def _power_why(engine: Engine, at_once: list[int], output: int) -> str:
+def _forcing(engine: Engine, output: int) -> str:
+    """Say which input forces the latch at the step, or that one does later."""
+    at_once = []
+    for q in (0, 1):
+        lanes = engine.empty(q)
+        engine.resolve(lanes)
+        at_once.append(int(lanes.q[0]))
     lanes = engine.empty(1 - output)
     lanes.q[:] = 1 - output
     f = engine.guards(lanes)[0]
-    pins = [
-        name
-        for name, on in zip(("trigger", "threshold", "reset"), (f[0] < 0, f[1] > 0, f[2] < 0), strict=True)
-        if on
-    ]
+    commands = ("trigger", f[0] < 0, 1), ("threshold", f[1] > 0, 0), ("reset", f[2] < 0, 0)
+    pins = [name for name, on, level in commands if on and level == output]
     if at_once == [output, output] and pins:
         return f"the {' and the '.join(pins)} input forces it the instant the supply is there"
     return "an input forces it while the capacitors charge"

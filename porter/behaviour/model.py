@@ -60,10 +60,15 @@ class ReleaseRow:
 
 @dataclass(frozen=True, slots=True)
 class PowerOn:
-    """The output after the supply steps up; `output` is ``undetermined`` where nothing forces it."""
+    """The output after the supply steps up; `output` is ``undetermined`` where nothing forces it.
+
+    `corners`, `guaranteed`: whether every unit does the same, as in `HeldRow`.
+    """
 
     output: Literal["low", "high", "undetermined"]
     why: str
+    corners: Corners = "same"
+    guaranteed: Corners = "same"
 
 
 @dataclass(frozen=True, slots=True)

@@ -59,7 +59,12 @@ def derived(behaviour: Behaviour) -> Object:
         "releases": [
             {"held": list(r.held), "order": list(r.order), "output": r.output} for r in behaviour.releases
         ],
-        "power_on": {"output": behaviour.power_on.output, "why": behaviour.power_on.why},
+        "power_on": {
+            "output": behaviour.power_on.output,
+            "why": behaviour.power_on.why,
+            "corners": behaviour.power_on.corners,
+            "guaranteed": behaviour.power_on.guaranteed,
+        },
         "power": [_course(row) for row in behaviour.power],
         "windows": [_window(w) for w in behaviour.windows],
         "timed": [

@@ -10,7 +10,7 @@ from rich.console import Console
 from rich.table import Table
 from rich.text import Text
 
-from porter.behaviour.model import Band, Behaviour, HeldRow, PowerRow
+from porter.behaviour.model import Band, Behaviour, HeldRow, PowerOn, PowerRow
 from porter.parity.model import Parity
 from porter.report.numbers import NBSP, band_range, count, quantity, seconds, volts
 
@@ -84,7 +84,7 @@ def show_behaviour(out: Console, behaviour: Behaviour, why: bool) -> None:
     """
     _headline(out, behaviour.circuit, behaviour.verdict, _VERDICTS[behaviour.verdict])
     power = behaviour.power_on
-    out.print(Text(f"after power-on: {power.output}; {power.why}"))
+    out.print(Text(f"after power-on: {power.output}{_differing(power)}; {power.why}"))
     out.print()
     _show_logic(out, behaviour)
     _show_figures(out, behaviour)
@@ -139,7 +139,7 @@ def _held(behaviour: Behaviour) -> Iterable[tuple[str, str, str]]:
         yield _and(held), cells[0], cells[1]
 
 
-def _differing(row: HeldRow) -> str:
+def _differing(row: HeldRow | PowerOn) -> str:
     if row.corners == "either":
         return " (some units with these parts differ)"
     return " (not guaranteed)" if row.guaranteed == "either" else ""

@@ -132,7 +132,9 @@ def test_rows_tell_of_a_dip_that_is_answered() -> None:
     assert answered.output == "high"
     assert "lagging voltages turn it high" in answered.why
     assert answered.port == "keeps low while its own supply holds, else starts low"
-    assert any(n.startswith("a low output is high after: ") and answered.profile in n for n in behaviour.notes)
+    assert any(
+        n.startswith("a low output is high after: ") and answered.profile in n for n in behaviour.notes
+    )
     assert row(derive(toggle()), "dip to 60% for 1 ms", start="low").output == "low"
 
 
@@ -282,3 +284,32 @@ def test_trace_of_a_supply_needs_no_press() -> None:
 def test_supply_that_cannot_be_read(text: str) -> None:
     with pytest.raises(PressError, match=r"^--supply: .*write TIME:VOLTS"):
         read_supply(text)
+
+
+# --- from unit to unit ---
+
+
+@pytest.mark.parametrize(
+    ("farad", "output", "corners"),
+    [("1u", "high", "same"), ("4.2u", "high", "either"), ("5.2u", "low", "either"), ("10u", "low", "same")],
+)
+def test_start_that_two_filters_fight_over(farad: str, output: str, corners: str) -> None:
+    """Trigger lets go after ``RC ln(3/2)``, reset after ``RC ln(12/11)``: the later one decides.
+
+    Of one resistance, the capacitors' ratio decides: ln(3/2) / ln(12/11) = 4.66.
+    """
+    parts = {
+        "CR": f"{{capacitor: {farad} ±20%, between: [clear, gnd]}}",
+        "CS": "{capacitor: 1u ±20%, between: [set, gnd]}",
+    }
+    found = derive(latch(parts, values=IDEAL)).power_on
+
+    assert (found.output, found.corners) == (output, corners)
+    assert (math.log(1.5) / math.log(12 / 11) > float(farad.rstrip("u"))) == (output == "high")
+    assert derived(derive(latch(parts, values=IDEAL)))["power_on"]["corners"] == corners  # type: ignore[index]
+
+
+def test_start_that_nothing_forces_is_the_same_in_every_unit() -> None:
+    found = derive(latch()).power_on
+
+    assert (found.output, found.corners, found.guaranteed) == ("undetermined", "same", "same")
