@@ -9,7 +9,7 @@ from numpy.typing import NDArray
 from porter.behaviour.model import Behaviour
 from porter.circuit.engine import Ints
 from porter.parity.closure import Walk
-from porter.parity.family import PortMachine, compare, laid_out, lengths, units
+from porter.parity.family import PortMachine, Stage, clock_ends, laid_out, lengths, units
 from porter.parity.model import Closure
 from porter.parity.twin import circuit_decides, circuit_moves, port_decides
 from porter.port.memory import Memory
@@ -181,8 +181,9 @@ def _judge(
     machine = PortMachine(port)
     rest = int(lengths(behaviour, machine)[-1])
     presses = laid_out([[*path, (path[-1][0], rest)] for path in paths], rest)
-    wrong, _, _ = compare(circuit, units(circuit, behaviour), machine, presses, port.start_q, 0.0)
-    return wrong
+    rows, ends = units(circuit, behaviour), clock_ends(circuit)
+    stage = Stage.set(circuit, rows, presses, ends, port.tick_s, port.start_q)
+    return np.asarray(np.isfinite(stage.parted(machine)).any(axis=0))
 
 
 class _PortStates:

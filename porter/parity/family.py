@@ -1,10 +1,12 @@
 """The port against all allowed units at once: what every unit does, the port must do.
 
 A set of units that stands for the family is run exactly through press sequences
-whose presses and gaps sit at the edges of the windows.  Per sequence and edge
+whose presses and gaps sit at the edges of the windows: taps after every history,
+rhythms, presses that overlap, and presses and gaps long enough for a counter of 8 or
+16 bits to run over.  Per sequence and edge
 number there are three bands: every unit has that edge (*always*), none has it
 (*never*), or units differ (*either*).  The port must have an *always* edge, of
-the same polarity, within the units' own times and a stated delay; it may not
+the same polarity, within the units' own times and the stated delay; it may not
 have a *never* edge; in an *either* band it is free.
 
 The comparison of edges by their number is a Skorokhod distance on binary traces
@@ -13,17 +15,16 @@ The comparison of edges by their number is a Skorokhod distance on binary traces
 
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
-from itertools import pairwise
+from itertools import pairwise, permutations
 from typing import Any, Protocol
 
 import numpy as np
-from numpy.typing import NDArray
 
 from porter.behaviour.model import Behaviour
-from porter.circuit.engine import Engine, Ints
+from porter.circuit.engine import BUSY, Engine, Ints, Lanes, Listener, Mask
 from porter.circuit.values import Floats, columns
 from porter.parity.model import FamilyCheck
-from porter.port.model import Port
+from porter.port.model import Port, State
 from porter.port.step import start
 from porter.port.swift import stepper
 from porter.spec.model import Circuit
@@ -31,6 +32,7 @@ from porter.spec.model import Circuit
 MOST_EDGES = 24  # edges of a trace that are compared
 _LENGTHS = 9  # different lengths of presses and gaps
 _HAND_S = 0.04  # a quick press of a person (common practice)
+_LOOK = 16  # ticks between looks at whether anything still moves
 
 
 class Machine(Protocol):
@@ -78,6 +80,10 @@ class PortMachine:
         return after, after.q.astype(np.int64)
 
 
+#: A press sequence: (held mask, ticks) one after the other.
+Row = tuple[tuple[int, int], ...]
+
+
 #: Press sequences: held masks and lengths in nominal ticks, both of shape (S, segments); length 0 = unused.
 @dataclass(frozen=True, slots=True)
 class Presses:
@@ -90,6 +96,67 @@ class Presses:
         return len(self.masks)
 
 
+@dataclass(frozen=True, slots=True)
+class Stage:
+    """What the units of a family do in a batch of press sequences; machines are held against it.
+
+    Args:
+        clocks: lengths of the machine's real tick, in nominal ticks.
+        first, last, share: per sequence and edge, the earliest and the latest unit's time and the
+            share of units that have it, shape (S, MOST_EDGES).
+        delay: ticks that a machine may be late with each edge: two, and one more for each edge up to
+            it that the nominal unit has between button changes, where a machine acts up to a tick late.
+        clear: False from the first edge on that units differ in having, or that a button change may
+            overtake: edges no longer line up by number there.
+    """
+
+    presses: Presses
+    clocks: tuple[float, ...]
+    first: Floats
+    last: Floats
+    share: Floats
+    delay: Floats
+    clear: Mask
+
+    @staticmethod
+    def set(
+        circuit: Circuit,
+        rows: Floats,
+        presses: Presses,
+        clocks: tuple[float, ...],
+        tick_s: float,
+        start_q: int,
+    ) -> "Stage":
+        """Run units, the nominal one first, through sequences of ticks of this length, starting with this latch."""
+        times = circuit_edges(circuit, rows, presses, tick_s, start_q)
+        first, last, share = _bands(times)
+        nominal, ends = times[0][:, :, None], np.cumsum(presses.ticks, axis=1)[:, None, :] * tick_s
+        alone = np.isfinite(times[0]) & (times[0] > 0) & (np.abs(nominal - ends) > 1e-9).all(axis=2)
+        delay = 2.0 + np.cumsum(alone, axis=1)
+        with np.errstate(invalid="ignore"):
+            room = np.where(ends > nominal, ends - nominal, np.inf).min(axis=2)
+        overtaken = alone & (room < delay * tick_s)
+        mixed = (share > 0) & (share < 1)
+        clear = np.cumsum(mixed | overtaken, axis=1) == 0
+        return Stage(presses, clocks, first, last, share, delay, clear)
+
+    def parted(self, machine: Machine) -> Floats:
+        """Return when each sequence shows the machine to be no allowed unit, seconds, inf = never; shape (clocks, S)."""
+        runs = machine_edges(machine, self.presses, np.array(self.clocks))
+        ticks = [machine.tick_s * clock for clock in self.clocks]
+        return np.array(
+            [
+                _parts(edges, self, tick, np.asarray(self.delay * tick + 1e-12), machine.tick_s)
+                for tick, edges in zip(ticks, runs, strict=True)
+            ]
+        )
+
+    def witness(self, parted: Floats, tick_s: float) -> tuple[int, ...] | None:
+        """Write out a short sequence that parts, held mask by tick; one of the nominal clock where there is one."""
+        nominal = parted[self.clocks.index(1.0)]
+        return _witness(self.presses, nominal if np.isfinite(nominal).any() else parted.min(axis=0), tick_s)
+
+
 def check_family(
     circuit: Circuit,
     behaviour: Behaviour,
@@ -98,56 +165,62 @@ def check_family(
     start_q: int,
     count: int = 240,
     seed: int = 7,
-    early_s: float = 0.0,
+    stages: tuple[Stage, ...] | None = None,
 ) -> FamilyCheck:
     """Run units and machine through press sequences and compare their edges.
 
     Args:
         machine: the port, or anything that claims to be one.
         start_q: the latch that units start with where nothing forces it.
-        count: sequences; seed: of the ones that are drawn.
-        early_s: how much earlier than every unit a port may act (its own rounding).
+        count: sequences, beside the ones that always belong; seed: of the ones that are drawn.
+        stages: what `set_stages` returned for this circuit, tick and number of buttons.
     """
-    rows = units(circuit, behaviour)
-    presses = sequences(behaviour, machine, count, seed)
-    wrong, share, clocks = compare(circuit, rows, machine, presses, start_q, early_s)
-    always, either = int((share == 1.0).sum()), int(((share > 0) & (share < 1)).sum())
-    witness = _shortest(presses, wrong) if wrong.any() else None
+    if stages is None:
+        stages = set_stages(circuit, behaviour, machine, start_q=start_q, count=count, seed=seed)
+    parted = [stage.parted(machine) for stage in stages]
+    wrong = sum(int(np.isfinite(when).any(axis=0).sum()) for when in parted)
+    found = [stage.witness(when, machine.tick_s) for stage, when in zip(stages, parted, strict=True)]
+    witness = min((w for w in found if w is not None), key=len, default=None)
+    rows, many = len(units(circuit, behaviour)), sum(len(stage.presses) for stage in stages)
+    always = sum(int((s.share == 1.0).sum()) for s in stages)
+    either = sum(int(((s.share > 0) & (s.share < 1)).sum()) for s in stages)
+    clocks = stages[0].clocks
     said = (
-        f"{len(presses):,} press sequences were run through {len(rows)} units that span the family and through the port with its "
+        f"{many:,} press sequences were run through {rows} units that span the family and through the port with its "
         f"clock at {', '.join(f'{c:.3g}' for c in clocks)} of nominal: {always:,} edges that every unit has, {either:,} that some have; "
-        + (
-            f"the port left these bands in {int(wrong.sum())} sequences"
-            if wrong.any()
-            else "the port kept within them"
-        )
+        + (f"the port left these bands in {wrong} sequences" if wrong else "the port kept within them")
     )
-    return FamilyCheck(len(presses), len(rows), clocks, always, either, int(wrong.sum()), witness, said)
+    return FamilyCheck(many, rows, clocks, always, either, wrong, witness, said)
 
 
-def compare(
-    circuit: Circuit, rows: Floats, machine: Machine, presses: Presses, start_q: int, early_s: float
-) -> tuple[NDArray[np.bool_], Floats, tuple[float, ...]]:
-    """Run units and machine through sequences.
+def set_stages(
+    circuit: Circuit, behaviour: Behaviour, machine: Machine, *, start_q: int, count: int = 240, seed: int = 7
+) -> tuple[Stage, ...]:
+    """Run the units through all sequences; the stages serve every machine of the same tick and buttons."""
+    rows, long = units(circuit, behaviour), lengths(behaviour, machine)
+    batches = (
+        (sequences(behaviour, machine, count, seed), clock_ends(circuit)),
+        # Too long to run with every clock: a counter runs over at the same tick with all of them.
+        (laid_out(list(_overflows(long, behaviour, machine)), int(long[-1])), (1.0,)),
+    )
+    return tuple(
+        Stage.set(circuit, rows, presses, clocks, machine.tick_s, start_q) for presses, clocks in batches
+    )
 
-    Returns:
-        Which sequences the machine answers as no unit does, the share of units that have each edge,
-        and the clocks that the machine was run with.
-    """
-    first, last, share = _bands(circuit_edges(circuit, rows, presses, machine.tick_s, start_q))
-    clocks = tuple(sorted({1 - circuit.port.clock, 1.0, 1 + circuit.port.clock}))
-    wrong = np.zeros(len(presses), bool)
-    runs = machine_edges(machine, presses, np.array(clocks))
-    for clock, edges in zip(clocks, runs, strict=True):
-        early, late = machine.tick_s * clock + early_s, 2 * machine.tick_s * clock + 1e-12
-        wrong |= _violates(edges, first, last, share, early, late, presses, machine.tick_s)
-    return wrong, share, clocks
+
+def clock_ends(circuit: Circuit) -> tuple[float, ...]:
+    """Return the lengths of a real tick to run a port with, in nominal ticks."""
+    return tuple(sorted({1 - circuit.port.clock, 1.0, 1 + circuit.port.clock}))
 
 
 def units(circuit: Circuit, behaviour: Behaviour) -> Floats:
-    """Return the units that stand for the family: nominal, and those at the ends of windows and margins."""
+    """Return the units that stand for the family: the nominal one first, then those at the ends of windows and margins."""
+    nominal = columns(circuit).nominal[None, :]
     rows = behaviour.extra.get("units")
-    return np.asarray(rows) if rows is not None else columns(circuit).nominal[None, :]
+    if rows is None:
+        return nominal
+    others = np.asarray(rows)
+    return np.concatenate([nominal, others[(others != nominal).any(axis=1)]])
 
 
 # --- sequences ---
@@ -187,7 +260,7 @@ def _slow(behaviour: Behaviour) -> float:
 
 
 def sequences(behaviour: Behaviour, machine: Machine, count: int, seed: int) -> Presses:
-    """Return press sequences: every press-gap-press of the lengths as far as they go, then drawn ones."""
+    """Return press sequences: every press-gap-press of the lengths as far as they go, drawn ones, and attacks."""
     long = lengths(behaviour, machine)
     rng = np.random.default_rng(seed)
     rows = list(_short_ones(long, machine.held_count))
@@ -195,6 +268,7 @@ def sequences(behaviour: Behaviour, machine: Machine, count: int, seed: int) -> 
     rows = rows[: count // 2]
     while len(rows) < count:
         rows.append(_drawn(long, machine.held_count, rng))
+    rows += [*_rhythms(long, machine), *_overlaps(long, machine)]
     return laid_out(rows, int(long[-1]))
 
 
@@ -209,7 +283,44 @@ def laid_out(rows: Sequence[Sequence[tuple[int, int]]], rest: int) -> Presses:
     return Presses(masks, ticks)
 
 
-def _short_ones(long: Ints, masks: int) -> Iterator[tuple[tuple[int, int], ...]]:
+def _singles(machine: Machine) -> list[int]:
+    return [1 << i for i in range((machine.held_count - 1).bit_length())]
+
+
+def _rhythms(long: Ints, machine: Machine) -> "Iterator[Row]":
+    """Taps again and again, from power-on and after a first turn: what every closure does to the memory."""
+    rest, hand = int(long[-1]), max(2, round(_HAND_S / machine.tick_s))
+    for mask in _singles(machine):
+        for lead in ((), ((mask, 2), (0, rest))):
+            for tap in sorted({2, hand}):
+                for gap in sorted({18, *long[:-1].tolist()}):
+                    yield (*lead, *((mask, tap), (0, gap)) * 5)
+
+
+def _overlaps(long: Ints, machine: Machine) -> "Iterator[Row]":
+    """One button over another, let go in either order."""
+    some = sorted({2, int(long[len(long) // 2]), int(long[-1])})
+    for one, other in permutations(_singles(machine), 2):
+        for both in some:
+            yield ((one, some[1]), (one | other, both), (other, some[1]))
+            yield ((one, some[1]), (one | other, both), (one, some[1]))
+
+
+def _overflows(long: Ints, behaviour: Behaviour, machine: Machine) -> "Iterator[Row]":
+    """Presses and gaps just longer than 256 and 65,536 ticks, where a counter too narrow starts again."""
+    rest, hand = int(long[-1]), max(2, round(_HAND_S / machine.tick_s))
+    taps = [
+        w.guaranteed.least for w in behaviour.windows if w.window == "re-arm-after-tap" and w.guaranteed.least
+    ]
+    past = max(2, round(0.4 * min(taps, default=0.0) / machine.tick_s))
+    for mask in _singles(machine):
+        for lead in ((), ((mask, 2), (0, rest))):
+            for full in (1 << 8, 1 << 16):
+                yield (*lead, (mask, 2), (0, full + past), (mask, hand))
+                yield (*lead, (mask, full + past), (0, rest), (mask, hand))
+
+
+def _short_ones(long: Ints, masks: int) -> "Iterator[Row]":
     rest = (0, int(long[-1]))
     for mask in range(1, masks):
         for d in long.tolist():
@@ -220,7 +331,7 @@ def _short_ones(long: Ints, masks: int) -> Iterator[tuple[tuple[int, int], ...]]
                 yield ((mask, d), (0, g), (mask, d), (0, g), (other, d))
 
 
-def _drawn(long: Ints, masks: int, rng: np.random.Generator) -> tuple[tuple[int, int], ...]:
+def _drawn(long: Ints, masks: int, rng: np.random.Generator) -> "Row":
     count = int(rng.integers(2, 7))
     out: list[tuple[int, int]] = []
     for _ in range(count):
@@ -252,9 +363,21 @@ def circuit_edges(circuit: Circuit, rows: Floats, presses: Presses, tick_s: floa
 
     for k in range(presses.masks.shape[1]):
         engine.press(lanes, np.tile(presses.masks[:, k], count), listen)
-        engine.run(lanes, np.tile(presses.ticks[:, k] * tick_s, count), listener=listen)
+        _run(engine, lanes, np.tile(presses.ticks[:, k] * tick_s, count), listen)
         lanes.busy[:] = False
     return _from(start_q, begin, times).reshape(count, many, MOST_EDGES)
+
+
+def _run(engine: Engine, lanes: Lanes, seconds: Floats, listen: Listener) -> None:
+    """Run through oscillation too, as far as edges are compared."""
+    end = lanes.clock_s + seconds
+    engine.run(lanes, seconds, listener=listen)
+    for _ in range(1 + MOST_EDGES // BUSY):
+        on = lanes.busy & (lanes.period_s > 0)
+        if not on.any():
+            return
+        lanes.busy[on], lanes.flips[on] = False, 0
+        engine.run(lanes, np.where(on, end - lanes.clock_s, 0.0), listener=listen)
 
 
 def _from(start_q: int, begin: Ints, times: Floats) -> Floats:
@@ -284,19 +407,37 @@ def machine_edges(machine: Machine, presses: Presses, clocks: Floats) -> Floats:
     rows = np.arange(count)
     last = np.full(count, _first(machine))
     segment = np.zeros(count, np.int64)
-    for tick in range(int(np.ceil(ends[:, -1].max() / clocks.min()))):
+    tick, over = 0, int(np.ceil(ends[:, -1].max() / clocks.min()))
+    while tick < over:
         now = tick * clock
         while True:  # segments of length 0 are stepped over
-            over = (ends[rows, segment] <= now + 1e-9) & (segment < ends.shape[1] - 1)
-            if not over.any():
+            done = (ends[rows, segment] <= now + 1e-9) & (segment < ends.shape[1] - 1)
+            if not done.any():
                 break
-            segment += over
+            segment += done
+        before = state
         state, q = machine.step(state, masks[rows, segment])
         turned = np.flatnonzero((q != last) & (used < MOST_EDGES) & (now <= ends[:, -1]))
         times[turned, used[turned]] = now[turned] * machine.tick_s
         used[turned] += 1
         last = q
+        tick += 1
+        if tick % _LOOK == 0 and (_rests(before, state, count) | (used >= MOST_EDGES)).all():
+            # Nothing moves: on to where a button does.
+            ahead = np.ceil((ends[rows, segment] - 1e-9) / clock).astype(np.int64)
+            tick = max(tick, int(np.where(ahead >= tick, ahead, over).min()))
     return times.reshape(len(clocks), many, MOST_EDGES)
+
+
+def _rests(before: Any, after: Any, count: int) -> Mask:
+    """Return which lanes' state is the same after a step, all False for states of unknown kinds."""
+    if isinstance(after, State):
+        return np.asarray((before.q == after.q) & (before.regs == after.regs).all(axis=1))
+    if isinstance(after, np.ndarray):
+        return np.asarray((before == after).reshape(count, -1).all(axis=1))
+    if isinstance(after, tuple):
+        return np.asarray(np.all([_rests(a, b, count) for a, b in zip(before, after, strict=True)], axis=0))
+    return np.zeros(count, bool)
 
 
 def _first(machine: Machine) -> int:
@@ -313,34 +454,25 @@ def _bands(times: Floats) -> tuple[Floats, Floats, Floats]:
     return first, last, share
 
 
-def _violates(
-    edges: Floats,
-    first: Floats,
-    last: Floats,
-    share: Floats,
-    early: float,
-    late: float,
-    presses: Presses,
-    tick_s: float,
-) -> NDArray[np.bool_]:
-    """Return which sequences the machine answers as no allowed unit does."""
+def _parts(edges: Floats, stage: Stage, early: float, late: Floats, tick_s: float) -> Floats:
+    """Return when each sequence shows a machine to do what no allowed unit does, seconds, inf = never."""
+    first, last, share = stage.first, stage.last, stage.share
     has = np.isfinite(edges)
-    end = presses.ticks.sum(axis=1)[:, None] * tick_s
+    end = stage.presses.ticks.sum(axis=1)[:, None] * tick_s
     with np.errstate(invalid="ignore"):
-        early_or_late = has & (share > 0) & ((edges < first - early) | (edges > last + late))
-        missing = ~has & (share == 1.0) & (last + late < end)
-        extra = has & (share == 0.0)
-    # Once units differ in how many edges they have, later edges of theirs don't line up by number.
-    clear = np.cumsum((share > 0) & (share < 1), axis=1) == 0
-    return np.asarray(((early_or_late | missing | extra) & clear).any(axis=1))
+        too_early = has & (share > 0) & (edges < first - early)
+        too_late = (share > 0) & (edges > last + late) & (has | (share == 1.0)) & (last + late < end)
+    extra = has & (share == 0.0)
+    when = np.where(too_early | extra, edges, np.where(too_late, last + late, np.inf))
+    return np.asarray(np.where(stage.clear, when, np.inf).min(axis=1))
 
 
-def _shortest(presses: Presses, wrong: NDArray[np.bool_]) -> tuple[int, ...]:
-    """Write out the wrong sequence that is over soonest, held mask by tick."""
-    at = np.flatnonzero(wrong)
-    used = (presses.ticks[at] > 0).sum(axis=1)
-    best = at[np.lexsort((presses.ticks[at].sum(axis=1), used))[0]]
-    out: list[int] = []
-    for mask, ticks in zip(presses.masks[best], presses.ticks[best], strict=True):
-        out += [int(mask)] * int(ticks)
-    return tuple(out)
+def _witness(presses: Presses, parted: Floats, tick_s: float) -> tuple[int, ...] | None:
+    """Write out the sequence with the fewest changes until it shows the fault, held mask by tick up to there."""
+    at = np.flatnonzero(np.isfinite(parted))
+    if not len(at):
+        return None
+    ticks = np.floor(parted[at] / tick_s + 1e-9).astype(np.int64) + 1
+    begun = (np.cumsum(presses.ticks[at], axis=1) < ticks[:, None]).sum(axis=1)
+    best = int(np.lexsort((ticks, begun))[0])
+    return tuple(np.repeat(presses.masks[at[best]], presses.ticks[at[best]]).tolist()[: ticks[best]])

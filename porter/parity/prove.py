@@ -36,9 +36,7 @@ def prove(circuit: Circuit, port: Port, behaviour: Behaviour | None = None) -> P
     walk, others = close(circuit, behaviour, port, mem, ends)
     clocks = tuple(zip(ends, others, strict=False))
     listed = enumerate_all(circuit, behaviour, port, mem, walk)
-    units = check_family(
-        circuit, behaviour, PortMachine(port), start_q=port.start_q, early_s=_early(walk.closure, clocks)
-    )
+    units = check_family(circuit, behaviour, PortMachine(port), start_q=port.start_q)
     rows = ledger(circuit, behaviour, port, mem)
     witness = _shorter(_shorter(walk.path, listed.witness), units.witness)
     closure = dataclasses.replace(walk.closure, spread_s=2 * half_spread(behaviour) or None)
@@ -62,11 +60,6 @@ def _clocks(circuit: Circuit, port: Port, mem: Memory) -> tuple[float, ...]:
     if not mem.kept or not isinstance(port.machine, Charge) or not circuit.port.clock:
         return ()
     return (1 - circuit.port.clock, 1 + circuit.port.clock)
-
-
-def _early(closure: Closure, clocks: tuple[tuple[float, Closure], ...]) -> float:
-    """How much earlier than the nominal circuit the port's own rounding can make it act, seconds."""
-    return max((c.band_s or 0.0 for c in (closure, *(c for _, c in clocks))), default=0.0)
 
 
 def close(
