@@ -1,11 +1,16 @@
 """The walk over every reachable state of port and circuit, and the bound that holds for ever.
 
 With one capacitor, let ``e`` be the port's copy less the true voltage, in copies
-(1/65536 of the range).  Each tick the true flow shrinks ``|e|`` by the mode's factor
-``lambda`` or leaves it (a mode in which nothing conducts, which the port then
-copies exactly), and the port's own rounding adds at most ``q`` — measured here at
-every reachable state.  So ``|e| <= E = max q / (1 - lambda)`` for every input
-sequence of any length (contraction mapping, S. Banach).
+(1/65536 of the range).  In each mode one tick of the true flow takes two voltages
+to two that are nearer by the steepest slope ``lambda`` of that map at least, and the
+port's own rounding adds at most ``q`` — both measured here over every reachable state.
+So ``|e| <= E = max q / (1 - lambda)`` for every input sequence of any length
+(contraction mapping, S. Banach), up to the first decision within E of its threshold:
+after such a grey one port and circuit may go apart.
+
+Where nothing conducts (a mode, or the part of one beyond the level that a one-way
+output drives to) the slope is one.  There the port has to keep its copy exactly, and
+beside it the port may only move toward that part; then no error grows there either.
 
 Where the circuit flips inside a tick the port acts a part of a tick later.  The
 error that enters there, ``D``, is measured with the circuit started at both ends
@@ -118,8 +123,9 @@ def _said(states: int, masks: int, bound: Bound, scale: float, grey: int, wrong:
         f"every state that the port can reach from power-on was visited: {states:,} states, {states * masks:,} steps"
     ]
     if bound.holds:
+        until = ", up to its first grey decision" if grey else ""
         said.append(
-            f"the copy stays within {_volts(volts)} of the true voltage for every input sequence of any length: "
+            f"the copy stays within {_volts(volts)} of the true voltage for every input sequence of any length{until}: "
             f"a tick adds at most {_volts(bound.rounding * scale)} and the slowest mode keeps {bound.slowest:.6f} of what was there"
         )
     else:
@@ -160,6 +166,8 @@ class _Table:
         self.next_q: dict[tuple[int, int], NDArray[np.uint8]] = {}
         self.next_x: dict[tuple[int, int], Ints] = {}
         self.edges: dict[tuple[int, int], Floats] = {}
+        #: One tick of each mode with the latch kept, from every copy.
+        self.flow: dict[tuple[int, int], Floats] = {}
         step = stepper(port)
         for q in (0, 1):
             state = State(np.full(_COPIES, q, np.uint8), self.X)
@@ -200,10 +208,11 @@ class _Table:
         for q in (0, 1):
             for h in self.masks:
                 at = np.flatnonzero(self._arrivals(seen, q, h))
-                true, flips = _one_tick(self.mem, q, h, self.tick_s)
+                self.flow[q, h] = _one_tick(self.mem, q, h, self.tick_s, frozen=True)[0]
+                flips = _one_tick(self.mem, q, h, self.tick_s)[1]
                 errors.at[q, h], errors.flips[q, h] = at, flips[at]
                 errors.late[q, h] = flips[at] > 0
-                errors.off[q, h] = np.abs(self._moved(q, h)[at] - true[at])
+                errors.off[q, h] = np.abs(self._moved(q, h)[at] - self.flow[q, h][at])
         return errors
 
     def _arrivals(self, seen: Mask, q: int, h: int) -> Mask:
@@ -215,51 +224,89 @@ class _Table:
     def _moved(self, q: int, h: int) -> Ints:
         return move_copies(self.machine.modes[q][h].moves[0], 0, self.X)
 
-    def factor(self, q: int, h: int) -> float:
-        """The share of an error that one tick of a mode leaves."""
-        a, b = (circuit_moves_frozen(self.mem, q, h, x, self.tick_s) for x in (0.25 * U16, 0.75 * U16))
-        return float(abs(b - a) / (0.5 * U16))
+    def still(self, key: tuple[int, int]) -> tuple[Floats, Mask]:
+        """The slope of a mode's one-tick map from each copy to the next, and where it is one or borders on that.
+
+        A stretch between two copies in which the map bends has a slope between that of its sides.
+        """
+        slopes = np.abs(np.diff(self.flow[key]))
+        rests = slopes >= 1 - _STILL
+        rests[1:] |= slopes[:-1] >= 1 - _STILL
+        rests[:-1] |= slopes[1:] >= 1 - _STILL
+        return slopes, rests
+
+    def factor(self, key: tuple[int, int], at: Ints, widen: float) -> tuple[float, bool]:
+        """The most of an error that a tick leaves where a mode moves, and whether it stands still somewhere.
+
+        Looked for over the copies *at* and *widen* around them.
+        """
+        low, high = max(0, int(at.min() - widen) - 1), min(U16, int(at.max() + widen) + 1)
+        slopes, still = self.still(key)
+        moving = slopes[low:high][~still[low:high]]
+        return float(moving.max(initial=0.0)), bool(still[low:high].any())
 
     def bound(self, errors: "_Errors") -> Bound:
         """Find the error that no input sequence can exceed."""
-        worst, rounding, slowest, holds = 0.5, 0.0, 0.0, True
-        for key, off in errors.off.items():
-            calm = off[~errors.late[key]]
-            if not len(calm):
-                continue
-            factor, most = self.factor(*key), float(calm.max())
-            rounding = max(rounding, most)
-            if factor >= 1 - 1e-12:
-                holds &= most < 1e-6
-                continue
-            slowest = max(slowest, factor)
-            worst = max(worst, most / (1 - factor))
+        found = self._calm(errors, 0.5)
+        for _ in range(20):  # a wider bound may reach a steeper part of a mode
+            wider = self._calm(errors, found.copies)
+            if wider.copies <= found.copies * (1 + 1e-9):
+                break
+            found = wider
         if not any(late.any() for late in errors.late.values()):
-            return Bound(worst, rounding, slowest, 0.0, 0, holds)
-        return self._late_bound(errors, worst, rounding, slowest, holds)
+            return wider
+        return self._late_bound(errors, wider)
 
-    def _late_bound(
-        self, errors: "_Errors", calm: float, rounding: float, slowest: float, holds: bool
-    ) -> Bound:
+    def _calm(self, errors: "_Errors", widen: float) -> Bound:
+        """Bound the error of ticks without a flip inside; `apart` 1 where some mode stands still, else 0."""
+        worst, rounding, slowest, holds, rests = 0.5, 0.0, 0.0, True, False
+        for key, off in errors.off.items():
+            if not len(off):
+                continue
+            factor, still = self.factor(key, errors.at[key], widen)
+            rests |= still
+            holds &= not still or self._keeps(key, errors.at[key], off)
+            most = float(off.max())
+            rounding, slowest = max(rounding, most), max(slowest, factor)
+            worst = max(worst, most / (1 - factor))
+        return Bound(worst, rounding, slowest, 0.0, int(rests), holds)
+
+    def _keeps(self, key: tuple[int, int], at: Ints, off: Floats) -> bool:
+        """Whether a mode that partly stands still is copied exactly there, and moved only toward there elsewhere."""
+        slopes, still = self.still(key)
+        rests = np.append(slopes >= 1 - _STILL, False)[at] & np.append(False, slopes >= 1 - _STILL)[at]
+        if (off[rests] > 1e-6).any():
+            return False
+        moved, place = self._moved(*key)[at] - at, np.flatnonzero(still)
+        below, above = (at <= place[0] + 1) & (moved >= 0), (at >= place[-1]) & (moved <= 0)
+        return bool((rests | below | above).all())
+
+    def _late_bound(self, errors: "_Errors", calm: Bound) -> Bound:
         """Widen the bound by what flips inside ticks let in; see the module's head."""
-        apart = self._ticks_apart(errors)
-        left = slowest ** (apart - 1)
-        before = after = late = calm
+        before, after, late, apart, holds = calm.copies, calm.copies, calm.copies, 1, calm.holds
         for _ in range(400):
+            apart = self._ticks_apart(errors, before)
+            # Where a mode stands still nothing need have faded.
+            left = 1.0 if calm.apart else calm.slowest ** (apart - 1)
             each = {key: self._late_error(key, errors, before) for key, at in errors.late.items() if at.any()}
             late = max(each.values())
-            after = max(rounding + size * self._first_factor(1 - q) for (q, _), size in each.items())
-            again = late if apart == 1 else calm * (1 - left) + after * left
+            after = max(
+                calm.rounding + size * self._first_factor(1 - q, errors, size)
+                for (q, _), size in each.items()
+            )
+            again = late if apart == 1 else calm.copies * (1 - left) + after * left
             if again <= before * (1 + 1e-4):
                 break
             before = again
         else:
             holds = False
-        return Bound(max(before, after, calm), rounding, slowest, late, apart, holds and before < U16)
+        most = max(before, after, calm.copies)
+        return Bound(most, calm.rounding, calm.slowest, late, apart, holds and before < U16)
 
-    def _first_factor(self, q: int) -> float:
+    def _first_factor(self, q: int, errors: "_Errors", widen: float) -> float:
         """The most of an error that the first tick after a flip to q leaves."""
-        return max(self.factor(q, h) for h in self.masks)
+        found = [self.factor((q, h), errors.at[q, h], widen) for h in self.masks if len(errors.at[q, h])]
+        return max((1.0 if still else factor for factor, still in found), default=1.0)
 
     def _late_error(self, key: tuple[int, int], errors: "_Errors", before: float) -> float:
         """The most that a copy is off after a tick with a flip inside, had it been off by *before*."""
@@ -276,24 +323,36 @@ class _Table:
             worst = max(worst, float(off[flipped].max(initial=0.0)))
         return worst
 
-    def _ticks_apart(self, errors: "_Errors") -> int:
-        """Fewest ticks from just after a flip inside a tick to the next one, over all inputs."""
-        source = np.zeros((2, _COPIES), bool)
+    def _ticks_apart(self, errors: "_Errors", widen: float) -> int:
+        """Fewest ticks from just after a flip inside a tick to the next one, over all inputs.
+
+        A copy within *widen* of one from which the circuit flips counts as one.
+        """
+        source = {key: self._about(errors, key, widen) for key in errors.late}
         front = np.zeros((2, _COPIES), bool)
         for (q, h), late in errors.late.items():
-            at = errors.at[q, h][late]
-            source[q, at] = True
-            front[q, self._moved(q, h)[at]] = True
+            front[q, self._moved(q, h)[errors.at[q, h][late]]] = True
         for ticks in range(1, 4096):
-            if (front & source).any():
-                return ticks
             new = np.zeros_like(front)
             for q in (0, 1):
                 at = np.flatnonzero(front[q])
                 for h in self.masks:
+                    for to in (0, 1):
+                        if (source[to, h][at] & (self.decided[q, h][at] == to)).any():
+                            return ticks
                     new[self.next_q[q, h][at], self.next_x[q, h][at]] = True
             front = new
         return 4096
+
+    def _about(self, errors: "_Errors", key: tuple[int, int], widen: float) -> Mask:
+        """Mark copies within *widen* of one from which the circuit flips inside the tick."""
+        places = np.sort(errors.at[key][errors.late[key]])
+        if not len(places):
+            return np.zeros(_COPIES, bool)
+        X = self.X[:, 0]
+        after = np.clip(np.searchsorted(places, X), 0, len(places) - 1)
+        near = np.minimum(np.abs(places[after] - X), np.abs(places[np.maximum(after - 1, 0)] - X))
+        return np.asarray(near <= widen)
 
     def band(self, bound: float) -> float:
         """The most that a decision within the bound is early or late: the bound over the speed of crossing, seconds."""
@@ -329,71 +388,107 @@ class _Table:
     def pending(
         self, errors: "_Errors", bound: float, grey: NDArray[np.bool_], wrong: NDArray[np.bool_]
     ) -> None:
-        """After a flip inside a tick: the port's next decision must bring it level, whatever is pressed then."""
+        """After a flip inside a tick: the port's next decision must bring it level, whatever is pressed then.
+
+        Where what is pressed then keeps the port from flipping, circuit and port may show the same
+        latch but not remember the same: the circuit has been there and back.  Those are grey, as
+        are the copies from which the circuit flips for some voltage within the bound.
+        """
         for (q, h), late in errors.late.items():
             if not late.any():
                 continue
-            at = errors.at[q, h][late]
-            lanes = circuit_moves(self.mem, q, h, at[:, None], self.tick_s)
-            to = self._moved(q, h)[at]
+            self._pending_exactly(q, h, errors, bound, grey, wrong)
+            maybe = errors.at[q, h][self._about(errors, (q, h), bound)[errors.at[q, h]]]
+            to = self._moved(q, h)[maybe]
             for h2 in self.masks:
-                truth = lanes.copy()
-                self.mem.engine.press(truth, h2)
-                off = self.decided[q, h2][to] != truth.q
-                near = np.zeros(len(to), bool)
-                for edge in self.edges[q, h2]:
-                    near |= np.abs(to - edge) <= bound + 0.5
-                grey[q, to[off & near], h2] = True
-                wrong[q, to[off & ~near], h2] = True
-            wrong[q, to[errors.flips[q, h][late] > 1], 0] = True
+                stays = to[(self.decided[q, h2][to] == q)]
+                grey[q, stays, h2] |= ~wrong[q, stays, h2]
+
+    def _pending_exactly(
+        self,
+        q: int,
+        h: int,
+        errors: "_Errors",
+        bound: float,
+        grey: NDArray[np.bool_],
+        wrong: NDArray[np.bool_],
+    ) -> None:
+        late = errors.late[q, h]
+        at = errors.at[q, h][late]
+        lanes = circuit_moves(self.mem, q, h, at[:, None], self.tick_s)
+        to = self._moved(q, h)[at]
+        for h2 in self.masks:
+            truth = lanes.copy()
+            self.mem.engine.press(truth, h2)
+            off = self.decided[q, h2][to] != truth.q
+            near = np.zeros(len(to), bool)
+            for edge in self.edges[q, h2]:
+                near |= np.abs(to - edge) <= bound + 0.5
+            grey[q, to[off & near], h2] = True
+            wrong[q, to[off & ~near], h2] = True
+        wrong[q, to[errors.flips[q, h][late] > 1], 0] = True
 
 
+#: A slope of a one-tick map from here up to one is taken for standing still.
+_STILL = 1e-9
 _GRID = np.unique(np.rint(np.linspace(0, U16, 258)).astype(np.int64))
 
 
 def _decisions(mem: Memory, q: int, h: int) -> tuple[Ints, Floats]:
     """Return what the circuit decides at every copy, and between which copies that changes.
 
-    Decided on a grid; a stretch whose ends decide alike in the same mode decides so throughout,
-    since every guard is affine there; the other stretches are looked at copy by copy.
+    Decided on a grid; a stretch whose ends agree in every comparator with the latch at either
+    level, in the same mode, decides alike throughout, since every guard is affine there; the other
+    stretches are looked at copy by copy.
     """
     truth = np.empty(_COPIES, np.int64)
-    lanes = mem.lanes(q, h, _GRID[:, None])
-    mem.engine.resolve(lanes)
-    alike = (lanes.q[1:] == lanes.q[:-1]) & (lanes.conducts[1:] == lanes.conducts[:-1])
+    decided = circuit_decides(mem, q, h, _GRID[:, None]).q
+    sides = np.column_stack([_sides(mem, level, h, _GRID) for level in (q, 1 - q)])
+    alike = (sides[1:] == sides[:-1]).all(axis=1)
     which = np.clip(np.searchsorted(_GRID, np.arange(_COPIES), side="right") - 1, 0, len(_GRID) - 2)
-    truth[:] = lanes.q[which]
+    truth[:] = decided[which]
     open_ = np.flatnonzero(~alike[which])
     if len(open_):
         truth[open_] = circuit_decides(mem, q, h, open_[:, None]).q
-    truth[_GRID] = lanes.q
+    truth[_GRID] = decided
     return truth, np.asarray(np.flatnonzero(np.diff(truth)) + 0.5, np.float64)
 
 
-def _one_tick(mem: Memory, q: int, h: int, tick_s: float) -> tuple[Floats, Ints]:
+def _sides(mem: Memory, q: int, h: int, copies: Ints) -> Ints:
+    """Return the conducting set and the comparators' signs with latch and buttons kept, shape (B, 4)."""
+    lanes = mem.lanes(q, h, copies[:, None])
+    mem.engine.resolve(lanes, frozen=True)
+    signs = np.sign(mem.engine.guards(lanes)).astype(np.int64)
+    return np.column_stack([lanes.conducts, signs])
+
+
+def _one_tick(mem: Memory, q: int, h: int, tick_s: float, frozen: bool = False) -> tuple[Floats, Ints]:
     """Return where one tick takes the true voltage from every copy, in copies, and the flips on the way.
 
-    Between two grid copies that start in one mode and meet no event the map is affine, and
-    neither does any copy between them meet one: guards are affine in the copy at every instant.
-    The other stretches are run copy by copy.
+    Between two grid copies that start in one mode on the same sides of all levels and meet no event
+    the map is affine, and neither does any copy between them meet one: guards are affine in the
+    copy at every instant.  The other stretches are run copy by copy.
+
+    Args:
+        frozen: let no comparator act.
     """
     lanes = mem.lanes(q, h, _GRID[:, None])
-    mem.engine.resolve(lanes, frozen=True)
-    first = lanes.conducts.copy()
+    first = _sides(mem, q, h, _GRID)[:, : 1 if frozen else 4]
     calm = np.ones(len(_GRID), bool)
 
     def watch(rows: Ints, _: object, __: object, at: Floats, length: Floats) -> None:
         calm[rows] &= (at == 0) & (length >= tick_s)
 
-    mem.engine.run(lanes, tick_s, watcher=watch)
+    mem.engine.run(lanes, tick_s, frozen=frozen, watcher=watch)
     ends = mem.copies(lanes.x)[:, 0]
     true = np.interp(np.arange(_COPIES), _GRID, ends)
     flips = np.zeros(_COPIES, np.int64)
-    quiet = calm[1:] & calm[:-1] & (first[1:] == first[:-1])
+    quiet = calm[1:] & calm[:-1] & (first[1:] == first[:-1]).all(axis=1)
     which = np.clip(np.searchsorted(_GRID, np.arange(_COPIES), side="right") - 1, 0, len(_GRID) - 2)
     open_ = np.flatnonzero(~quiet[which])
     if len(open_):
-        single = circuit_moves(mem, q, h, open_[:, None], tick_s)
+        single = mem.lanes(q, h, open_[:, None])
+        mem.engine.run(single, tick_s, frozen=frozen)
         true[open_], flips[open_] = mem.copies(single.x)[:, 0], single.flips
     return true, flips
 
@@ -406,13 +501,6 @@ class _Errors:
     late: dict[tuple[int, int], Mask]
     off: dict[tuple[int, int], Floats]
     flips: dict[tuple[int, int], Ints]
-
-
-def circuit_moves_frozen(mem: Memory, q: int, held: int, copy: float, tick_s: float) -> float:
-    """Return one tick of the true flow with latch and buttons kept, in copies."""
-    lanes = mem.lanes(q, held, np.array([[copy]]))
-    mem.engine.run(lanes, tick_s, frozen=True)
-    return float(mem.copies(lanes.x)[0, 0])
 
 
 def _path(parents: Ints, wrong: NDArray[np.bool_], port: Port) -> tuple[int, ...]:
