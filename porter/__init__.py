@@ -18,9 +18,10 @@ _HOMES = {
     "prove": "porter.parity.prove",
     "build_vectors": "porter.vectors",
     "emit": "porter.emit",
+    "sheet": "porter.sheet",
 }
 __version__ = "0.1.0"
-__all__ = ["build_vectors", "derive", "emit", "plan", "prove", "read", "simulate"]
+__all__ = ["build_vectors", "derive", "emit", "plan", "prove", "read", "sheet", "simulate"]
 
 
 def __getattr__(name: str) -> object:

@@ -22,6 +22,7 @@ from porter.behaviour.model import Behaviour
 from porter.findings import Finding, PorterError
 from porter.parity.model import LedgerRow, Parity
 from porter.port.model import Port
+from porter.sheet.model import Sheet
 from porter.spec.model import Circuit
 from porter.vectors.model import Suite
 
@@ -41,7 +42,7 @@ class Job:
 
     Args:
         circuit: with the bare file name in every position.
-        behaviour: with the reader's warnings among its findings.
+        behaviour: with the reader's warnings and the interface sheet's errors among its findings.
         acceptance: what is wrong with the spec's acceptances.
         files: text by path in the job folder.
     """
@@ -84,6 +85,7 @@ def build_job(circuit: Circuit, *, progress: Progress | None = None) -> Job:
     """
     from porter.emit import emit
     from porter.port.plan import plan
+    from porter.sheet import render_text, sheet
     from porter.vectors import build_vectors
 
     say = progress or _quiet
@@ -93,6 +95,7 @@ def build_job(circuit: Circuit, *, progress: Progress | None = None) -> Job:
     say("planning the port")
     port = plan(circuit, behaviour)
     parity, acceptance = prove_port(circuit, port, behaviour, say)
+    interface = sheet(circuit, behaviour, port)
     say("building the test vectors")
     suite = build_vectors(behaviour, port)
     say("writing the firmware")
@@ -101,10 +104,12 @@ def build_job(circuit: Circuit, *, progress: Progress | None = None) -> Job:
         "parity.json": parity_json(parity),
         **emit(port, suite, statement=parity.statement),
         **vector_files(suite),
+        "interface.txt": render_text(interface),
     }
     say("drawing the report")
+    behaviour = dataclasses.replace(behaviour, findings=merged(behaviour.findings, interface.findings))
     shown = dataclasses.replace(behaviour, findings=merged(behaviour.findings, acceptance))
-    files["report.html"] = _report(circuit, shown, port, parity, suite, files)
+    files["report.html"] = _report(circuit, shown, port, parity, suite, files, interface)
     files[MANIFEST] = manifest("job", circuit.file, port.spec_sha256, files)
     return Job(circuit, behaviour, port, parity, acceptance, suite, dict(sorted(files.items())))
 
@@ -185,12 +190,15 @@ def _report(
     parity: Parity,
     suite: Suite,
     files: Mapping[str, str],
+    interface: Sheet,
 ) -> str:
     from porter.charts import standard_traces
     from porter.report import render
 
     traces = standard_traces(circuit, behaviour, port)
-    return render(circuit, behaviour, port, parity, suite, files, traces, versions=_versions())
+    return render(
+        circuit, behaviour, port, parity, suite, files, traces, versions=_versions(), sheet=interface
+    )
 
 
 def _versions() -> dict[str, str]:

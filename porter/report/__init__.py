@@ -24,11 +24,13 @@ from porter.report.conduct import (
 )
 from porter.report.drawing import circuit_section
 from porter.report.firmware import Size, evidence_section, firmware_section
+from porter.report.interface import interface_section
 from porter.report.page import Section
 from porter.report.proof import deviations_section, ledger_section, parity_section, vectors_section
 from porter.report.svg import clean_lines
 from porter.report.verdict import cautions_section, findings_section, title_block, verdict_section
 from porter.resources import environment
+from porter.sheet.model import Sheet
 from porter.spec.model import Circuit
 from porter.trace import Trace
 from porter.vectors.model import Suite
@@ -56,6 +58,7 @@ def render(
     traces: Sequence[Trace],
     sizes: Sequence[Size] = (),
     versions: Mapping[str, str] | None = None,
+    sheet: Sheet | None = None,
 ) -> str:
     """Return ``report.html`` as text.
 
@@ -64,6 +67,7 @@ def render(
         traces: runs to draw; those with waves show the memory, the others the timing.
         sizes: measured sizes of the core, if any.
         versions: what made the job; None = porter's own version only.
+        sheet: the interface sheet, if it is to be part of the report.
     """
     made = own_version() if versions is None else versions
     sections = (
@@ -82,6 +86,7 @@ def render(
         parity_section(parity),
         vectors_section(suite),
         firmware_section(circuit, port, files, sizes),
+        *([interface_section(sheet)] if sheet else []),
         evidence_section(port, circuit, files, made),
         cautions_section(circuit),
     )
