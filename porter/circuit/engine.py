@@ -142,7 +142,7 @@ class Engine:
         x = np.zeros((len(self.rows), m))
         if m:
             charge = self.topo.cap_to_supply(self.rows) * self.supply[:, None]
-            x = np.linalg.solve(self.topo.cap_matrix(self.rows), charge[..., None])[..., 0]
+            x = np.asarray(np.linalg.solve(self.topo.cap_matrix(self.rows), charge[..., None])[..., 0], float)
         return self.lanes(unit, q, x[unit], held)
 
     def rest(self, q: int, unit: Ints | None = None) -> tuple[Lanes, Mask]:
@@ -224,7 +224,7 @@ class Engine:
         t = np.where(hit, when, left[rows])
         if watcher is not None:
             watcher(rows, mode, z0, lanes.clock_s[rows].copy(), t)
-        z = z0 + pull * self._span(rate, pull, t)
+        z = z0 + pull * self._span(rate, t)
         lanes.x[rows] = _times(mode.S[unit], z)
         lanes.clock_s[rows] += np.where(np.isfinite(t), t, 0.0)  # "for ever" has no date
         left[rows[hit]] -= when[hit]
@@ -234,7 +234,7 @@ class Engine:
         lanes.conducts[rows[hit]] ^= np.where(way >= 0, 1 << np.maximum(way, 0), 0)
         return rows[hit]
 
-    def _span(self, rate: Floats, pull: Floats, t: Floats) -> Floats:
+    def _span(self, rate: Floats, t: Floats) -> Floats:
         """As `reach`, but a charge that drifts for ever is left where it is."""
         span = reach(rate, t[:, None])
         return np.where(np.isfinite(span), span, 0.0)
@@ -313,7 +313,7 @@ class Engine:
             lanes.conducts[rows[switch]] ^= 1 << bad[switch].argmax(axis=1)
         if frozen:
             return rows[switch]
-        flip = self._flip(lanes, rows, f[:, :3], slope[:, :3], ~switch)
+        flip = self._flip(lanes, rows, f[:, :3], slope[:, :3], np.asarray(~switch))
         self._record(lanes, rows[flip], listener)
         return rows[switch | flip]
 
