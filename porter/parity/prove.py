@@ -8,9 +8,10 @@ from porter.circuit.engine import Engine
 from porter.parity.closure import Walk, open_walk, walk_one
 from porter.parity.closure_cells import walk_many
 from porter.parity.closure_more import walk_count, walk_plain
-from porter.parity.family import PortMachine, check_family
+from porter.parity.family import PortMachine, check_family, lengths
 from porter.parity.ledger import ledger
 from porter.parity.model import Closure, FamilyCheck, LedgerRow, Parity
+from porter.parity.outputs import check_answers
 from porter.parity.sequences import Enumerated, enumerate_all
 from porter.port.memory import Memory, memory
 from porter.port.model import Charge, Port
@@ -35,10 +36,16 @@ def prove(circuit: Circuit, port: Port, behaviour: Behaviour | None = None) -> P
     ends = _clocks(circuit, port, mem)
     walk, others = close(circuit, behaviour, port, mem, ends)
     clocks = tuple(zip(ends, others, strict=False))
+    machine = PortMachine(port)
+    walk = check_answers(mem.engine, port, walk, int(lengths(behaviour, machine)[-1]))
     listed = enumerate_all(circuit, behaviour, port, mem, walk)
-    units = check_family(circuit, behaviour, PortMachine(port), start_q=port.start_q)
+    units = check_family(circuit, behaviour, machine, start_q=port.start_q)
     rows = ledger(circuit, behaviour, port, mem)
     witness = _shorter(_shorter(walk.path, listed.witness), units.witness)
+    if witness is None and any(
+        r.row == "power-on" and r.verdict == "differs" and not r.accepted for r in rows
+    ):
+        witness = (0,)  # nothing need be pressed
     closure = dataclasses.replace(walk.closure, spread_s=2 * half_spread(behaviour) or None)
     verdict, statement = _verdict(walk, listed, units, rows, clocks)
     return Parity(
