@@ -6,8 +6,9 @@ capacitance matrix), so with at most q added each tick, the norm stays below
 
 Decisions: the circuit's guards and the port's tests are affine.  Where all corners
 of a cell agree on the sign of each of them, the whole cell decides alike.  Cells
-that don't agree are halved in every direction until they are smaller than the
-bound; what is left then is grey.
+that don't agree, or decide otherwise than the port, are halved in every direction
+until they are smaller than the bound; what is left then is grey.  A corner whose
+decision is the same for every error within the bound, and not the port's, is wrong.
 """
 
 from dataclasses import dataclass
@@ -46,6 +47,7 @@ def walk_many(mem: Memory, port: Port, clock: float = 1.0) -> Walk:
     still = [s for s, f in zip(sizes, factors, strict=True) if f >= 1 - 1e-12]
     moving = [f for f in factors if f < 1 - 1e-12]
     bound = max(sizes) / (1 - max(moving)) if moving else max(sizes)
+    bound = max(bound, energy.size(np.full((1, len(mem.kept)), 0.5))[0])  # the start is rounded too
     plain = all(t.one_mode for t in ticks.values())
     harmless = all(ticks[0, h].same(ticks[1, h]) for h in range(port.held_count))
     holds = plain and harmless and max(still, default=0.0) <= 1e-9
@@ -171,10 +173,9 @@ def _cells(mem: Memory, port: Port, machine: Charge, q: int, h: int, energy: Ene
     while len(low):
         looked += len(low)
         corners = np.minimum(low[:, None, :] + unit[None] * side, U16)
-        alike, differ, far = _look(mem, port, machine, q, h, corners, energy, bound)
-        wrong += int((alike & differ & far).sum())
-        grey += int((alike & differ & ~far).sum())
-        open_ = low[~alike]
+        alike, differ, bad = _look(mem, port, machine, q, h, corners, energy, bound)
+        wrong += int(bad.sum())
+        open_ = low[~bad & (~alike | differ)]
         if side <= smallest:
             return _Cells(looked, grey + len(open_), wrong, True)
         if looked + len(open_) * len(unit) > _MOST_CELLS:
@@ -187,29 +188,49 @@ def _cells(mem: Memory, port: Port, machine: Charge, q: int, h: int, energy: Ene
 def _look(
     mem: Memory, port: Port, machine: Charge, q: int, h: int, corners: Ints, energy: Energy, bound: float
 ) -> tuple[Mask, Mask, Mask]:
-    """For cells given by their corners (B, 2**k, k): all signs alike, decisions differ, far from every level."""
+    """For cells given by their corners (B, 2**k, k): all signs alike; decisions differ; a corner surely differs."""
     count, each, kept = corners.shape
     flat = corners.reshape(-1, kept)
-    lanes = mem.lanes(q, h, flat)
-    mem.engine.resolve(lanes, frozen=True)
-    guards = mem.engine.guards(lanes)
-    signs = [
-        np.sign(guards),
-        lanes.conducts[:, None],
-        _tests(machine.modes[q][h], flat),
-        _tests(machine.modes[1 - q][h], flat),
-    ]
-    signature = np.column_stack(signs).reshape(count, each, -1)
+    here, there = (_sides(mem, level, h, flat, energy, bound) for level in (q, 1 - q))
+    signs = [side.signs for side in (here, there)]
+    tests = [_tests(machine.modes[level][h], flat) for level in (q, 1 - q)]
+    signature = np.column_stack([*signs, *tests]).reshape(count, each, -1)
     alike = (signature == signature[:, :1]).all(axis=(1, 2))
     truth = circuit_decides(mem, q, h, flat).q
     decided = port_decides(
         port, State(np.full(len(flat), q, np.uint8), flat), np.full(len(flat), h, np.int64)
     )
     differ = (truth != decided).reshape(count, each).any(axis=1)
-    mode = settled_mode(mem.engine, q, h, mem.volts(np.full((1, kept), U16 / 2))[0])
+    flips = decided != q
+    bad = (flips & ~(here.may & ~there.must)) | (~flips & here.must & ~there.may)
+    return alike, differ, bad.reshape(count, each).any(axis=1)
+
+
+@dataclass(frozen=True, slots=True)
+class _Sides:
+    """At some states: conducting set and signs of all guards; whether the latch may and must leave for some error within the bound."""
+
+    signs: Ints
+    may: Mask
+    must: Mask
+
+
+def _sides(mem: Memory, q: int, h: int, flat: Ints, energy: Energy, bound: float) -> _Sides:
+    lanes = mem.lanes(q, h, flat)
+    mem.engine.resolve(lanes, frozen=True)
+    guards = mem.engine.guards(lanes)
+    mode = settled_mode(mem.engine, q, h, mem.volts(np.full((1, flat.shape[1]), U16 / 2))[0])
     reach = _reach(mem, mode, energy, bound)
-    far = ((np.abs(guards) > reach) | (reach == 0)).all(axis=1).reshape(count, each).all(axis=1)
-    return alike, differ, far
+    below, above = guards < -reach, guards > reach
+    trigger, reset = (below[:, 0], ~above[:, 0]), (below[:, 2], ~above[:, 2])  # must, may
+    threshold = above[:, 1], ~below[:, 1]
+    if q == 0:
+        must, may = trigger[0] & ~reset[1], trigger[1] & ~reset[0]
+    else:
+        must = reset[0] | (threshold[0] & ~trigger[1])
+        may = reset[1] | (threshold[1] & ~trigger[0])
+    signs = np.column_stack([lanes.conducts, np.sign(guards).astype(np.int64)])
+    return _Sides(signs, np.asarray(may), np.asarray(must))
 
 
 def _reach(mem: Memory, mode: Mode, energy: Energy, bound: float) -> Floats:
