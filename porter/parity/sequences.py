@@ -90,11 +90,16 @@ def _walk(
         held = np.tile(np.arange(masks), len(grey))
         twin, grey, wrong = twin.take(rows), grey[rows], wrong[rows]
         sequence = np.column_stack([sequence[rows], held])
+        before = twin.state.q.astype(np.int64)
+        pending = twin.lanes.q != before
         circuit_q, twice = twin.circuit_for(held, stride)
         for tick in range(stride):
             grey |= _near(port, twin, held, bound, edges)
-            new = (twin.port_tick(held) != circuit_q[:, tick]) & ~grey & ~wrong
+            port_q = twin.port_tick(held)
+            new = (port_q != circuit_q[:, tick]) & ~grey & ~wrong
             wrong |= new
+            # The circuit was there and back while the port stayed: alike to look at, not in memory.
+            grey |= pending & (tick == 0) & (port_q == before) & ~wrong
             if new.any() and witness is None:
                 witness = _spell(sequence[np.argmax(new)], stride, tick)
         wrong |= twice & ~grey
