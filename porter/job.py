@@ -16,6 +16,7 @@ from collections.abc import Callable, Iterator, Mapping, Sequence
 from contextlib import contextmanager
 from dataclasses import dataclass
 from pathlib import Path
+from typing import TYPE_CHECKING
 
 import porter
 from porter.behaviour.model import Behaviour
@@ -25,6 +26,9 @@ from porter.port.model import Port
 from porter.sheet.model import Sheet
 from porter.spec.model import Circuit
 from porter.vectors.model import Suite
+
+if TYPE_CHECKING:
+    from porter.emit import Levels
 
 MANIFEST = "manifest.json"
 _ELSEWHERE = "give another folder with -o"
@@ -102,7 +106,7 @@ def build_job(circuit: Circuit, *, progress: Progress | None = None) -> Job:
     files = {
         "model.json": model_json(behaviour),
         "parity.json": parity_json(parity),
-        **emit(port, suite, statement=parity.statement),
+        **emit(port, suite, statement=parity.statement, levels=_levels(interface)),
         **vector_files(suite),
         "interface.txt": render_text(interface),
     }
@@ -116,6 +120,14 @@ def build_job(circuit: Circuit, *, progress: Progress | None = None) -> Job:
 
 def _quiet(_: str) -> None:
     """Report no progress."""
+
+
+def _levels(interface: Sheet) -> "Levels":
+    from porter.emit import Levels
+
+    pressed = tuple(network.level for network in interface.inputs)
+    pull_up = tuple(int(network.to == "gnd") for network in interface.inputs)
+    return Levels(pressed, pull_up, interface.active)
 
 
 # --- the parts of a job, each of use alone ---

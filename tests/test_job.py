@@ -46,6 +46,7 @@ def test_the_folder_holds_what_the_contract_names(sign: Job) -> None:
         "firmware/micropython/door_sign.py",
         "firmware/micropython/door_sign_selftest.py",
         "firmware/micropython/main.py",
+        "interface.txt",
         "manifest.json",
         "model.json",
         "parity.json",

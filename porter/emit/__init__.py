@@ -8,7 +8,7 @@ import sys
 from types import ModuleType
 
 from porter.emit.c99 import C99
-from porter.emit.language import Job, Language
+from porter.emit.language import Job, Language, Levels
 from porter.emit.lower import lower
 from porter.emit.micropython import MicroPython
 from porter.port.model import Port
@@ -19,12 +19,13 @@ from porter.vectors.model import Suite
 LANGUAGES: tuple[Language, ...] = (C99(), MicroPython())
 
 
-def emit(port: Port, suite: Suite, *, statement: str = "") -> dict[str, str]:
+def emit(port: Port, suite: Suite, *, statement: str = "", levels: Levels | None = None) -> dict[str, str]:
     """Write a port in every language.
 
     Args:
         suite: the vectors that the self-tests carry.
         statement: what parity proved, for the headers.
+        levels: what the pins read and give; None = contacts to ground, outputs active high.
 
     Returns:
         Text by relative path, such as ``firmware/c/lamp_latch.c``; the same input gives the same text.
@@ -32,7 +33,7 @@ def emit(port: Port, suite: Suite, *, statement: str = "") -> dict[str, str]:
     Raises:
         ValueError: the port has a number that the step functions can't carry (see `lower`).
     """
-    job = Job(lower(port), suite, statement)
+    job = Job(lower(port), suite, statement, levels)
     return {path: text for language in LANGUAGES for path, text in _write(language, job).items()}
 
 
@@ -45,10 +46,12 @@ def _write(language: Language, job: Job) -> dict[str, str]:
 
 
 class _Room(ModuleType):
-    def __call__(self, port: Port, suite: Suite, *, statement: str = "") -> dict[str, str]:
-        return emit(port, suite, statement=statement)
+    def __call__(
+        self, port: Port, suite: Suite, *, statement: str = "", levels: Levels | None = None
+    ) -> dict[str, str]:
+        return emit(port, suite, statement=statement, levels=levels)
 
 
 sys.modules[__name__].__class__ = _Room
 
-__all__ = ["LANGUAGES", "Job", "Language", "emit"]
+__all__ = ["LANGUAGES", "Job", "Language", "Levels", "emit"]

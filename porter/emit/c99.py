@@ -89,6 +89,10 @@ class Core:
             "all_seen": parts.sees_held,
             "suite": suite_rows(self.job.suite),
             "title": string(port.title),
+            "pressed": self.job.levels.pressed,
+            "pull_up": self.job.levels.pull_up,
+            "active": self.job.levels.active,
+            "sheet": self.job.known is not None,
         }
 
     # --- names and types ---

@@ -11,12 +11,34 @@ from porter.vectors.model import Suite
 
 
 @dataclass(frozen=True, slots=True)
+class Levels:
+    """What the pins read and give: the interface sheet's polarities.
+
+    Args:
+        pressed: per button the level at its pin while it is pressed.
+        pull_up: per button 1 where its contact goes to ground.
+        active: per output the level of its pin while it is active.
+    """
+
+    pressed: tuple[int, ...]
+    pull_up: tuple[int, ...]
+    active: tuple[int, ...]
+
+
+@dataclass(frozen=True, slots=True)
 class Job:
-    """What there is to write: the port taken apart, its vectors, and what was proved."""
+    """What there is to write: the port taken apart, its vectors, what was proved, the pins' levels."""
 
     parts: Parts
     suite: Suite
     statement: str
+    known: Levels | None = None
+
+    @property
+    def levels(self) -> Levels:
+        """The pins' levels; where nobody said: contacts to ground, outputs active high."""
+        buttons, outputs = len(self.port.buttons), len(self.port.outputs)
+        return self.known or Levels((0,) * buttons, (1,) * buttons, (1,) * outputs)
 
     @property
     def port(self) -> Port:

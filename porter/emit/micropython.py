@@ -87,6 +87,9 @@ class Core:
             "idle": fold(idle, 8),
             "suite": suite_rows(self.job.suite),
             "all_seen": self.parts.sees_held,
+            "pressed": self.job.levels.pressed,
+            "pull_up": self.job.levels.pull_up,
+            "active": self.job.levels.active,
         }
 
     def _fields(self) -> list[str]:

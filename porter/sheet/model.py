@@ -94,6 +94,7 @@ class Sheet:
     Args:
         title: of the circuit; rows: by topic.
         inputs, drivers: the networks as numbers, in the spec's order; an output without a load has no driver.
+        active: level of each output's pin while it is active.
         removed, added, kept: reference designators of the drawing; added: what to buy.
         findings: errors: ``pin-overloaded`` and ``level-not-met``.
         cautions: what the sheet doesn't know.
@@ -103,6 +104,7 @@ class Sheet:
     rows: tuple[Row, ...]
     inputs: tuple[Input, ...]
     drivers: tuple[Driver, ...]
+    active: tuple[int, ...]
     removed: tuple[str, ...]
     kept: tuple[str, ...]
     added: tuple[str, ...]

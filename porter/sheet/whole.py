@@ -38,6 +38,10 @@ def sheet(circuit: Circuit, behaviour: Behaviour, port: Port) -> Sheet:
     stages = [stage(circuit, port, at) for at in range(len(circuit.outputs))]
     inputs = tuple(network for network, _, _ in contacts)
     drivers = tuple(driver for driver, _, _ in stages if driver is not None)
+    active = tuple(
+        driver.active if driver is not None else int(output.kind != "low")
+        for output, (driver, _, _) in zip(circuit.outputs, stages, strict=True)
+    )
     kept = kept_parts(circuit)
     replaced = _replaced(circuit, drivers)
     removed = ("the timer", *(p.name for p in circuit.parts if p.name not in kept or p.name in replaced))
@@ -64,7 +68,7 @@ def sheet(circuit: Circuit, behaviour: Behaviour, port: Port) -> Sheet:
     marked = any(b.hazard for b in circuit.buttons) or any(o.hazard for o in circuit.outputs)
     cautions = (*(_MARKED if marked else ()), *_CAUTIONS)
     ordered = tuple(sorted(rows, key=lambda row: _TOPIC[row.topic]))
-    return Sheet(circuit.title, ordered, inputs, drivers, removed, kept, added, findings, cautions)
+    return Sheet(circuit.title, ordered, inputs, drivers, active, removed, kept, added, findings, cautions)
 
 
 _TOPIC = {topic: i for i, topic in enumerate(TOPICS)}

@@ -24,7 +24,7 @@ from emit_run import micropython
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from porter.emit import emit
+from porter.emit import Levels, emit
 from porter.emit.names import comment, identifier, unique
 from porter.port.model import Constant, Port
 from porter.vectors.model import Case, Suite
@@ -123,8 +123,9 @@ class Bench:
 
     wrap = 1 << 30
 
-    def __init__(self, levels):
+    def __init__(self, levels, *, lights=False):
         self.now, self.levels, self.seen = self.wrap - 5_000, levels, []
+        self.lights, self.slept = lights, 0
 
     def modules(self):
         """Return the two modules."""
@@ -151,7 +152,7 @@ class Bench:
                 if bench.ticks() > 20:
                     raise EnoughError
 
-        machine = SimpleNamespace(Pin=Pin, WDT=Dog)
+        machine = SimpleNamespace(Pin=Pin, WDT=Dog, **({"lightsleep": self._light} if self.lights else {}))
         time = SimpleNamespace(
             ticks_us=lambda: self.now % self.wrap,
             ticks_add=lambda a, b: (a + b) % self.wrap,
@@ -164,20 +165,25 @@ class Bench:
         """Return the milliseconds since the start."""
         return (self.now - self.wrap + 5_000) // 1000
 
+    def _light(self, ms):
+        assert ms == 1
+        self.now, self.slept = self.now + 1000 * ms, self.slept + 1
+
     def _sleep(self, us):
         assert 0 < us <= 1000
         self.now += us
 
 
-def test_pin_layer_follows_the_button_through_the_clocks_wrap(tmp_path, monkeypatch):
-    """The MicroPython loop steps once a tick, drives the first level at once, and survives the wrap."""
+@pytest.mark.parametrize("lights", [False, True])
+def test_pin_layer_follows_the_button_through_the_clocks_wrap(lights, tmp_path, monkeypatch):
+    """The MicroPython loop steps once a tick, sleeps lightly where it can, and survives the wrap."""
     port = two_button()
     for path, text in files(port).items():
         if "micropython" in path:
             (tmp_path / Path(path).name).write_text(text)
     # Both buttons' pins read alike here, and reset wins; so a made-up part has one button only.
-    layer = (tmp_path / "main.py").read_text().replace("    (3, 0),  # CLEAR\n", "")
-    bench = Bench(lambda tick: 0 if tick >= 8 else 1)
+    layer = (tmp_path / "main.py").read_text().replace("    (3, 0, 1),  # CLEAR\n", "")
+    bench = Bench(lambda tick: 0 if tick >= 8 else 1, lights=lights)
     for name, module in bench.modules().items():
         monkeypatch.setitem(sys.modules, name, module)
     monkeypatch.syspath_prepend(str(tmp_path))
@@ -188,6 +194,15 @@ def test_pin_layer_follows_the_button_through_the_clocks_wrap(tmp_path, monkeypa
         space["main"]()
     levels = [level for _, level in bench.seen]
     assert levels[:8] == [0] * 8 and levels[8:] == [1] * (len(levels) - 8)
+    assert bool(bench.slept) == lights
+
+
+def test_pins_have_the_levels_of_the_interface_sheet():
+    """Polarities that are handed over stand in both pin layers."""
+    texts = emit(two_button(), suite(two_button()), levels=Levels((1, 0), (0, 1), (0,)))
+    board, main = texts["firmware/c/board.c"], texts["firmware/micropython/main.py"]
+    assert "PRESSED_SET 1u" in board and "PULL_UP_SET 0u" in board and "ACTIVE_LAMP 0u" in board
+    assert "(2, 1, 0),  # SET" in main and "(10, 0),  # lamp" in main
 
 
 def test_an_empty_suite_proves_nothing(tmp_path):

@@ -17,9 +17,14 @@
  */
 #include "lamp_latch.h"
 
-/* FIT: the level that a pin reads while its button is pressed; 0 for a contact to ground with a pull-up. */
+/* FIT.
+ * PRESSED: the level that a pin reads while its button is pressed.
+ * PULL_UP: 1 = the part pulls the pin up, as well as a resistor outside (a contact to ground).
+ */
 #define BOARD_PRESSED_SET 0u
+#define BOARD_PULL_UP_SET 1u
 #define BOARD_PRESSED_CLEAR 0u
+#define BOARD_PULL_UP_CLEAR 1u
 /* FIT: the level of a pin while its output is active. */
 #define BOARD_ACTIVE_LAMP 1u
 
@@ -236,7 +241,7 @@ static void board_start(void)
 
 static void board_input(uint8_t pin, uint8_t pull_up)
 {
-    GPIO_CNF(pin) = (pull_up != 0u) ? (3u << 2u) : (1u << 2u); /* input, pulled up or down */
+    GPIO_CNF(pin) = (pull_up != 0u) ? (3u << 2u) : 0u; /* input, pulled up or left to an outside resistor */
 }
 
 static uint8_t board_level(uint8_t pin)
@@ -304,8 +309,8 @@ int main(void)
     lamp_latch_t latch;
     volatile uint8_t settle;
 
-    board_input(BOARD_PIN_SET, BOARD_PRESSED_SET ^ 1u);
-    board_input(BOARD_PIN_CLEAR, BOARD_PRESSED_CLEAR ^ 1u);
+    board_input(BOARD_PIN_SET, BOARD_PULL_UP_SET);
+    board_input(BOARD_PIN_CLEAR, BOARD_PULL_UP_CLEAR);
     board_start();
     for (settle = 0u; settle < 50u; settle++) {
         /* the pull-ups charge the wiring */

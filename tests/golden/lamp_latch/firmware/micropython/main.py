@@ -11,20 +11,25 @@
 # reset, the pins float.
 import time
 
+import machine
 from machine import Pin, WDT
 
 from lamp_latch import TICK_US, LampLatch
 
-# (pin number, level while the button is pressed); a contact to ground reads 0 while pressed.
+# (pin number, level while the button is pressed, 1 = pulled up by the part as well).
 BUTTONS = (
-    (2, 0),  # SET
-    (3, 0),  # CLEAR
+    (2, 0, 1),  # SET
+    (3, 0, 1),  # CLEAR
 )
 # (pin number, level while the output is active).
 OUTPUTS = (
     (10, 1),  # lamp
 )
+# A watchdog reset starts the latch in its power-on state, as a power cycle does. Brown-out detection is
+# the firmware image's: see that it is on.
 WATCHDOG_MS = 2000
+# Light sleep while nothing can change, a tick or more at a time; 0 where it upsets your board (some lose USB).
+SLEEP_MS = max(TICK_US // 1000, 1)
 
 
 def read(pins):
@@ -43,7 +48,7 @@ def write(pins, active):
 
 def main():
     latch = LampLatch()
-    inputs = [Pin(number, Pin.IN, Pin.PULL_DOWN if level else Pin.PULL_UP) for number, level in BUTTONS]
+    inputs = [Pin(number, Pin.IN, Pin.PULL_UP if pull_up else None) for number, _, pull_up in BUTTONS]
     # The level is set before the direction, so that the output never shows the wrong one.
     first = latch.step(read(inputs))
     outputs = [
@@ -51,8 +56,12 @@ def main():
         for j, (number, level) in enumerate(OUTPUTS)
     ]
     dog = WDT(timeout=WATCHDOG_MS)
+    sleep = getattr(machine, "lightsleep", None) if SLEEP_MS else None
     due = time.ticks_add(time.ticks_us(), TICK_US)
     while True:
+        if sleep and latch.idle():
+            sleep(SLEEP_MS)
+            due = time.ticks_us()  # the clock may have stood still, and nothing was due
         # Differences of ticks survive the counter's wrap; a plain comparison would not.
         wait = time.ticks_diff(due, time.ticks_us())
         if wait > 0:

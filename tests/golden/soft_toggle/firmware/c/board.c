@@ -17,8 +17,12 @@
  */
 #include "soft_toggle.h"
 
-/* FIT: the level that a pin reads while its button is pressed; 0 for a contact to ground with a pull-up. */
+/* FIT.
+ * PRESSED: the level that a pin reads while its button is pressed.
+ * PULL_UP: 1 = the part pulls the pin up, as well as a resistor outside (a contact to ground).
+ */
 #define BOARD_PRESSED_PUSH 0u
+#define BOARD_PULL_UP_PUSH 1u
 /* FIT: the level of a pin while its output is active. */
 #define BOARD_ACTIVE_LAMP 1u
 
@@ -233,7 +237,7 @@ static void board_start(void)
 
 static void board_input(uint8_t pin, uint8_t pull_up)
 {
-    GPIO_CNF(pin) = (pull_up != 0u) ? (3u << 2u) : (1u << 2u); /* input, pulled up or down */
+    GPIO_CNF(pin) = (pull_up != 0u) ? (3u << 2u) : 0u; /* input, pulled up or left to an outside resistor */
 }
 
 static uint8_t board_level(uint8_t pin)
@@ -298,7 +302,7 @@ int main(void)
     soft_toggle_t latch;
     volatile uint8_t settle;
 
-    board_input(BOARD_PIN_PUSH, BOARD_PRESSED_PUSH ^ 1u);
+    board_input(BOARD_PIN_PUSH, BOARD_PULL_UP_PUSH);
     board_start();
     for (settle = 0u; settle < 50u; settle++) {
         /* the pull-ups charge the wiring */
