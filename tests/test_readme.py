@@ -1,7 +1,8 @@
 """The README's commands, run again: they print what it says they print.
 
 A block fenced as ``console`` holds commands after ``$ `` and their output; a line of ``...``
-stands for any lines. ``pytest --update-golden`` rewrites every block that leaves nothing out.
+stands for any lines. ``pytest --update-golden`` rewrites the outputs; what is left out stays left
+out, between the lines that are most like those at the cuts now.
 """
 
 import os
@@ -10,11 +11,14 @@ import shlex
 import subprocess
 import sys
 from dataclasses import dataclass
+from difflib import SequenceMatcher
 from functools import cache
+from itertools import groupby
 from pathlib import Path
 
 import pytest
 
+from porter.circuit.family import FAMILIES
 from porter.cli import cli
 from porter.resources import folder
 
@@ -74,10 +78,32 @@ def _matches(shown: tuple[str, ...], printed: tuple[str, ...]) -> bool:
     return re.fullmatch(pattern, "".join(line + "\n" for line in printed)) is not None
 
 
+def _nearest(line: str, printed: tuple[str, ...], begin: int) -> int:
+    """The place from *begin* on of the line most like this one."""
+    likeness = [SequenceMatcher(None, line, other).ratio() for other in printed[begin:]]
+    return begin + likeness.index(max(likeness))
+
+
+def _excerpt(shown: tuple[str, ...], printed: tuple[str, ...]) -> tuple[str, ...]:
+    """Cut new output as the old one is cut."""
+    kept: list[str] = []
+    at = 0
+    for left_out, lines in groupby(shown, lambda line: line == ANY):
+        if left_out:
+            kept.append(ANY)
+            continue
+        old = [line for line in lines if line]  # an empty line is like every other one
+        begin = at if at == 0 and shown[0] != ANY else _nearest(old[0], printed, at)
+        at = len(printed) if shown[-1] in (old[-1], "") else _nearest(old[-1], printed, begin) + 1
+        kept += printed[begin:at]
+    return tuple(kept)
+
+
 def _rewrite(shown: Shown, printed: tuple[str, ...]) -> None:
     text = README.read_text("utf-8")
     old = "\n".join(("$ " + shown.command, *shown.output)) + "\n"
-    README.write_text(text.replace(old, "\n".join(("$ " + shown.command, *printed)) + "\n"), "utf-8")
+    new = _excerpt(shown.output, printed) if shown.output else printed
+    README.write_text(text.replace(old, "\n".join(("$ " + shown.command, *new)) + "\n"), "utf-8")
 
 
 MARKS = {True: (pytest.mark.system,), False: ()}
@@ -89,11 +115,11 @@ MARKS = {True: (pytest.mark.system,), False: ()}
 )
 def test_a_command_prints_what_the_readme_says(place: Path, at: int, request: pytest.FixtureRequest) -> None:
     shown, printed = SHOWN[at], _run(place, at)
-    if request.config.getoption("--update-golden") and ANY not in shown.output:
+    if request.config.getoption("--update-golden"):
         _rewrite(shown, printed)
         return
     assert _matches(shown.output, printed), "\n".join(
-        ("it prints now:", *printed, "", "(`pytest --update-golden` rewrites blocks without ...)")
+        ("it prints now:", *printed, "", "(`pytest --update-golden` rewrites the outputs)")
     )
 
 
@@ -103,11 +129,20 @@ def test_the_comparison_sees_a_changed_figure() -> None:
     assert not _matches(("a 1",), ("a 1", "b 2"))
 
 
+def test_new_output_is_cut_as_the_old_one() -> None:
+    old = ("head 1", ANY, "table", "", "row a 1", "", ANY, "last 2")
+    new = ("more", "head 7", "x", "table", "", "row a 5", "row b 6", "y", "last 9")
+    assert _excerpt(old, new) == ("more", "head 7", ANY, "table", "", "row a 5", ANY, "last 9")
+    assert _excerpt(("one",), ("two", "three")) == ("two", "three")
+
+
 def test_every_command_is_explained() -> None:
-    """Each command of the program, and each shipped spec that is not faulty, is in the README."""
+    """Each command, each timer family, and each shipped spec that is not faulty is in the README."""
     text = README.read_text("utf-8")
     missing = [name for name in cli.commands if f"`porter {name}" not in text]
     assert missing == []
+    (line,) = re.findall(r"^  family: .*$", text, re.M)[-1:]
+    assert [name for name in FAMILIES if not re.search(rf"[ ,]{name}[ ,:]", line)] == []
     specs = [p.name.removesuffix(".yaml") for p in folder("specs").iterdir()]
     assert [name for name in specs if not name.startswith("faulty") and f"`{name}`" not in text] == []
 
