@@ -3,6 +3,7 @@
 import hashlib
 import math
 from collections.abc import Sequence
+from typing import Literal
 
 import numpy as np
 
@@ -32,28 +33,92 @@ def plan(circuit: Circuit, behaviour: Behaviour) -> Port:
     engine = Engine(circuit)
     mem = memory(engine)
     tick_s, tick_why = choose_tick(circuit, behaviour)
-    style, style_why = _style(circuit, behaviour, mem)
-    start_q, start_why = _start(circuit, behaviour)
-    machine: Count | Charge
-    if style == "count":
-        machine, constants, made = plan_count(circuit, behaviour, mem, tick_s)
-    else:
-        machine, constants, made = plan_charge(circuit, mem, tick_s)
-    return Port(
-        name=circuit.name,
-        title=circuit.title,
-        spec_file=circuit.file,
-        spec_sha256=hashlib.sha256(circuit.source.encode()).hexdigest(),
-        buttons=tuple(b.name for b in circuit.buttons),
-        outputs=tuple(o.name for o in circuit.outputs),
-        tick_s=tick_s,
-        style=style,  # type: ignore[arg-type]
-        start_q=start_q,
-        answer=answers(engine),
-        machine=machine,
-        constants=tuple(constants),
-        why=(style_why, tick_why, start_why, *made),
+    build = _Builder(circuit, behaviour, mem, tick_s, tick_why)
+    wish, (fits, why_not) = circuit.port.style, fits_count(behaviour)
+    if wish == "charge":
+        return build.charge("charge style: asked for by the spec")
+    if wish == "count" and not fits:
+        return build.charge(f"charge style although the spec asks for count: {why_not}")
+    if wish == "count":
+        return build.count("count style: asked for by the spec")
+    if not mem.kept:
+        return build.count("count style: nothing but the latch remembers, so the machine is the circuit")
+    if not fits:
+        return build.charge(f"charge style: {why_not}")
+    counting = build.count(
+        "count style: its differences lie inside the spread that allowed units have among themselves"
     )
+    parts = _parts_from_family(circuit, behaviour, mem, counting)
+    if not parts:
+        return counting
+    return build.charge(f"charge style: counters alone {parts}")
+
+
+def _parts_from_family(circuit: Circuit, behaviour: Behaviour, mem: Memory, port: Port) -> str:
+    """Say how a counting port does what no allowed unit does, empty where it doesn't.
+
+    The one place that looks ahead in the pipeline: what is asked is what the proof will ask.
+    """
+    from porter.parity.closure_more import walk_count
+    from porter.parity.family import PortMachine, check_family
+
+    if len(mem.kept) > 1:
+        return "beside several capacitors can't be walked"
+    closure = walk_count(circuit, behaviour, mem, port).closure
+    if closure.differs:
+        return f"do what no allowed unit does, in {closure.differs} situations at least"
+    if not closure.complete:
+        return "differ from the nominal circuit in more situations than could be judged"
+    family = check_family(circuit, behaviour, PortMachine(port), start_q=port.start_q)
+    return (
+        f"do what no allowed unit does, in {family.violations} press sequences" if family.violations else ""
+    )
+
+
+class _Builder:
+    """Puts a port of either style together."""
+
+    def __init__(
+        self, circuit: Circuit, behaviour: Behaviour, mem: Memory, tick_s: float, tick_why: str
+    ) -> None:
+        self.circuit, self.behaviour, self.mem, self.tick_s, self.tick_why = (
+            circuit,
+            behaviour,
+            mem,
+            tick_s,
+            tick_why,
+        )
+
+    def count(self, why: str) -> Port:
+        return self._port("count", why, plan_count(self.circuit, self.behaviour, self.mem, self.tick_s))
+
+    def charge(self, why: str) -> Port:
+        return self._port("charge", why, plan_charge(self.circuit, self.mem, self.tick_s))
+
+    def _port(
+        self,
+        style: Literal["count", "charge"],
+        why: str,
+        planned: tuple[Count, list[Constant], list[str]] | tuple[Charge, list[Constant], list[str]],
+    ) -> Port:
+        circuit = self.circuit
+        machine, constants, made = planned
+        start_q, start_why = _start(circuit, self.behaviour)
+        return Port(
+            name=circuit.name,
+            title=circuit.title,
+            spec_file=circuit.file,
+            spec_sha256=hashlib.sha256(circuit.source.encode()).hexdigest(),
+            buttons=tuple(b.name for b in circuit.buttons),
+            outputs=tuple(o.name for o in circuit.outputs),
+            tick_s=self.tick_s,
+            style=style,
+            start_q=start_q,
+            answer=answers(self.mem.engine),
+            machine=machine,
+            constants=tuple(constants),
+            why=(why, self.tick_why, start_why, *made),
+        )
 
 
 def answers(engine: Engine) -> tuple[tuple[int, ...], tuple[int, ...]]:
@@ -128,23 +193,6 @@ def _spread(window: Window) -> float:
 
 def _ms(seconds: float) -> str:
     return f"{seconds * 1e3:g} ms"
-
-
-def _style(circuit: Circuit, behaviour: Behaviour, mem: Memory) -> tuple[str, str]:
-    wish = circuit.port.style
-    fits, why_not = fits_count(behaviour)
-    if wish == "charge":
-        return "charge", "charge style: asked for by the spec"
-    if wish == "count":
-        if fits:
-            return "count", "count style: asked for by the spec"
-        return "charge", f"charge style although the spec asks for count: {why_not}"
-    if not mem.kept:
-        return "count", "count style: nothing but the latch remembers, so the machine is the circuit"
-    return "charge", (
-        "charge style: a capacitor remembers, and how long a press was changes what the next one does; "
-        "counters alone would differ by more than allowed units do"
-    )
 
 
 def _start(circuit: Circuit, behaviour: Behaviour) -> tuple[int, str]:
