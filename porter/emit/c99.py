@@ -29,7 +29,7 @@ from porter.emit.lower import (
 )
 from porter.emit.names import comment, string, unique
 from porter.emit.numbers import Number, wrap
-from porter.emit.trees import LATCH, Leaf, Node, Syntax, branch, choose, leaves, render
+from porter.emit.trees import LATCH, Leaf, Node, Syntax, Tree, branch, choose, leaves, render
 from porter.port.model import Charge, Port
 from porter.vectors.model import Case, Suite
 
@@ -152,7 +152,10 @@ class Core:
     def _answer(self) -> list[str]:
         tree = self.parts.answer
         if isinstance(tree, Leaf) and tree.value is not None:
-            return [f"return {self._bits(tree.value)};"]
+            stored = [c.name for c in self.parts.cells if early(c, self.parts.machine) and _alone(c, "q")]
+            # Read back, the latch needs no register across a multiplication.
+            answer = f"m->{stored[0]}" if stored and tree.value == (0, 1) else self._bits(tree.value)
+            return [f"return {answer};"]
         lines = render(tree, self._ask, lambda pair: [f"active = {self._bits(pair)};"], SYNTAX)
         return [
             "/* Answer for the latch and the buttons as they are. */",
@@ -183,7 +186,8 @@ class Core:
                 value = f"({kind})({value} << {at}u)"
             terms.append(value)
         if len(terms) == 1:
-            return f"m->{cell.name} = {terms[0]};"
+            cast = f"({kind})" if terms[0].startswith("n_") and cell.width == 8 else ""
+            return f"m->{cell.name} = {cast}{terms[0]};"
         return f"m->{cell.name} = ({kind})({' | '.join(terms)});"
 
     def _idle(self) -> list[str]:
@@ -336,17 +340,18 @@ class Core:
         whole = motion.whole
         assert isinstance(decide, Node) and isinstance(whole, Node)
         opened, act, closed = self._ways(motion, "x", "x", names)
+        stored = [self._pack(cell) for cell in self.parts.cells if early(cell, machine)]
         yes, no = (
             [
                 *render(flips, self._ask, lambda f: self._flip(f, names), SYNTAX),
+                *([] if motion.scales else stored),
                 *render(moves, self._ask, act, SYNTAX),
             ]
             for flips, moves in ((decide.yes, whole.yes), (decide.no, whole.no))
         )
-        stored = [self._pack(cell) for cell in self.parts.cells if early(cell, machine)]
         about = f"/* Decide with the charge from before this tick; move the copy of {comment(self._capacitor(0))}. */"
         chain = choose(decide, *self._ask(decide.ask), yes, no, SYNTAX)
-        return ["", about, *opened, *chain, *(["", *stored] if stored else []), *closed]
+        return ["", about, *opened, *chain, *(["", *stored] if stored and motion.scales else []), *closed]
 
     def _capacitor(self, k: int) -> str:
         assert isinstance(self.port.machine, Charge)
@@ -548,9 +553,22 @@ def early(cell: Cell, machine: ChargeParts | CountParts) -> bool:
     """Whether a cell is stored before the copies move, to free its registers for a multiplication."""
     if isinstance(machine, CountParts) or set(copies(machine)) & {field.name for field in cell.fields}:
         return False
-    if fused(machine) and not machine.motions[0].scales:
-        return False
+    whole = machine.motions[0].whole
+    if fused(machine) and not machine.motions[0].scales and whole is not None and _asks(whole, LATCH):
+        return False  # the motion wants the latch as well, and storing it twice costs more than it frees
     return any(_multiplies(motion) for motion in machine.motions)
+
+
+def _asks(tree: Tree[Alone | Mix | Affine], question: int) -> bool:
+    """Whether a tree asks a question anywhere."""
+    if isinstance(tree, Leaf):
+        return False
+    return tree.ask == question or _asks(tree.yes, question) or _asks(tree.no, question)
+
+
+def _alone(cell: Cell, name: str) -> bool:
+    """Whether a cell holds one field of that name and nothing else."""
+    return [field.name for field in cell.fields] == [name]
 
 
 def fused(machine: ChargeParts) -> bool:
@@ -608,6 +626,8 @@ def _unpack(cell: Cell, was: bool = False) -> list[str]:
             continue
         at, last = _place(field, cell)
         kind = f"uint{8 if last - at < 8 else 16}_t"
+        if kind == "uint8_t" and field.name.startswith("n_") and _alone(cell, field.name):
+            kind = "uint_fast8_t"  # below its limit by itself: a 32-bit part need not cut it to a byte
         value = f"m->{cell.name}"
         if at:
             value = f"({value} >> {at}u)"

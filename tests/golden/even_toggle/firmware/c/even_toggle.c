@@ -53,15 +53,16 @@ uint8_t even_toggle_step(even_toggle_t *m, uint8_t held)
             q ^= 1u;
             x ^= 0xFFFFu;
         }
+        m->q = q;
         x = (uint16_t)(even_toggle_scaled(x, EVEN_TOGGLE_STAYS_PUSH) + EVEN_TOGGLE_ADD_PUSH);
     } else {
+        m->q = q;
         x = even_toggle_scaled(x, EVEN_TOGGLE_STAYS_OPEN);
     }
 
     m->x = x;
-    m->q = q;
 
-    return q;
+    return m->q;
 }
 
 bool even_toggle_idle(const even_toggle_t *m)

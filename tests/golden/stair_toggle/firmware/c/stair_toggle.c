@@ -28,7 +28,7 @@ uint8_t stair_toggle_step(stair_toggle_t *m, uint8_t held)
 {
     uint8_t q = (uint8_t)(m->bits & 1u);
     uint8_t c = (uint8_t)(m->bits >> 1u);
-    uint8_t n_push = m->n_push;
+    uint_fast8_t n_push = m->n_push;
 
     /* PUSH: a change counts once seen long enough. */
     if ((held & STAIR_TOGGLE_BUTTON_PUSH) != 0u) {
@@ -59,7 +59,7 @@ uint8_t stair_toggle_step(stair_toggle_t *m, uint8_t held)
     }
 
     m->bits = (uint8_t)(q | (uint8_t)(c << 1u));
-    m->n_push = n_push;
+    m->n_push = (uint8_t)n_push;
 
     return q;
 }
@@ -67,7 +67,7 @@ uint8_t stair_toggle_step(stair_toggle_t *m, uint8_t held)
 bool stair_toggle_idle(const stair_toggle_t *m)
 {
     stair_toggle_t next;
-    uint8_t n_push = m->n_push;
+    uint_fast8_t n_push = m->n_push;
     uint8_t was = 0u;
 
     if (n_push >= STAIR_TOGGLE_PRESS_PUSH) {
