@@ -30,9 +30,12 @@ def pins_of(work: Work, part: str) -> tuple[list[int], list[int]]:
     """Return the port bits of buttons and outputs in the pin layer's section for a part."""
     text = work.texts["board.c"]
     section = text[text.index(f"defined({part})") :]
-    section = section[: section.index("#include") if "#include" in section[:4000] else section.index("Settings")]
+    section = section[
+        : section.index("#include") if "#include" in section[:4000] else section.index("Settings")
+    ]
     return tuple(  # type: ignore[return-value]
-        [int(bit) for bit in re.findall(rf"#define BOARD_{word}_\w+ (\d+)u", section)] for word in ("PIN", "OUT")
+        [int(bit) for bit in re.findall(rf"#define BOARD_{word}_\w+ (\d+)u", section)]
+        for word in ("PIN", "OUT")
     )
 
 
@@ -54,7 +57,9 @@ def run_avr(work: Work, moves: Moves, where: Path) -> list[Change]:
     words = [f"0:{bit}=1" for bit in buttons]
     for (_, before), (time, after) in pairwise([(0, 0), *moves]):
         words += [
-            f"{time}:{bit}={1 - (after >> i & 1)}" for i, bit in enumerate(buttons) if (before ^ after) >> i & 1
+            f"{time}:{bit}={1 - (after >> i & 1)}"
+            for i, bit in enumerate(buttons)
+            if (before ^ after) >> i & 1
         ]
     words.append(f"{moves[-1][0] + 20_000}:{buttons[0]}={1 - (moves[-1][1] & 1)}")
     printed = must(["./pins", "image.elf", *words], where)
@@ -142,7 +147,15 @@ def build_m0(work: Work, where: Path) -> None:
     need("arm-none-eabi-gcc")
     work.write(where)
     (where / "board.c").write_text(work.texts["board.c"])
-    flags = "-mcpu=cortex-m0 -mthumb -Os -std=c99 -ffreestanding -nostdlib -DPORTER_BOARD_NRF51".split()
+    flags = [
+        "-mcpu=cortex-m0",
+        "-mthumb",
+        "-Os",
+        "-std=c99",
+        "-ffreestanding",
+        "-nostdlib",
+        "-DPORTER_BOARD_NRF51",
+    ]
     sources = [f"{work.name}.c", "board.c", DRIVERS / "m0_start.c"]
     link = [f"-Wl,-T,{DRIVERS / 'm0.ld'}", "-lgcc", "-o", "image.elf"]
     must(["arm-none-eabi-gcc", *flags, "-Wall", "-Wextra", "-Werror", *sources, *link], where)

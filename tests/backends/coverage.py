@@ -39,7 +39,7 @@ def measure(work: Work, where: Path) -> Reached:
     """
     need(CLANG, MERGE, SHOW, "sh")
     work.write(where)
-    flags = "-std=c99 -O1 -fprofile-instr-generate -fcoverage-mapping -fcoverage-mcdc".split()
+    flags = ["-std=c99", "-O1", "-fprofile-instr-generate", "-fcoverage-mapping", "-fcoverage-mcdc"]
     sources = [f"{work.name}.c", DRIVERS / "cover.c"]
     must([CLANG, *flags, *WARNINGS, *names(work), *sources, "-o", "cover"], where)
     (where / "in.bin").write_bytes(work.stimulus.tobytes())

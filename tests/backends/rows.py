@@ -1,5 +1,6 @@
 """Ports by hand with the behaviour of hand-written cores, whose sizes are the budgets; and runs for them."""
 
+from dataclasses import replace
 from itertools import pairwise
 
 import numpy as np
@@ -44,9 +45,7 @@ def window_toggle() -> Port:
 
 def _charge(name: str, opened: tuple[Move, Move], held: tuple[Move, Move]) -> Port:
     low, high = Test((1,), False, 21845), Test((1,), True, 43690)
-    modes = tuple(
-        (ChargeMode((), (opened[q],)), ChargeMode(((low, high)[q],), (held[q],))) for q in (0, 1)
-    )
+    modes = tuple((ChargeMode((), (opened[q],)), ChargeMode(((low, high)[q],), (held[q],))) for q in (0, 1))
     return _port(name, ONE, Charge(("memory",), (0.0,), (1e-4,), (0,), (modes[0], modes[1])))
 
 
@@ -69,7 +68,34 @@ def multiply_charge() -> Port:
     return _charge("multiply_charge", opened, held)
 
 
-ROWS = (latch, agreeing_latch, edge_toggle, window_toggle, rails_charge, shift_charge, multiply_charge)
+def _mirrored(name: str, opened: Move, held: Move) -> Port:
+    """Return a port whose two sides work alike upside down, as the planner makes them where it can."""
+    turned = [replace(move, mirror=True) for move in (opened, held)]
+    return _charge(name, (opened, turned[0]), (held, turned[1]))
+
+
+def drain_charge() -> Port:
+    """As `shift_charge`, in the arithmetic that the planner takes where all decays are powers of two."""
+    opened, held = Move("drain", 0, shift=8), Move("drain", 31708, shift=2, add=7927)
+    return _mirrored("drain_charge", opened, held)
+
+
+def scale_charge() -> Port:
+    """As `multiply_charge`, in the arithmetic that the planner takes for other decays."""
+    return _mirrored("scale_charge", Move("scale", 0, rate=64905), Move("scale", 31710, rate=48874, add=8062))
+
+
+ROWS = (
+    latch,
+    agreeing_latch,
+    edge_toggle,
+    window_toggle,
+    rails_charge,
+    shift_charge,
+    multiply_charge,
+    drain_charge,
+    scale_charge,
+)
 
 
 def suite(port: Port, ticks: int = 20_000, cases: int = 2) -> Suite:
@@ -77,7 +103,8 @@ def suite(port: Port, ticks: int = 20_000, cases: int = 2) -> Suite:
     held = [_presses(port, ticks, seed) for seed in range(cases)]
     answers, _ = drive(port, held)
     made = tuple(
-        Case(f"random_{i}", "Random presses.", h, a) for i, (h, a) in enumerate(zip(held, answers, strict=True))
+        Case(f"random_{i}", "Random presses.", h, a)
+        for i, (h, a) in enumerate(zip(held, answers, strict=True))
     )
     return Suite(port.name, port.title, port.buttons, port.outputs, port.tick_s, made, ("Made for a test.",))
 

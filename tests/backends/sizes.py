@@ -73,7 +73,9 @@ def _sdcc(flag: str, work: Work, where: Path) -> Size:
     areas = _areas((where / "core.rel").read_text())
     code, symbols = areas["CSEG" if flag == "-mmcs51" else "CODE"]
     idle = code - symbols[f"_{work.name}_idle"]  # the last function of the file
-    state = sum(int(bits) // 8 for bits in re.findall(r"^    uint(\d+)_t \w+;", work.texts[f"{work.name}.h"], re.M))
+    state = sum(
+        int(bits) // 8 for bits in re.findall(r"^    uint(\d+)_t \w+;", work.texts[f"{work.name}.h"], re.M)
+    )
     fixed = sum(areas.get(name, (0, {}))[0] for name in ("DATA", "OSEG")) if flag == "-mpdk14" else 0
     return Size(code - idle, idle, state + fixed)
 

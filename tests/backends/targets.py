@@ -104,12 +104,12 @@ class Wasm(Backend):
         size = len(work.stimulus)
         (where / "batch.c").write_text(
             f'#include "each.h"\nstatic uint8_t room[{size}u];\n'
-            'uint8_t *at(void);\nvoid go(void);\n'
+            "uint8_t *at(void);\nvoid go(void);\n"
             '__attribute__((export_name("at"))) uint8_t *at(void) { return room; }\n'
             '__attribute__((export_name("go"))) void go(void)\n'
             f"{{ for (uint32_t i = 0u; i < {size}u; i++) {{ room[i] = each(room[i]); }} }}\n"
         )
-        flags = "-target wasm32-freestanding -std=c99 -O2 -nostdlib -Wl,--no-entry".split()
+        flags = ["-target", "wasm32-freestanding", "-std=c99", "-O2", "-nostdlib", "-Wl,--no-entry"]
         # A cache of its own would compile the library again for each test.
         cache = where.parent / "zig"
         os.environ["ZIG_GLOBAL_CACHE_DIR"] = os.environ["ZIG_LOCAL_CACHE_DIR"] = str(cache)
@@ -141,7 +141,8 @@ class Avr(Backend):
     def build(self, work: Work, where: Path) -> None:
         flags = ["-mmcu=attiny85", "-Os", "-std=c99", *WARNINGS]
         must(
-            ["avr-gcc", *flags, *names(work), f"{work.name}.c", DRIVERS / "avr_main.c", "-o", "core.elf"], where
+            ["avr-gcc", *flags, *names(work), f"{work.name}.c", DRIVERS / "avr_main.c", "-o", "core.elf"],
+            where,
         )
 
     def drive(self, work: Work, where: Path) -> bytes:
@@ -173,13 +174,13 @@ class CortexM0(Backend):
     name, tools = "cortex-m0", ("arm-none-eabi-gcc", "qemu-system-arm")
 
     def build(self, work: Work, where: Path) -> None:
-        flags = "-mcpu=cortex-m0 -mthumb -Os -std=c99 -ffreestanding -nostdlib".split()
+        flags = ["-mcpu=cortex-m0", "-mthumb", "-Os", "-std=c99", "-ffreestanding", "-nostdlib"]
         link = [f"-Wl,-T,{DRIVERS / 'm0.ld'}", f"{work.name}.c", DRIVERS / "m0.c", "-lgcc", "-o", "core.elf"]
         must(["arm-none-eabi-gcc", *flags, *WARNINGS, *names(work), *link], where)
 
     def drive(self, work: Work, where: Path) -> bytes:
         (where / "in.bin").write_bytes(work.stimulus.tobytes())
-        machine = "-M microbit -nographic -monitor none -serial none".split()
+        machine = ["-M", "microbit", "-nographic", "-monitor", "none", "-serial", "none"]
         files = ["-semihosting-config", "enable=on,target=native", "-kernel", "core.elf"]
         must(["qemu-system-arm", *machine, *files], where)
         return (where / "out.bin").read_bytes()
@@ -191,7 +192,7 @@ class RiscV(Backend):
     name, tools = "rv32ec", ("riscv64-unknown-elf-gcc", "qemu-riscv32", "sh")
 
     def build(self, work: Work, where: Path) -> None:
-        flags = "-march=rv32ec -mabi=ilp32e -Os -std=c99 -ffreestanding -nostdlib".split()
+        flags = ["-march=rv32ec", "-mabi=ilp32e", "-Os", "-std=c99", "-ffreestanding", "-nostdlib"]
         link = [f"{work.name}.c", DRIVERS / "riscv.c", "-lgcc", "-o", "core.elf"]
         must(["riscv64-unknown-elf-gcc", *flags, *WARNINGS, *names(work), *link], where)
 

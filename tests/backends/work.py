@@ -74,7 +74,9 @@ def without_rest(whole: Work, answers: bytes) -> Work:
     same = np.append(False, whole.stimulus[1:] == whole.stimulus[:-1])
     at = np.arange(len(rests))
     since = at - np.maximum.accumulate(np.where(rests & same, 0, at))
-    asks = (at % 16 == 0) | np.append(False, rests[1:] != rests[:-1]) | np.append(rests[1:] != rests[:-1], True)
+    asks = (
+        (at % 16 == 0) | np.append(False, rests[1:] != rests[:-1]) | np.append(rests[1:] != rests[:-1], True)
+    )
     stimulus = np.where(asks | (whole.stimulus == INIT), whole.stimulus, whole.stimulus & ~np.uint8(ASK))
     keep = since <= KEPT
     return replace(whole, stimulus=stimulus[keep], expected=whole.expected[keep])

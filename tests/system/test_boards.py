@@ -36,8 +36,7 @@ def presses(port: Port, until_us: int, seed: int, start_us: int = 0) -> Moves:
 
 def changes(times_us: list[int], bits: list[int]) -> list[tuple[int, int]]:
     """Return time and value of each change, the first included."""
-    kept = [next(group) for _, group in groupby(zip(times_us, bits, strict=True), key=lambda row: row[1])]
-    return kept
+    return [next(group) for _, group in groupby(zip(times_us, bits, strict=True), key=lambda row: row[1])]
 
 
 def reference(port: Port, moves: Moves, phase_us: int, until_us: int) -> list[tuple[int, int]]:
@@ -56,7 +55,9 @@ def test_avr_image_does_what_the_reference_does(port: Port, tmp_path: Path):
     """An ATtiny85's output pin changes as the reference's does, later by a tick of sampling at most."""
     moves = _clear_moves(port)
     end = moves[-1][0] + 20_000
-    seen = [(time, level) for time, output, level in run_avr(work(port, suite(port, 200, 1)), moves, tmp_path)]
+    seen = [
+        (time, level) for time, output, level in run_avr(work(port, suite(port, 200, 1)), moves, tmp_path)
+    ]
     due = reference(port, moves, 0, end)
     assert [level for _, level in seen] == [level for _, level in due] and len(due) > 5
     late = [time - when for (time, _), (when, _) in zip(seen[1:], due[1:], strict=True)]
@@ -87,7 +88,11 @@ def test_m0_image_does_what_the_reference_does(port: Port, start_us: int, tmp_pa
     """
     until = start_us + 5_000_000
     board = run_m0(
-        work(port, suite(port, 200, 1)), presses(port, 5_000_000, 1, start_us), until, tmp_path, start_us=start_us
+        work(port, suite(port, 200, 1)),
+        presses(port, 5_000_000, 1, start_us),
+        until,
+        tmp_path,
+        start_us=start_us,
     )
     samples = [next(group) for _, group in groupby(board.reads)]
     times, masks = zip(*samples, strict=True)

@@ -12,7 +12,9 @@ pytestmark = pytest.mark.system
 
 #: `idle` compares every member of the state after a trial step. That the latch alone would change, the
 #: rest standing still, never happens in these ports: the comparison is there for ports where it could.
-LAST = pytest.mark.xfail(reason="idle compares the latch where nothing but the latch never changes", strict=True)
+LAST = pytest.mark.xfail(
+    reason="idle compares the latch where nothing but the latch never changes", strict=True
+)
 
 
 @pytest.fixture(scope="module")

@@ -1,7 +1,5 @@
 """Every vector on every processor: emitted cores, compiled and run, against the reference tick by tick."""
 
-from pathlib import Path
-
 import numpy as np
 import pytest
 from backends.targets import BACKENDS, HOSTS, PDK14, Avr, Backend, CortexM0, Host, MicroPython, RiscV
