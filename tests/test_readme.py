@@ -35,9 +35,9 @@ class Shown:
     output: tuple[str, ...]
 
     @property
-    def system(self) -> bool:
-        """Whether it needs a tool that does not come with Python."""
-        return self.command.startswith("cc ")
+    def long(self) -> bool:
+        """Whether it takes a whole proof, follows on one, or needs a tool that pip doesn't bring."""
+        return self.command.startswith(("porter prove", "porter port", "sed ", "cc "))
 
 
 def _shown(text: str) -> list[Shown]:
@@ -111,7 +111,7 @@ MARKS = {True: (pytest.mark.system,), False: ()}
 
 @pytest.mark.xdist_group("readme")
 @pytest.mark.parametrize(
-    "at", [pytest.param(k, marks=MARKS[s.system], id=s.command) for k, s in enumerate(SHOWN)]
+    "at", [pytest.param(k, marks=MARKS[s.long], id=s.command) for k, s in enumerate(SHOWN)]
 )
 def test_a_command_prints_what_the_readme_says(place: Path, at: int, request: pytest.FixtureRequest) -> None:
     shown, printed = SHOWN[at], _run(place, at)

@@ -53,9 +53,12 @@ def quantities(measures: Measures) -> Floats:
         *measures.windows.values(),
         *measures.margins.values(),
         *measures.timed.values(),
-        *measures.period_s.values(), *measures.rests,
+        *measures.period_s.values(),
+        *measures.rests,
     ]
-    return np.column_stack([np.nan_to_num(np.asarray(p, float), nan=0.0, posinf=1e30, neginf=-1e30) for p in parts])
+    return np.column_stack(
+        [np.nan_to_num(np.asarray(p, float), nan=0.0, posinf=1e30, neginf=-1e30) for p in parts]
+    )
 
 
 def population(circuit: Circuit, cols: Columns, published: bool, keys: tuple[MarginKey, ...]) -> Population:

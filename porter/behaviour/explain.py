@@ -164,7 +164,9 @@ def _made_of(engine: Engine, mode: Mode, which: int) -> str:
     rows[np.arange(len(cols.names)) + 1, np.arange(len(cols.names))] *= 1 + step
     rate = solve_mode(engine.topo, rows, mode.q, mode.held, mode.conducts).rate[:, which]
     follows = -np.log(rate[1:] / rate[0]) / math.log1p(step)
-    found = [(float(f), n.split(".", 1)[-1]) for f, n in zip(follows, cols.names, strict=True) if abs(f) > 0.01]
+    found = [
+        (float(f), n.split(".", 1)[-1]) for f, n in zip(follows, cols.names, strict=True) if abs(f) > 0.01
+    ]
     found.sort(key=lambda pair: (-abs(pair[0]), pair[1]))
     if all(abs(share - 1) < 0.02 for share, _ in found):
         return " * ".join(sorted((n for _, n in found), reverse=True))

@@ -196,7 +196,6 @@ def power_notes(rows: Sequence[PowerRow]) -> Iterator[str]:
         said = "; ".join(f"{output} after {_first_last(names)}" for output, names in groups.items())
         yield f"the start depends on how fast the supply comes: {said}"
 
-
     turned: dict[tuple[Level, str], list[str]] = {}
     for row in rows:
         if row.start is not None and row.output in _LEVELS and row.output != row.start:

@@ -190,7 +190,10 @@ class Engine:
         for _ in range(_EVENTS):
             if not len(todo):
                 return
-            done = [self._leg(lanes, rows, mode, left, frozen, watcher) for mode, rows in self._by_mode(lanes, todo)]
+            done = [
+                self._leg(lanes, rows, mode, left, frozen, watcher)
+                for mode, rows in self._by_mode(lanes, todo)
+            ]
             moved = np.sort(np.concatenate(done))
             if not len(moved):
                 return
@@ -291,7 +294,10 @@ class Engine:
         """
         todo = np.arange(len(lanes))
         for _ in range(_ROUNDS * (1 + self.topo.ways)):
-            changed = [self._settle_instant(lanes, rows, mode, frozen, listener) for mode, rows in self._by_mode(lanes, todo)]
+            changed = [
+                self._settle_instant(lanes, rows, mode, frozen, listener)
+                for mode, rows in self._by_mode(lanes, todo)
+            ]
             todo = np.sort(np.concatenate(changed)) if changed else todo[:0]
             todo = todo[~lanes.busy[todo]]
             if not len(todo):

@@ -96,7 +96,9 @@ class _Gather:
         to = np.where(far > 0, X + by, X - by)
         if self.affine.any():
             to = np.where(self.affine[key], self._affine(key, X), to)
-        stays = ~np.where(far > 0, self.up[key], self.down[key]) | ((far == 0) & ~(self.up[key] & self.down[key]))
+        stays = ~np.where(far > 0, self.up[key], self.down[key]) | (
+            (far == 0) & ~(self.up[key] & self.down[key])
+        )
         regs = np.where(stays, X, to)
         return State(q, regs ^ self.flip[key]), self.answer[q, held]
 

@@ -51,7 +51,7 @@ def held_masks(suite: Suite) -> set[int]:
 
 
 @given(count_ports())
-@settings(max_examples=25, deadline=None)
+@settings(max_examples=12, deadline=None)
 def test_expected_is_what_the_reference_step_says(port):
     suite = suite_of(port)
     answers_agree(port, suite, longest=200)

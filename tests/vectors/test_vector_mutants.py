@@ -66,6 +66,7 @@ def test_a_telling_sequence_is_one():
     assert said[0][-1] != said[1][-1]
 
 
+@pytest.mark.system  # long
 def test_sharpening_catches_faults_of_one_step_in_65536():
     port = charge()
     suite = build_vectors(behaviour(port.buttons), port)
