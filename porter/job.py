@@ -16,7 +16,7 @@ from collections.abc import Callable, Iterator, Mapping, Sequence
 from contextlib import contextmanager
 from dataclasses import dataclass
 from pathlib import Path
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Literal
 
 import porter
 from porter.behaviour.model import Behaviour
@@ -25,6 +25,7 @@ from porter.parity.model import LedgerRow, Parity
 from porter.port.model import Port
 from porter.sheet.model import Sheet
 from porter.spec.model import Circuit
+from porter.trace import Trace
 from porter.vectors.model import Suite
 
 if TYPE_CHECKING:
@@ -207,10 +208,25 @@ def _report(
     from porter.charts import standard_traces
     from porter.report import render
 
-    traces = standard_traces(circuit, behaviour, port)
+    traces = (*standard_traces(circuit, behaviour, port), *_counterexample(circuit, port, parity))
     return render(
         circuit, behaviour, port, parity, suite, files, traces, versions=_versions(), sheet=interface
     )
+
+
+def _counterexample(circuit: Circuit, port: Port, parity: Parity) -> Iterator[Trace]:
+    """Run the press sequence that circuit and port answer differently, where there is one, from power-on."""
+    from porter.charts import run_trace
+
+    if parity.counterexample is None:
+        return
+    schedule = [(tick * port.tick_s, held) for tick, held in parity.counterexample]
+    last = parity.counterexample[-1][0]
+    end_s = (last + max(20, last // 5)) * port.tick_s  # long enough to see the one and miss the other
+    level: Literal["low", "high"] = "high" if port.start_q else "low"
+    title = "Counterexample: a press sequence from power-on that circuit and port answer differently"
+    trace = run_trace(circuit, port, schedule, end_s, title, output=level)
+    yield dataclasses.replace(trace, waves=(), levels=())  # a chart of edges
 
 
 def _versions() -> dict[str, str]:
