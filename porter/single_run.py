@@ -74,6 +74,7 @@ def simulate(
     q = int(output == "high")
     lanes = engine.rest(q)[0] if start == "settled" else engine.empty(q)
     lanes.clock_s[:] = 0.0
+    first = int(lanes.q[0])  # a level that doesn't last is no start
     edges: list[tuple[float, int]] = []
     stretches: list[_Stretch] = []
 
@@ -88,7 +89,6 @@ def simulate(
         until = schedule[k + 1][0] if k + 1 < len(schedule) else end_s
         engine.press(lanes, held_mask(circuit, names), listen)
         oscillates |= _through(engine, lanes, until - at, watch, listen)
-    first = q
     for when, new in edges:
         if when == 0:
             first = new
