@@ -11,7 +11,7 @@ import porter
 from porter.job import build_job, portable
 from porter.resources import resource
 
-FOLDER = Path(__file__).parents[1] / ".pictures"
+FOLDER = Path(__file__).parents[1] / ".ci" / "pictures"
 SPEC = "specs/map_lamp.yaml"
 WIDTH = 1000
 #: Picture, section of the report, what of it is left out, height in pixels.

@@ -50,7 +50,7 @@ ONE_SHOTS = [
         9.1e3,
         10e-9,
         99.9737e-6,
-        "TI SLFS022 fig. 10 (9.1 kohm from memory for TI, printed in a transcription)",
+        "TI SLFS022 fig. 10 (9.1 kohm from memory for TI, printed in a copy of the Fairchild sheet)",
     ),
     (10e3, 0.1e-6, 1.098612289e-3, "ST / TS555 class timing test circuit"),
     (470e3, 10e-6, 5.163478, "LMC555 fig. 8-2, printed 5.17 s with 1.1 for ln 3; parts inferred"),
@@ -161,7 +161,7 @@ def test_charge_sharing() -> None:
 
 
 def test_constant_current_ramp() -> None:
-    """I/C: 0.215 mA into 22 nF rises at 9.77 V/ms (Fairchild ramp example, parts of its transcription)."""
+    """I/C: 0.215 mA into 22 nF rises at 9.77 V/ms (Fairchild ramp example, parts as in a copy of the sheet)."""
     net = quiet(
         supply=15.0,
         resistors=(("out", "gnd", 1e5), ("n", "gnd", 1e9)),
