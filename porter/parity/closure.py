@@ -90,9 +90,12 @@ def _close(table: "_Table", seen: Mask, clock: float) -> tuple[Closure, NDArray[
         steps=states * masks,
         grey=int(grey.sum()),
         bound_v=bound.copies * scale if bound.holds else None,
-        complete=bound.holds,
+        complete=bound.holds and table.starts_alike(),
         differs=int(wrong.sum()),
-        said=tuple(_said(states, masks, bound, scale, int(grey.sum()), int(wrong.sum()))),
+        said=(
+            *_said(states, masks, bound, scale, int(grey.sum()), int(wrong.sum())),
+            *(() if table.starts_alike() else ("the port starts with a copy that is not the circuit's",)),
+        ),
         band_s=table.band(bound.copies) if grey.any() else None,
     )
     return closure, wrong
@@ -201,6 +204,11 @@ class _Table:
                 found.append(np.unique(to))
             front = np.concatenate(found)
         return seen.reshape(2, _COPIES), parents
+
+    def starts_alike(self) -> bool:
+        """Whether the copy at power-on is the circuit's, rounded."""
+        true = self.mem.copies(self.mem.engine.empty(self.port.start_q).x)[0, 0]
+        return bool(abs(self.machine.start[0] - np.clip(true, 0, U16)) <= 0.5 + 1e-9)
 
     def local_error(self, seen: Mask) -> "_Errors":
         """Compare one tick of port and circuit from every reachable copy, per (latch after deciding, held)."""

@@ -106,6 +106,8 @@ def changes(witness: tuple[int, ...], port: Port) -> tuple[tuple[int, tuple[str,
     for tick, mask in enumerate(witness):
         if tick == 0 or mask != witness[tick - 1]:
             out.append((tick, tuple(n for i, n in enumerate(port.buttons) if mask >> i & 1)))
+    if out[-1][0] < len(witness) - 1:  # an edge that comes, or doesn't, while nothing is touched
+        out.append((len(witness) - 1, out[-1][1]))
     return tuple(out)
 
 
