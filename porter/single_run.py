@@ -93,7 +93,9 @@ def simulate(
         if when == 0:
             first = new
     later = tuple(e for e in edges if e[0] > 0)
-    return Run(((0.0, first), *later), _sample(engine, stretches, nodes, np.asarray(times, float)), oscillates)
+    return Run(
+        ((0.0, first), *later), _sample(engine, stretches, nodes, np.asarray(times, float)), oscillates
+    )
 
 
 def _through(engine: Engine, lanes: Lanes, duration: float, watch, listen) -> bool:  # type: ignore[no-untyped-def]

@@ -70,7 +70,7 @@ def walk_one(mem: Memory, port: Port, clocks: tuple[float, ...] = ()) -> tuple[W
     table = _Table(mem, port)
     seen, parents = table.reach()
     first, wrong = _close(table, seen, 1.0)
-    path = _path(parents, wrong, port) if wrong.any() else None
+    path = _path(parents, table.depth, wrong, port) if wrong.any() else None
     others = tuple(_close(table, seen, clock)[0] for clock in clocks)
     bound = first.bound_v / float(mem.scale_v[0]) if first.bound_v is not None else float(U16)
     return Walk(first, bound, table.edges, path), others
@@ -169,6 +169,7 @@ class _Table:
         self.next_q: dict[tuple[int, int], NDArray[np.uint8]] = {}
         self.next_x: dict[tuple[int, int], Ints] = {}
         self.edges: dict[tuple[int, int], Floats] = {}
+        self.depth = np.full(2 * _COPIES, _COPIES, np.int64)
         #: One tick of each mode with the latch kept, from every copy.
         self.flow: dict[tuple[int, int], Floats] = {}
         step = stepper(port)
@@ -183,7 +184,7 @@ class _Table:
     def reach(self) -> tuple[NDArray[np.bool_], NDArray[np.int64]]:
         """Mark the reachable states, shape (2, copies), with how each was first come to.
 
-        Parents hold ``(state * masks + held)`` of the step, -1 at the start.
+        Parents hold ``(state * masks + held)`` of the step, -1 at the start; `depth` the fewest ticks.
         """
         seen = np.zeros(2 * _COPIES, bool)
         parents = np.full(2 * _COPIES, -1, np.int64)
@@ -193,14 +194,16 @@ class _Table:
         ]
         front = np.array([self.port.start_q * _COPIES + self.machine.start[0]])
         seen[front] = True
+        self.depth[front] = 0
         while len(front):
             found = []
+            level = int(self.depth[front[0]]) + 1
             for h, table in zip(self.masks, nexts, strict=True):
                 to = table[front]
                 new = ~seen[to]
                 to, source = to[new], front[new]
                 parents[to] = source * len(self.masks) + h
-                seen[to] = True
+                seen[to], self.depth[to] = True, level
                 found.append(np.unique(to))
             front = np.concatenate(found)
         return seen.reshape(2, _COPIES), parents
@@ -219,7 +222,8 @@ class _Table:
                 self.flow[q, h] = _one_tick(self.mem, q, h, self.tick_s, frozen=True)[0]
                 flips = _one_tick(self.mem, q, h, self.tick_s)[1]
                 errors.at[q, h], errors.flips[q, h] = at, flips[at]
-                errors.late[q, h] = flips[at] > 0
+                # A flip at the boundary itself is the decision's, which `compare` looks at.
+                errors.late[q, h] = (flips[at] > 0) & (self.truth[q, h][at] == q)
                 errors.off[q, h] = np.abs(self._moved(q, h)[at] - self.flow[q, h][at])
         return errors
 
@@ -511,17 +515,13 @@ class _Errors:
     flips: dict[tuple[int, int], Ints]
 
 
-def _path(parents: Ints, wrong: NDArray[np.bool_], port: Port) -> tuple[int, ...]:
+def _path(parents: Ints, depth: Ints, wrong: NDArray[np.bool_], port: Port) -> tuple[int, ...]:
     """Return the held masks that lead to the wrong state reached soonest, its own last."""
     q, x, h = np.nonzero(wrong)
-    best: tuple[int, ...] | None = None
-    for k in range(min(len(q), 64)):
-        path = [int(h[k])]
-        state = int(q[k]) * _COPIES + int(x[k])
-        while parents[state] >= 0:
-            path.append(int(parents[state] % port.held_count))
-            state = int(parents[state] // port.held_count)
-        if best is None or len(path) < len(best):
-            best = tuple(reversed(path))
-    assert best is not None
-    return best
+    states = q.astype(np.int64) * _COPIES + x
+    best = int(np.argmin(depth[states]))
+    path, state = [int(h[best])], int(states[best])
+    while parents[state] >= 0:
+        path.append(int(parents[state] % port.held_count))
+        state = int(parents[state] // port.held_count)
+    return tuple(reversed(path))
