@@ -14,7 +14,7 @@ from porter.spec.read import read_text
 @pytest.fixture(scope="module")
 def fan(tmp_path_factory):
     """A toggle with an off button that is forced into counters, which can't say what a short hold leaves."""
-    text = right("bench_fan").circuit.source.replace("  tick: 2 ms", "  tick: 2 ms\n  style: count")
+    text = right("bench_fan").circuit.source.replace("style: charge", "style: count")
     spec = tmp_path_factory.mktemp("fan") / "bench_fan.yaml"
     spec.write_text(text)
     return spec

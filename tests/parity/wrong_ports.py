@@ -63,10 +63,15 @@ class Right:
 
 @cache
 def right(name: str) -> Right:
-    """Return a shipped spec's circuit, or ``uneven``, with its port."""
-    circuit = read_text(UNEVEN, "uneven.yaml") if name == "uneven" else porter.read(SPECS / f"{name}.yaml")
+    """Return a shipped spec's circuit, or ``uneven``, with its port; one that remembers is a charge port."""
+    text = UNEVEN if name == "uneven" else (SPECS / f"{name}.yaml").read_text()
+    circuit = read_text(text, f"{name}.yaml")
+    mem = memory(Engine(circuit))
+    if mem.kept and circuit.port.style != "charge":
+        circuit = read_text(text.replace("\nport:\n", "\nport:\n  style: charge\n"), f"{name}.yaml")
+        mem = memory(Engine(circuit))
     behaviour = derive(circuit)
-    return Right(circuit, behaviour, plan(circuit, behaviour), memory(Engine(circuit)))
+    return Right(circuit, behaviour, plan(circuit, behaviour), mem)
 
 
 @dataclass(frozen=True, slots=True)
