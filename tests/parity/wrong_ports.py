@@ -24,7 +24,7 @@ from porter.port.plan import plan
 from porter.spec.model import Circuit
 from porter.spec.read import read_text
 
-SPECS = Path(porter.__file__).parents[1] / "specs"
+SPECS = Path(__file__).parents[2] / "specs"
 
 #: A toggle whose idle level lies nearer to one threshold: its two re-arm times after a hold are far
 #: apart, with parts good enough that no two allowed units come near each other.

@@ -13,7 +13,7 @@ from porter.port.plan import plan
 from porter.vectors import build_vectors
 from porter.vectors.model import Suite
 
-SPECS = Path(porter.__file__).parents[1] / "specs"
+SPECS = Path(__file__).parents[2] / "specs"
 #: Each kind's spec, and the style that is asked for in place of the spec's own.
 KINDS = {
     "two_button": ("kiln_vent", "count"),
