@@ -11,7 +11,6 @@ from pathlib import Path
 
 import numpy as np
 
-import porter
 from porter.behaviour.derive import derive
 from porter.behaviour.model import Behaviour
 from porter.circuit.engine import Engine
