@@ -2,6 +2,7 @@
 
 from dataclasses import replace
 
+import pytest
 from hypothesis import HealthCheck, assume, given, settings
 from hypothesis import strategies as st
 
@@ -56,9 +57,7 @@ def toggles(draw) -> tuple[Circuit, Behaviour, Port]:
     return circuit, behaviour, plan(circuit, behaviour)
 
 
-@settings(max_examples=3, suppress_health_check=list(HealthCheck))
-@given(made=toggles(), outside=st.sampled_from([0.2, 5.0]))
-def test_inside_never_outside_always(made, outside):
+def check_bands(made: tuple[Circuit, Behaviour, Port], outside: float) -> None:
     """The port as planned leaves no band; planned for another pace it re-arms outside of them, and does."""
     circuit, behaviour, port = made
     stages = set_stages(circuit, behaviour, PortMachine(port), start_q=port.start_q)
@@ -71,3 +70,21 @@ def test_inside_never_outside_always(made, outside):
     machine, _, _ = plan_charge(circuit, memory(Engine(circuit)), port.tick_s * outside)
     assert violations(port) == 0
     assert violations(replace(port, machine=machine)) > 0
+
+
+OUTSIDE = st.sampled_from([0.2, 5.0])
+
+
+@settings(max_examples=1, suppress_health_check=list(HealthCheck))
+@given(made=toggles(), outside=OUTSIDE)
+def test_inside_never_outside_always(made, outside):
+    """One toggle each time."""
+    check_bands(made, outside)
+
+
+@pytest.mark.system
+@settings(max_examples=25, suppress_health_check=list(HealthCheck))
+@given(made=toggles(), outside=OUTSIDE)
+def test_inside_never_outside_always_for_many(made, outside):
+    """More of them on request."""
+    check_bands(made, outside)

@@ -85,9 +85,8 @@ QUICK = {
 QUICK_PORTS = {
     "table entry q0 h1 flipped": {"kiln_vent"},
     "priority swapped": {"kiln_vent"},
-    "starts with a full capacitor": {"aquarium_light"},
     "wrong polarity": {"kiln_vent"},
-    "one answer wrong": {"aquarium_light"},
+    "one answer wrong": {"kiln_vent"},
     "waits for 5 ticks of a press": {"kiln_vent"},
     "clock 8 times slow": {"aquarium_light"},
     "one re-arm time for both directions": {"uneven"},
