@@ -107,10 +107,12 @@ def test_no_violation_in_a_few_presses():
 
 
 @pytest.mark.system
-@pytest.mark.parametrize("name", ["aquarium_light", "map_lamp", "bench_fan"])
-def test_no_violation_in_two_million_presses(name):
-    """Two million presses, timed at the edges of every band and at random, find nothing."""
-    check(name, 2_000_000, 8192)
+@pytest.mark.parametrize(
+    ("name", "presses"), [("aquarium_light", 2_000_000), ("map_lamp", 500_000), ("bench_fan", 500_000)]
+)
+def test_no_violation_in_millions_of_presses(name, presses):
+    """Three million presses, timed at the edges of every band and at random, find nothing."""
+    check(name, presses, 8192)
 
 
 def test_a_wrong_port_is_found():
