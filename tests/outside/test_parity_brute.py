@@ -106,7 +106,7 @@ def test_no_violation_in_a_few_presses():
     check("aquarium_light", 1_500, 256)
 
 
-@pytest.mark.system
+@pytest.mark.long
 @pytest.mark.parametrize(
     ("name", "presses"), [("aquarium_light", 2_000_000), ("map_lamp", 500_000), ("bench_fan", 500_000)]
 )

@@ -95,7 +95,7 @@ def test_inside_never_outside_always(made, outside):
     check_bands(made, outside)
 
 
-@pytest.mark.system
+@pytest.mark.long
 @settings(max_examples=25, suppress_health_check=list(HealthCheck))
 @given(made=toggles(), outside=OUTSIDE)
 def test_inside_never_outside_always_for_many(made, outside):

@@ -41,7 +41,7 @@ def worst_error(name: str, seed: int, ticks: int, lanes: int = 64) -> tuple[floa
     return worst, walk.bound
 
 
-@pytest.mark.parametrize("name", ["aquarium_light", pytest.param("map_lamp", marks=pytest.mark.system)])
+@pytest.mark.parametrize("name", ["aquarium_light", pytest.param("map_lamp", marks=pytest.mark.long)])
 def test_the_copy_stays_within_the_bound(name):
     """Along random presses the true voltage is never further away than promised, and gets near to that."""
     worst, bound = worst_error(name, 11, 700)

@@ -225,7 +225,7 @@ def test_any_pattern_of_a_copy_is_a_voltage(cores):
         check_copies(port, core, patterns(core.kinds, 30_000))
 
 
-@pytest.mark.system
+@pytest.mark.long
 def test_all_patterns_of_a_copy_are_voltages(cores):
     """All 16.7 million patterns of the three bytes."""
     port, core = cores["aquarium_light"]
@@ -290,7 +290,7 @@ def test_micropython_is_the_reference_in_every_state_of_a_small_machine():
     check_python(port, every_state(port))
 
 
-@pytest.mark.parametrize("apart", [397, pytest.param(1, marks=pytest.mark.system)])
+@pytest.mark.parametrize("apart", [397, pytest.param(1, marks=pytest.mark.long)])
 def test_micropython_is_the_reference_in_many_states_of_a_large_one(apart):
     """Copies all along the range with both latch values, every mask; all of them on request."""
     port = right("aquarium_light").port

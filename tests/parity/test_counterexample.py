@@ -38,7 +38,7 @@ def test_prove_saves_it_and_trace_replays_it(fan):
     )
 
 
-@pytest.mark.system  # a whole job
+@pytest.mark.long  # a whole job
 def test_the_report_charts_it(fan):
     """The job's report has one timing chart more, with the counterexample's title."""
     job = build_job(read_text(fan.read_text(), "bench_fan.yaml"))

@@ -95,7 +95,7 @@ QUICK_PORTS = {
 
 def marked(wrong: Wrong, quick: set[str]) -> object:
     """Run one circuit for each fault always, the others on request."""
-    return pytest.param(wrong, id=str(wrong), marks=() if wrong.spec in quick else pytest.mark.system)
+    return pytest.param(wrong, id=str(wrong), marks=() if wrong.spec in quick else pytest.mark.long)
 
 
 @pytest.mark.parametrize(
@@ -131,7 +131,7 @@ def test_a_wrong_port_is_refuted(wrong):
         check_short(given, PortMachine(port), masks_of(parity, port))
 
 
-@pytest.mark.system
+@pytest.mark.long
 @pytest.mark.parametrize("spec", ["uneven", "soap_dose"])
 def test_each_constant_counts(spec):
     """A port with one constant moved by more than the family's spread is refuted."""
@@ -164,7 +164,7 @@ def test_the_right_port_is_not_refuted(spec):
 SHIPPED = sorted(p.stem for p in SPECS.glob("*.yaml") if "faulty" not in p.stem)
 
 
-@pytest.mark.system
+@pytest.mark.long
 @pytest.mark.parametrize("clock", ["as drawn", "±1%", "±10%"])
 @pytest.mark.parametrize("spec", SHIPPED)
 def test_no_false_alarm(spec, clock):
