@@ -110,7 +110,7 @@ def test_a_narrow_band_of_decisions_is_seen():
             np.testing.assert_array_equal(np.flatnonzero(np.diff(truth)) + 0.5, walk.edges[q, h])
 
 
-@settings(max_examples=3, suppress_health_check=list(HealthCheck))
+@settings(max_examples=2, suppress_health_check=list(HealthCheck))
 @given(data=st.data())
 def test_a_moved_limit_of_two_copies_is_wrong_or_within_the_bound(data):
     """For several capacitors: a test moved by more than the bound is never taken for grey."""

@@ -47,6 +47,7 @@ def test_the_report_charts_it(fan):
     assert len(re.findall("<[^>]*>Counterexample: a press sequence", job.files["report.html"])) >= 1
 
 
+@pytest.mark.long
 def test_no_counterexample_no_chart():
     """A port that is the same gets no such chart."""
     assert "Counterexample: a press" not in build_job(right("kiln_vent").circuit).files["report.html"]

@@ -88,7 +88,6 @@ QUICK_PORTS = {
     "wrong polarity": {"kiln_vent"},
     "one answer wrong": {"kiln_vent"},
     "waits for 5 ticks of a press": {"kiln_vent"},
-    "clock 8 times slow": {"aquarium_light"},
     "one re-arm time for both directions": {"uneven"},
 }
 
@@ -99,7 +98,7 @@ def marked(wrong: Wrong, quick: set[str]) -> object:
 
 
 @pytest.mark.parametrize(
-    "wrong", [marked(w, QUICK.get(w.fault, {"aquarium_light", "soap_dose"})) for w in wrong_machines()]
+    "wrong", [marked(w, QUICK.get(w.fault, {"aquarium_light"})) for w in wrong_machines()]
 )
 def test_a_wrong_machine_is_refuted(wrong):
     """Machines that no port could be leave the family's bands."""
