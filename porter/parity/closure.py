@@ -27,7 +27,8 @@ from numpy.typing import NDArray
 from porter.circuit.engine import Ints, Mask
 from porter.circuit.values import Floats
 from porter.parity.model import Closure
-from porter.parity.twin import circuit_decides, circuit_moves
+from porter.parity.twin import circuit_moves
+from porter.port.decisions import GRID, decisions, sides, spread_out
 from porter.port.memory import Memory, settled_mode
 from porter.port.model import U16, Charge, Port, State
 from porter.port.step import move_copies
@@ -43,8 +44,8 @@ class Walk:
     Args:
         closure: the numbers; bound: E in copies (0 where nothing is carried).
         edges: per (q, held) the copies at which the circuit's decision changes.
-        refuted: (q, copy, held) of a reachable state that decides differently, None = none.
-        path: held masks per tick that lead there, the deciding one last.
+        path: held masks per tick that lead to a reachable state that decides differently, the
+            deciding one last, None = there is none.
     """
 
     closure: Closure
@@ -179,7 +180,8 @@ class _Table:
                 after, _ = step(state, np.full(_COPIES, h, np.int64))
                 self.decided[q, h] = after.q
                 self.next_q[q, h], self.next_x[q, h] = after.q, after.regs[:, 0]
-                self.truth[q, h], self.edges[q, h] = _decisions(mem, q, h)
+                self.truth[q, h] = decisions(mem, q, h)
+                self.edges[q, h] = np.asarray(np.flatnonzero(np.diff(self.truth[q, h])) + 0.5, np.float64)
 
     def reach(self) -> tuple[NDArray[np.bool_], NDArray[np.int64]]:
         """Mark the reachable states, shape (2, copies), with how each was first come to.
@@ -443,35 +445,6 @@ class _Table:
 
 #: A slope of a one-tick map from here up to one is taken for standing still.
 _STILL = 1e-9
-_GRID = np.unique(np.rint(np.linspace(0, U16, 258)).astype(np.int64))
-
-
-def _decisions(mem: Memory, q: int, h: int) -> tuple[Ints, Floats]:
-    """Return what the circuit decides at every copy, and between which copies that changes.
-
-    Decided on a grid; a stretch whose ends agree in every comparator with the latch at either
-    level, in the same mode, decides alike throughout, since every guard is affine there; the other
-    stretches are looked at copy by copy.
-    """
-    truth = np.empty(_COPIES, np.int64)
-    decided = circuit_decides(mem, q, h, _GRID[:, None]).q
-    sides = np.column_stack([_sides(mem, level, h, _GRID) for level in (q, 1 - q)])
-    alike = (sides[1:] == sides[:-1]).all(axis=1)
-    which = np.clip(np.searchsorted(_GRID, np.arange(_COPIES), side="right") - 1, 0, len(_GRID) - 2)
-    truth[:] = decided[which]
-    open_ = np.flatnonzero(~alike[which])
-    if len(open_):
-        truth[open_] = circuit_decides(mem, q, h, open_[:, None]).q
-    truth[_GRID] = decided
-    return truth, np.asarray(np.flatnonzero(np.diff(truth)) + 0.5, np.float64)
-
-
-def _sides(mem: Memory, q: int, h: int, copies: Ints) -> Ints:
-    """Return the conducting set and the comparators' signs with latch and buttons kept, shape (B, 4)."""
-    lanes = mem.lanes(q, h, copies[:, None])
-    mem.engine.resolve(lanes, frozen=True)
-    signs = np.sign(mem.engine.guards(lanes)).astype(np.int64)
-    return np.column_stack([lanes.conducts, signs])
 
 
 def _one_tick(mem: Memory, q: int, h: int, tick_s: float, frozen: bool = False) -> tuple[Floats, Ints]:
@@ -484,20 +457,19 @@ def _one_tick(mem: Memory, q: int, h: int, tick_s: float, frozen: bool = False) 
     Args:
         frozen: let no comparator act.
     """
-    lanes = mem.lanes(q, h, _GRID[:, None])
-    first = _sides(mem, q, h, _GRID)[:, : 1 if frozen else 4]
-    calm = np.ones(len(_GRID), bool)
+    lanes = mem.lanes(q, h, GRID[:, None])
+    first = sides(mem, q, h, GRID)[:, : 1 if frozen else 4]
+    calm = np.ones(len(GRID), bool)
 
     def watch(rows: Ints, _: object, __: object, at: Floats, length: Floats) -> None:
         calm[rows] &= (at == 0) & (length >= tick_s)
 
     mem.engine.run(lanes, tick_s, frozen=frozen, watcher=watch)
     ends = mem.copies(lanes.x)[:, 0]
-    true = np.interp(np.arange(_COPIES), _GRID, ends)
+    true = np.interp(np.arange(_COPIES), GRID, ends)
     flips = np.zeros(_COPIES, np.int64)
     quiet = calm[1:] & calm[:-1] & (first[1:] == first[:-1]).all(axis=1)
-    which = np.clip(np.searchsorted(_GRID, np.arange(_COPIES), side="right") - 1, 0, len(_GRID) - 2)
-    open_ = np.flatnonzero(~quiet[which])
+    _, open_ = spread_out(GRID, quiet)
     if len(open_):
         single = mem.lanes(q, h, open_[:, None])
         mem.engine.run(single, tick_s, frozen=frozen)

@@ -1,15 +1,15 @@
 """The charge style: an integer copy of each capacitor that matters, moved by the exact one-tick solution."""
 
-from collections.abc import Iterator, Sequence
+from collections.abc import Sequence
 from dataclasses import replace
 from itertools import pairwise
 
 import numpy as np
-from numpy.typing import NDArray
 
-from porter.circuit.engine import Engine, Ints
+from porter.circuit.engine import Engine
 from porter.circuit.network import Mode
 from porter.circuit.values import Floats
+from porter.port.decisions import decisions
 from porter.port.ease import Eased, Flow, distinct, ease, said
 from porter.port.memory import Memory, settled_mode
 from porter.port.model import U16, Charge, ChargeMode, Constant, Move, Test
@@ -240,18 +240,11 @@ def _one_way(
     return "both"
 
 
-def flips_at(mem: Memory, q: int, held: int, copies: NDArray[np.integer]) -> NDArray[np.bool_]:
-    """Return whether the circuit's latch leaves q at this instant, for copies of shape (B, kept)."""
-    lanes = mem.lanes(q, held, copies)
-    mem.engine.resolve(lanes)
-    return np.asarray(lanes.q != q)
-
-
 def _line_tests(
     mem: Memory, q: int, held: int
 ) -> tuple[tuple[Test, ...], tuple[Test, ...], tuple[Test, ...]]:
     """Find where along the copy's range the latch flips: force, flips, blocks."""
-    spans = list(_flip_spans(mem, q, held))
+    spans = _flip_spans(mem, q, held)
     if not spans:
         return (), (), ()
     if spans[0] == (0, U16):
@@ -264,26 +257,11 @@ def _line_tests(
     return tuple(flips) if inner else (), () if inner else tuple(flips), ()
 
 
-def _flip_spans(mem: Memory, q: int, held: int, points: int = 257) -> Iterator[tuple[int, int]]:
-    grid = np.unique(np.rint(np.linspace(0, U16, points)).astype(np.int64))
-    on = flips_at(mem, q, held, grid[:, None])
-    start = 0 if on[0] else None
-    for i in np.flatnonzero(on[1:] != on[:-1]):
-        edge = _edge(mem, q, held, int(grid[i]), int(grid[i + 1]), bool(on[i]))
-        if on[i]:
-            assert start is not None
-            yield start, edge - 1
-            start = None
-        else:
-            start = edge
-    if start is not None:
-        yield start, U16
-
-
-def _edge(mem: Memory, q: int, held: int, a: int, b: int, first: bool) -> int:
-    """Return the first copy in (a, b] that decides differently from a."""
-    inside = np.arange(a + 1, b + 1)
-    return int(inside[np.argmax(flips_at(mem, q, held, inside[:, None]) != first)])
+def _flip_spans(mem: Memory, q: int, held: int) -> list[tuple[int, int]]:
+    """Return the stretches of copies, first to last, from which the circuit's latch leaves q."""
+    on = np.concatenate([[False], decisions(mem, q, held) != q, [False]])
+    turns = np.flatnonzero(on[1:] != on[:-1])
+    return [(int(a), int(b) - 1) for a, b in turns.reshape(-1, 2)]
 
 
 def _plane_tests(
@@ -322,8 +300,3 @@ def _tests(half: tuple[Floats, float], below: bool) -> tuple[Test, ...]:
     coeff = np.rint(row * factor).astype(np.int64)
     limit = int(np.floor(-const * factor)) + 1
     return (Test(tuple(int(c) for c in coeff), True, limit),)
-
-
-def as_ints(values: Floats) -> Ints:
-    """Round to whole numbers."""
-    return np.rint(values).astype(np.int64)
