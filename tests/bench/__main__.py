@@ -311,7 +311,8 @@ def _by_depth() -> Iterator[Row]:
 
 def compiled() -> Iterator[Row]:
     """Every sequence of two buttons against the emitted C as compiled, beside a solver's bounded check."""
-    from tests.bench.enumerate_c import (
+    # Needs a C compiler and z3, which the other parts do without.
+    from tests.bench.enumerate_c import CORES, DEPTH, rows
         CORES,
         DEPTH,
         rows,
