@@ -313,10 +313,6 @@ def compiled() -> Iterator[Row]:
     """Every sequence of two buttons against the emitted C as compiled, beside a solver's bounded check."""
     # Needs a C compiler and z3, which the other parts do without.
     from tests.bench.enumerate_c import CORES, DEPTH, rows
-        CORES,
-        DEPTH,
-        rows,
-    )  # needs a C compiler and z3, which the rest doesn't
 
     for depth, sequences, literal, solver in rows()[1:-1]:
         aimed = depth == str(DEPTH)
